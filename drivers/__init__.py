@@ -1,0 +1,1 @@
+"""What stands on the bench: the probe's line, its serial port, and a bench in software."""

@@ -1,0 +1,1 @@
+"""stillbrine's core: from log text to findings, and the programs around it."""
