@@ -1,0 +1,1 @@
+"""From rows to seconds, and from rows to the trace on the screen."""
