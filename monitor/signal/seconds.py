@@ -1,7 +1,7 @@
 """Rows and events into whole seconds.
 
 Rules (they make every result independent of how the rows were cut):
-- A line (row or event) whose time is k + 1 or more closes second k and the empty ones up to its own.
+- A line (row or event) of time k + 1 or more closes second k and the empty ones up to its own.
 - An event belongs to the second in which it is met, however old its time.
 - A row of a second already closed goes back: dropped and counted.
 - Every figure of a Second comes from its whole rows and from earlier seconds, never from a batch.
