@@ -1,0 +1,40 @@
+"""The command line: names of the commands and what becomes of their refusals.
+
+Exit codes: 0 done; 1 it ran and the answer is a refusal or a failed check; 2 the command or a file
+is wrong. Either way one line on standard error, never a traceback.
+"""
+
+from __future__ import annotations
+
+import sys
+
+import typer
+
+from monitor.commands import Refusal, Wrong, replay
+
+app = typer.Typer(
+    name="stillbrine",
+    help="Has the tank come to rest, where, with how much doubt, and can the probe be believed?",
+    no_args_is_help=True,
+    rich_markup_mode=None,
+    pretty_exceptions_enable=False,
+    context_settings={"help_option_names": ["-h", "--help"]},
+)
+app.command("replay")(replay.command)
+
+
+def main() -> None:
+    """Run the command line; the entry point of `stillbrine`."""
+    try:
+        app(standalone_mode=True)
+    except Refusal as refusal:
+        _say(refusal, 1)
+    except Wrong as wrong:
+        _say(wrong, 2)
+    except BrokenPipeError:
+        sys.exit(0)
+
+
+def _say(said: Exception, code: int) -> None:
+    print(f"stillbrine: {said}", file=sys.stderr)
+    sys.exit(code)
