@@ -1,0 +1,130 @@
+"""A change under way: one dose, or a disturbance nobody recorded, from its start to rest."""
+
+from __future__ import annotations
+
+import math
+from collections import deque
+from collections.abc import Iterable
+from dataclasses import dataclass
+
+from monitor.dosing.ledger import Dose
+from monitor.settling.fit import FEWEST, Fit
+from monitor.settling.history import Bin, Still
+from monitor.settling.models import SETTLE_S
+from monitor.settling.rest import NEEDED, Expected, Judgement, judge
+
+LEDGER_ODDS = 20.0  # for the recorded dose, against anything else having gone in
+LEDGER_ERROR = 5e-4  # of the step: what the mass balance leaves out
+SOONEST = 6  # readings before rest may be called
+NEAR_BANDS = 1.2  # the filtered value has to stay this near to the landing
+NEAR_S, NEAR_ALONE_S = 8, 30  # for so long, with the ledger and without it
+UNLIKELY = 0.3  # below this chance of rest every third reading is judged
+SHORTEST_S = 0.5  # a dose poured at once
+
+
+@dataclass(frozen=True)
+class Change:
+    """What set the tank in motion, and from where."""
+
+    from_t: float
+    open_s: float
+    still: Still  # the water before; of a dose overtaken: where that would have landed
+    dose: Dose | None = None
+    ledger: bool = True  # the dose's mass balance counts
+    extra_pct: float = 0.0  # how far from rest the tank was when this began
+    size_pct: float = 0.0  # least size of the step, where the ledger does not tell
+
+    @property
+    def predicted(self) -> tuple[float, float] | None:
+        """Where the mass balance lands: salinity and its standard doubt."""
+        if self.dose is None or not self.ledger:
+            return None
+        landing, u = self.dose.landing(self.still.level_pct, self.still.u_pct)
+        return (landing, u) if math.isfinite(landing) and math.isfinite(u) else None
+
+
+class Mixing:
+    """Follows one change. Times are seconds of the run, the fit's x counts from `start_t`."""
+
+    def __init__(self, change: Change, band_pct: float) -> None:
+        self.change = change
+        self.band = band_pct
+        self.start_t = change.from_t + change.open_s + SETTLE_S
+        self.predicted = change.predicted
+        self.step_pct = 0.0
+        self.expected: tuple[Expected, ...] = ()
+        if self.predicted is not None:
+            self.step_pct = self.predicted[0] - change.still.level_pct
+            sd = math.hypot(self.predicted[1], LEDGER_ERROR * self.step_pct)
+            self.expected = (Expected(self.step_pct, sd, LEDGER_ODDS),)
+        self.scale = max(3.0 * band_pct, abs(self.step_pct), change.size_pct)
+        self.fit: Fit | None = None
+        self.judgement: Judgement | None = None
+        self.filtered: deque[tuple[int, float]] = deque(maxlen=NEAR_ALONE_S + 1)
+        self.ready = 0  # judgements in a row that say rest
+
+    def follow(self, k: int, salinity_pct: float, filtered_pct: float) -> bool:
+        """Take in the second k; False if its reading is a stray one, to be left out everywhere."""
+        x = k + 0.5 - self.start_t
+        if x < 0.0:
+            self.filtered.append((k, filtered_pct))
+            return True
+        if self.fit is None:
+            change = self.change
+            self.fit = Fit(change.open_s, self.scale, change.extra_pct, change.still.floor_var)
+        if not self.fit.add(x, salinity_pct - self.change.still.level_pct):
+            return False
+        self.filtered.append((k, filtered_pct))
+        n = self.fit.n
+        doubtful = self.judgement is None or self.judgement.p_rest <= UNLIKELY
+        if n >= FEWEST and (not doubtful or n % 3 == 0):
+            self._judge(k)
+        return True
+
+    def catch_up(self, bins: Iterable[Bin]) -> None:
+        """Follow readings that were taken before the change was known."""
+        for k, salinity_pct, filtered_pct, _, _ in bins:
+            self.follow(k, salinity_pct, filtered_pct)
+
+    @property
+    def rests(self) -> bool:
+        """Whether rest can be declared."""
+        return self.ready >= NEEDED
+
+    def landing(self) -> tuple[float, float]:
+        """Where it will land as things stand: salinity and standard deviation."""
+        level = self.change.still.level_pct
+        if self.judgement is not None:
+            step, sd = self.judgement.landing
+            return level + step, sd
+        if self.predicted is not None:
+            return self.predicted[0], self.expected[0].sd_pct
+        return math.nan, math.nan
+
+    def foreseen(self) -> tuple[float, float]:
+        """Where a next dose has to take it to have been heading: salinity and its doubt."""
+        if self.predicted is not None and (self.judgement is None or self.judgement.p_told >= 0.5):
+            return self.predicted[0], self.predicted[1]
+        return self.landing()
+
+    def _judge(self, k: int) -> None:
+        assert self.fit is not None
+        self.judgement = judge(self.fit.models(), self.expected, self.scale, self.band)
+        self.ready = self.ready + 1 if self._says_rest(self.judgement, k) else 0
+
+    def _says_rest(self, said: Judgement, k: int) -> bool:
+        assert self.fit is not None
+        if self.fit.n < SOONEST:
+            return False
+        if said.p_told > 0.5:
+            sure = said.p_rest > 0.93 and said.p_rest_free > 0.15
+            return sure and self._stayed(said.landing[0], k, NEAR_S)
+        return said.p_rest_free > 0.8 and self._stayed(said.landing_free[0], k, NEAR_ALONE_S)
+
+    def _stayed(self, step_pct: float, k: int, for_s: int) -> bool:
+        """Whether the filtered value was near the landing for so long."""
+        landing = self.change.still.level_pct + step_pct
+        bound = NEAR_BANDS * self.band
+        if self.filtered[0][0] > k - for_s and len(self.filtered) < self.filtered.maxlen:
+            return False
+        return all(abs(f - landing) <= bound for at, f in self.filtered if at > k - for_s)
