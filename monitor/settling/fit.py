@@ -49,7 +49,8 @@ class Models:
 
     def remaining(self, x: Floats) -> Floats:
         """Mean of what is still to come at the times x (K, 1): (K, H)."""
-        return np.einsum("ikh,ih->kh", self.bank.shapes(x), self.c[1:])
+        left: Floats = np.einsum("ikh,ih->kh", self.bank.shapes(x), self.c[1:])
+        return left
 
     def observed(self, row: Floats, value: float, var: float) -> Models:
         """The same models after one more observation, row . c = value +- sqrt(var)."""

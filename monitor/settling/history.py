@@ -96,7 +96,7 @@ class History:
         for known_t, from_t in self.starts:
             if known_t <= before_t:
                 began = from_t
-        quiet = []
+        quiet: list[Bin] = []
         for reading in reversed(self.bins):
             if reading[0] + 1 > before_t:
                 continue

@@ -20,6 +20,7 @@ NEAR_BANDS = 1.2  # the filtered value has to stay this near to the landing
 NEAR_S, NEAR_ALONE_S = 8, 30  # for so long, with the ledger and without it
 UNLIKELY = 0.3  # below this chance of rest every third reading is judged
 SHORTEST_S = 0.5  # a dose poured at once
+UNKNOWN_BANDS = 10.0  # size of a change that nothing tells anything about
 
 
 @dataclass(frozen=True)
@@ -50,6 +51,7 @@ class Mixing:
         self.change = change
         self.band = band_pct
         self.start_t = change.from_t + change.open_s + SETTLE_S
+        self.level_pct = change.still.level_pct  # what the fit counts from; NaN until a reading
         self.predicted = change.predicted
         self.step_pct = 0.0
         self.expected: tuple[Expected, ...] = ()
@@ -58,6 +60,9 @@ class Mixing:
             sd = math.hypot(self.predicted[1], LEDGER_ERROR * self.step_pct)
             self.expected = (Expected(self.step_pct, sd, LEDGER_ODDS),)
         self.scale = max(3.0 * band_pct, abs(self.step_pct), change.size_pct)
+        self.extra = change.extra_pct
+        if self.level_pct != self.level_pct:
+            self.scale = self.extra = UNKNOWN_BANDS * band_pct
         self.fit: Fit | None = None
         self.judgement: Judgement | None = None
         self.filtered: deque[tuple[int, float]] = deque(maxlen=NEAR_ALONE_S + 1)
@@ -70,9 +75,8 @@ class Mixing:
             self.filtered.append((k, filtered_pct))
             return True
         if self.fit is None:
-            change = self.change
-            self.fit = Fit(change.open_s, self.scale, change.extra_pct, change.still.floor_var)
-        if not self.fit.add(x, salinity_pct - self.change.still.level_pct):
+            self.fit = self._fit(salinity_pct)
+        if not self.fit.add(x, salinity_pct - self.level_pct):
             return False
         self.filtered.append((k, filtered_pct))
         n = self.fit.n
@@ -93,10 +97,9 @@ class Mixing:
 
     def landing(self) -> tuple[float, float]:
         """Where it will land as things stand: salinity and standard deviation."""
-        level = self.change.still.level_pct
         if self.judgement is not None:
             step, sd = self.judgement.landing
-            return level + step, sd
+            return self.level_pct + step, sd
         if self.predicted is not None:
             return self.predicted[0], self.expected[0].sd_pct
         return math.nan, math.nan
@@ -106,6 +109,18 @@ class Mixing:
         if self.predicted is not None and (self.judgement is None or self.judgement.p_told >= 0.5):
             return self.predicted[0], self.predicted[1]
         return self.landing()
+
+    def went_on(self, times: float, fewest: int) -> bool:
+        """Whether the readings scatter so much that what began the change goes on."""
+        fit = self.fit
+        return fit is not None and fit.n >= fewest and fit.s2 > times
+
+    def _fit(self, salinity_pct: float) -> Fit:
+        still = self.change.still
+        if self.level_pct != self.level_pct:
+            self.level_pct = salinity_pct
+            still = Still(salinity_pct, 5e-4 * salinity_pct, 0.0, math.nan, math.nan)
+        return Fit(self.change.open_s, self.scale, self.extra, still.floor_var)
 
     def _judge(self, k: int) -> None:
         assert self.fit is not None
@@ -123,8 +138,8 @@ class Mixing:
 
     def _stayed(self, step_pct: float, k: int, for_s: int) -> bool:
         """Whether the filtered value was near the landing for so long."""
-        landing = self.change.still.level_pct + step_pct
+        landing = self.level_pct + step_pct
         bound = NEAR_BANDS * self.band
-        if self.filtered[0][0] > k - for_s and len(self.filtered) < self.filtered.maxlen:
+        if self.filtered[0][0] > k - for_s and len(self.filtered) <= NEAR_ALONE_S:
             return False
         return all(abs(f - landing) <= bound for at, f in self.filtered if at > k - for_s)

@@ -89,10 +89,13 @@ class Bank:
 
     def _left(self, open_s: float) -> NDArray[np.complex128]:
         """What a dose of open_s that began to act DELAY_S late leaves of each shape at x = 0."""
-        q = self.rates.astype(complex)
+        q: NDArray[np.complex128] = self.rates.astype(np.complex128)
         q[0] += 1j * self.omega
         late = SETTLE_S - DELAY_S
-        return np.exp(-late * q) * (1.0 - np.exp(-q * open_s)) / (q * open_s)
+        left: NDArray[np.complex128] = (
+            np.exp(-late * q) * (1.0 - np.exp(-q * open_s)) / (q * open_s)
+        )
+        return left
 
 
 def _squared(vector: Floats, sd: Floats | float) -> Floats:
@@ -104,8 +107,8 @@ def _squared(vector: Floats, sd: Floats | float) -> Floats:
 @cache
 def bank() -> Bank:
     """The whole bank: 38 shapes at two levels of turbulence."""
-    rows = [*_singles(), *_loops(), *_plumes()]
-    rows = [(*row, level) for level in LEVELS for row in rows]
+    shapes = [*_singles(), *_loops(), *_plumes()]
+    rows = [(*shape, level) for level in LEVELS for shape in shapes]
     kind, tau, rates, omega, phase, flat, slope, ahead, level = map(np.array, zip(*rows))
     count = np.bincount(kind)[kind]
     return Bank(
@@ -114,19 +117,21 @@ def bank() -> Bank:
     )  # fmt: skip
 
 
+# kind, tau, rates, omega, phase, flat, slope, ahead
 _Row = tuple[int, float, tuple[float, ...], float, float, float, float, tuple[float, ...]]
 
 
 def _singles() -> list[_Row]:
-    return [
-        (SINGLE, tau, (1 / tau, 1 / tau, 0.4 / tau, 1 / (7 * tau)), 0.0, 0.0, 1.0, 0.0, _ahead(tau))
-        for tau in np.geomspace(3.0, 90.0, 14)
-    ]
+    rows: list[_Row] = []
+    for tau in np.geomspace(3.0, 90.0, 14).tolist():
+        rates = (1 / tau, 1 / tau, 0.4 / tau, 1 / (7 * tau))
+        rows.append((SINGLE, tau, rates, 0.0, 0.0, 1.0, 0.0, _ahead(tau)))
+    return rows
 
 
 def _loops() -> list[_Row]:
     rows: list[_Row] = []
-    for tau in np.geomspace(3.0, 75.0, 6):
+    for tau in np.geomspace(3.0, 75.0, 6).tolist():
         rates = (1 / tau, 1 / tau, 0.4 / tau, 1 / (7 * tau))
         for ratio in (0.7, 1.2, 2.0):
             turn = ratio * tau
@@ -137,7 +142,7 @@ def _loops() -> list[_Row]:
 
 def _plumes() -> list[_Row]:
     rows: list[_Row] = []
-    for tau in np.geomspace(3.0, 75.0, 6):
+    for tau in np.geomspace(3.0, 75.0, 6).tolist():
         p = tau / 4
         rates = (1 / tau, 1 / p, 1 / p, 0.2 / tau)
         rows.append((PLUME, tau, rates, 0.0, math.pi / 2, 0.0, 1 / p, _ahead(tau)))

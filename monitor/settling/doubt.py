@@ -1,0 +1,47 @@
+"""Standard doubts of a salinity and of a step: calibration, temperature, the probe's trust."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+
+from monitor.blocks import Floats
+from monitor.calibration import Calibration
+from monitor.settling.history import Bin, Still
+
+NO_THERMOMETER_U_C = 1.0  # of the water's temperature, where nothing measures it
+
+
+class Doubt:
+    """What the calibration says about readings, with and without a thermometer."""
+
+    def __init__(self, calibration: Calibration, temp_u_c: float, temp_c: float | None) -> None:
+        """`temp_c`: taken where there is no thermometer; the standards' mean if None."""
+        self.calibration = calibration
+        self.temp_u_c = temp_u_c
+        self.temp_c = calibration.temp_c if temp_c is None else temp_c
+
+    def salinity_pct(self, period_us: Floats, temp_c: Floats) -> Floats:
+        """Salinities of readings, (n,)."""
+        known_c = np.where(np.isnan(temp_c), self.temp_c, temp_c)
+        return self.calibration.salinity_pct(period_us, known_c)
+
+    def level_pct(self, reading: Bin, sd_pct: float, widen: float) -> float:
+        """Standard doubt of a salinity near the reading, of its own sd; `widen` is relative."""
+        _, salinity_pct, _, period_us, temp_c = reading
+        u = self.calibration.u_pct(period_us, *self._temperature(temp_c))
+        return math.sqrt(sd_pct**2 + u**2 + (widen * salinity_pct) ** 2)
+
+    def step_pct(self, still: Still, after: list[Bin]) -> float:
+        """Standard doubt of the step from still water to the readings after it."""
+        to_us = sum(reading[3] for reading in after) / len(after)
+        to_c = sum(reading[4] for reading in after) / len(after)
+        to_c, temp_u_c = self._temperature(to_c)
+        from_c, _ = self._temperature(still.temp_c)
+        return self.calibration.u_step_pct(still.period_us, from_c, to_us, to_c, temp_u_c)
+
+    def _temperature(self, temp_c: float) -> tuple[float, float]:
+        if temp_c == temp_c:
+            return temp_c, self.temp_u_c
+        return self.temp_c, max(self.temp_u_c, NO_THERMOMETER_U_C)
