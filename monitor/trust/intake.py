@@ -1,0 +1,145 @@
+"""From seconds to minutes that only a slow change can have moved.
+
+Rules:
+- Seconds count while the level is sure, the probe is in the tank, and no dose, recorded water or
+  unrecorded step is under 15 min old. Each of these begins a new segment.
+- A level found again more than 1.5 % from where it was lost has stepped, a dose apart.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from typing import NamedTuple, Protocol
+
+from monitor import bench
+from monitor.blocks import NAN, Second
+from monitor.dosing.ledger import Change, Dose, Struck
+from monitor.trust.measures import hampel_mean
+from monitor.trust.minutes import Minutes
+
+LEAST_S = 20  # sure seconds a minute
+SETTLE_S = 900  # after a dose or step nothing is called slow
+STEP = 0.015  # ln
+POWER = 0.95  # period above the circuit's own goes as salinity^-0.95 (fits PSS-78 and NaCl to 2 %)
+
+
+class Levelled(Protocol):
+    """What is asked of the level's judge."""
+
+    locked: bool
+    in_gate_ln: float
+    m: float
+    noise: float
+    tick_us: float
+
+
+class Jump(NamedTuple):
+    """The level was lost and found again elsewhere, and no dose explains it."""
+
+    lost_t: float
+    step: float  # ln
+
+
+class Intake:
+    """Gathers one probe's minutes."""
+
+    def __init__(self, settings: bench.Probe) -> None:
+        self.minutes = Minutes()
+        self.segment = 0
+        self.slope = 0.0  # ln an hour, expected to go on while nothing is taken
+        self.jump: Jump | None = None  # met in this second
+        self.floor_us = floor_us(settings.standards_in_force)
+        self._quiet_k = 0
+        self._out = self._locked = False
+        self._left: tuple[float, float, float] | None = None  # time, level, temperature
+        self._levels: list[float] = []
+        self._salinities: list[float] = []
+        self._warmth = 0.0
+
+    def step(self, second: Second, level: Levelled, changes: Sequence[Change]) -> bool:
+        """One closed second; True when it closed a minute that counts."""
+        for change in changes:
+            if not isinstance(change, Struck):
+                end_t = change.end_s if isinstance(change, Dose) else 0.0
+                self.pause(max(end_t, second.t))
+        for event in second.events:
+            if event.kind in ("out", "back"):
+                self._out = event.kind == "out"
+        locked = level.locked and not self._out
+        if locked is not self._locked:
+            self._turned(second, level, locked)
+        ln_us = level.in_gate_ln
+        if locked and ln_us == ln_us and second.k >= self._quiet_k:
+            self._levels.append(ln_us)
+            self._salinities.append(second.salinity_pct)
+            self._warmth += second.temp_used_c
+        return second.k % 60 == 59 and len(self._levels) > 0 and self._minute(second.t)
+
+    def pause(self, t: float) -> None:
+        """Take nothing up until 15 min after t; what comes then is a new segment."""
+        self._quiet_k = max(self._quiet_k, int(t) + SETTLE_S)
+        self.segment += 1
+        self._begin_minute()
+
+    def begin_anew(self, t: float) -> None:
+        """Nothing before t tells of what comes."""
+        self.segment += 1
+        self.minutes.forget(t)
+
+    def _begin_minute(self) -> None:
+        self._levels.clear()
+        self._salinities.clear()
+        self._warmth = 0.0
+
+    def _turned(self, second: Second, level: Levelled, locked: bool) -> None:
+        """The level is lost, or found again: where?"""
+        self._locked = locked
+        if not locked:
+            if self._left is None:
+                self._left = second.t, level.m, second.temp_used_c
+            return
+        left, self._left = self._left, None
+        if left is None or second.k < self._quiet_k:  # a dose may have moved it anywhere
+            return
+        lost_t, before, temp_c = left
+        step = self._level(level.m, second.temp_used_c) - self._level(before, temp_c)
+        self.jump = Jump(lost_t, step)
+        if abs(step) > STEP:
+            self.pause(second.t)
+
+    def _level(self, ln_us: float, temp_c: float) -> float:
+        """ln of the period above the circuit's own, at 25 C where there is a thermometer."""
+        level = math.log(max(math.exp(ln_us) - self.floor_us, 1.0))
+        if temp_c == temp_c:
+            off = temp_c - 25.0
+            level += 0.98 * math.log(1.0 + 0.02048 * off + 6.91e-5 * off * off)
+        return level
+
+    def _minute(self, t: float) -> bool:
+        n = len(self._levels)
+        if n >= LEAST_S:
+            temp_c = self._warmth / n
+            level = self._level(hampel_mean(self._levels), temp_c)
+            known = sum(self._salinities) == sum(self._salinities)
+            salinity = hampel_mean(self._salinities) if known else NAN
+            self.minutes.add(t, level, temp_c, salinity, self.segment, self.slope)
+        self._begin_minute()
+        return n >= LEAST_S
+
+
+def floor_us(standards: Sequence[bench.Standard]) -> float:
+    """Period of the circuit alone: intercept of the standards' periods on salinity^-0.95.
+
+    Between 2 us and 0.3 of the shortest period; 0 with fewer than two different salinities.
+    """
+    rows = [(s.salinity_pct**-POWER, s.period_us) for s in standards if s.salinity_pct > 0.0]
+    n = len(rows)
+    if n < 2:
+        return 0.0
+    x0, p0 = (sum(row[i] for row in rows) / n for i in (0, 1))
+    xx = sum((x - x0) ** 2 for x, _ in rows)
+    if xx <= 0.0:
+        return 0.0
+    slope = sum((x - x0) * (p - p0) for x, p in rows) / xx
+    return min(max(p0 - slope * x0, 2.0), 0.3 * min(p for _, p in rows))

@@ -1,0 +1,248 @@
+"""Limits: outside the band that is aimed at, or changing faster than is allowed.
+
+Rules:
+- `high` and `low` begin after 10 s beyond the bound and end after 30 s back inside by the doubt of
+  the reading or 2 % of the band, whichever is more.
+- `fast` is judged every half minute on the last ten half minutes: it begins when the slope's 95 %
+  confidence limit is beyond the bound, and ends when the slope is below 0.8 of it.
+- Nothing begins, and nothing ends, while the probe is out or not believed. A doubtful probe's
+  findings are marked.
+- While a recorded dose settles, what it was expected to do (up: `high`, rising; down: `low`,
+  falling) begins nothing.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any, NamedTuple, Protocol
+
+from monitor import bench
+from monitor.blocks import NAN, Second
+from monitor.findings import Finding
+from monitor.trust.measures import theil_sen
+
+BEGIN_S, END_S = 10, 30
+OF_BAND = 0.02
+SMOOTH = 0.2  # of a second in the salinity that is held against the band
+HALF_S = 30
+HALVES = 10  # half minutes a slope is drawn through
+LEAST_SECONDS = 15  # of a half minute
+SLOWER = 0.8
+
+
+class Suggestion(NamedTuple):
+    """A rule of husbandry that may serve as a first limit; the keeper must confirm it."""
+
+    kept: str
+    which: str  # high, low or fast
+    value: float  # % by mass, fast: % by mass an hour
+    source: str
+    confidence: str
+
+
+SUGGESTIONS = (
+    Suggestion(
+        "fish in general",
+        "fast",
+        0.1,
+        "not more than 1 ppt/h: Indian Agricultural Statistics Research Institute, Fish health, "
+        "Improper salinity (2011)",
+        "medium: one teaching source, rule of thumb",
+    ),
+    Suggestion(
+        "fish in general, early warning",
+        "fast",
+        0.05,
+        "half of the 1 ppt/h rule",
+        "derived",
+    ),
+    Suggestion(
+        "fresh water",
+        "high",
+        0.05,
+        "0.5 ppt bounds fresh water: same course (2011)",
+        "medium",
+    ),
+    Suggestion(
+        "zebrafish, adult, laboratory",
+        "low",
+        0.025,
+        "0.25 to 0.75 ppt: humane-endpoints.info, ZebraVis, Physical factors in the environment",
+        "medium: the same page's 250 to 600 uS/cm is only 0.12 to 0.29 ppt at 25 C",
+    ),
+    Suggestion(
+        "zebrafish, adult, laboratory",
+        "high",
+        0.075,
+        "0.25 to 0.75 ppt: humane-endpoints.info, ZebraVis, Physical factors in the environment",
+        "medium: the same page's 250 to 600 uS/cm is only 0.12 to 0.29 ppt at 25 C",
+    ),
+    Suggestion(
+        "fresh-water fish, lasting salt treatment",
+        "low",
+        0.1,
+        "1 to 3 g/L supportive treatment: common veterinary rule, from memory",
+        "low",
+    ),
+    Suggestion(
+        "fresh-water fish, lasting salt treatment",
+        "high",
+        0.3,
+        "1 to 3 g/L supportive treatment: common veterinary rule, from memory",
+        "low",
+    ),
+    Suggestion(
+        "whiteleg shrimp, low salinity",
+        "low",
+        0.15,
+        "over 85 % of post-larvae live above 1.5 ppt: Jayasankar et al., JARQ 43(4), 345 (2009)",
+        "high",
+    ),
+    Suggestion(
+        "any short bath",
+        "high",
+        3.0,
+        "30 ppt dip: Francis-Floyd, The Use of Salt in Aquaculture, UF/IFAS VM 86 (1995)",
+        "high",
+    ),
+)
+
+
+class Trust(Protocol):
+    """What is asked of the probe's judge."""
+
+    usable: bool
+    out: bool
+    belief: str
+
+
+class Settling(Protocol):
+    """What is asked of the rest's judge."""
+
+    heading: float
+
+
+class Limits:
+    """The limits of one tank, watched through one probe."""
+
+    def __init__(
+        self,
+        probe: str,
+        tank: str,
+        settings: bench.Tank,
+        carried: Mapping[str, Any] | None = None,
+    ) -> None:
+        self.probe, self.tank = probe, tank
+        self.said: dict[str, Finding] = {}  # in force, by which
+        self._idle = settings.aim_pct is None and settings.fastest_pct_per_h is None
+        self._low, self._high = settings.aim_pct or (-1.0, 1e9)
+        self._margin = OF_BAND * (self._high - self._low)
+        self._fastest = settings.fastest_pct_per_h
+        self._smooth = NAN
+        self._beyond = self._inside = 0  # seconds on end
+        self._halves: list[tuple[float, float, float]] = []  # time, salinity, heading
+        self._begin_half()
+        for finding in (carried or {}).get("said", ()):
+            self.said[finding["which"]] = dict(finding)
+
+    def step(
+        self, second: Second, u95_pct: float, trust: Trust, settling: Settling
+    ) -> list[Finding]:
+        """One closed second: limits passed, and kept again."""
+        if self._idle:
+            return []
+        salinity = second.salinity_pct
+        if trust.out or not trust.usable or trust.belief == "not-believed":
+            self._quiet()
+            return []
+        if salinity != salinity:
+            return []
+        smooth = self._smooth
+        self._smooth = smooth = (
+            salinity if smooth != smooth else smooth + SMOOTH * (salinity - smooth)
+        )
+        found: list[Finding] = []
+        if self.said or not self._low <= smooth <= self._high:
+            found = self._aim(second.t, u95_pct, trust, settling.heading)
+        else:
+            self._beyond = 0
+        if self._fastest is not None:
+            self._sum += salinity
+            self._n += 1
+            self._heading = settling.heading or self._heading
+            if second.k % HALF_S == HALF_S - 1:
+                found += self._speed(second.t, self._fastest, trust)
+        return found
+
+    def carry(self) -> dict[str, Any]:
+        """The limits in force."""
+        return {"said": list(self.said.values())}
+
+    def _quiet(self) -> None:
+        """What a bad or lifted probe reads counts for nothing, before and after."""
+        self._smooth = NAN
+        self._beyond = self._inside = 0
+        self._halves.clear()
+        self._begin_half()
+
+    def _begin_half(self) -> None:
+        self._sum, self._n, self._heading = 0.0, 0, 0.0
+
+    def _aim(self, t: float, u95_pct: float, trust: Trust, heading: float) -> list[Finding]:
+        """The smoothed salinity against the band, with hysteresis."""
+        found: list[Finding] = []
+        for which, over, away in (
+            ("high", self._smooth - self._high, 1.0),
+            ("low", self._low - self._smooth, -1.0),
+        ):
+            if which in self.said:
+                margin = max(self._margin, u95_pct if u95_pct == u95_pct else 0.0)
+                self._inside = self._inside + 1 if over < -margin else 0
+                if self._inside >= END_S:
+                    found.append(self._close(t, which))
+            elif over > 0.0:
+                self._beyond = self._beyond + 1
+                if self._beyond >= BEGIN_S and heading != away:
+                    bound = self._high if away > 0 else self._low
+                    found.append(self._say(t, t - self._beyond, which, self._smooth, bound, trust))
+        if self._low <= self._smooth <= self._high:
+            self._beyond = 0
+        return found
+
+    def _speed(self, t: float, fastest: float, trust: Trust) -> list[Finding]:
+        """The slope through the last half minutes against the fastest allowed."""
+        if self._n >= LEAST_SECONDS:
+            self._halves.append((t, self._sum / self._n, self._heading))
+            del self._halves[:-HALVES]
+        self._begin_half()
+        if len(self._halves) < HALVES:
+            return []
+        times, values, headings = zip(*self._halves)
+        slope, low, high = (3600.0 * each for each in theil_sen(times, values))
+        if "fast" in self.said:
+            return [self._close(t, "fast")] if abs(slope) < SLOWER * fastest else []
+        if max(low, -high) <= fastest or (1.0 if slope > 0 else -1.0) in headings:
+            return []
+        return [self._say(t, times[0] - HALF_S, "fast", abs(slope), fastest, trust)]
+
+    def _say(
+        self, t: float, from_t: float, which: str, value: float, bound: float, trust: Trust
+    ) -> Finding:
+        self._beyond = self._inside = 0
+        self.said[which] = {
+            "finding": "limit",
+            "probe": self.probe,
+            "tank": self.tank,
+            "t": t,
+            "from_t": from_t,
+            "to_t": None,
+            "which": which,
+            "value": value,
+            "bound": bound,
+            "doubtful": trust.belief == "doubtful",
+        }
+        return dict(self.said[which])
+
+    def _close(self, t: float, which: str) -> Finding:
+        self._inside = 0
+        return {**self.said.pop(which), "t": t, "to_t": t}
