@@ -14,19 +14,21 @@ from collections.abc import Callable, Iterable, Mapping
 from pathlib import Path
 from typing import IO, Any
 
-from drivers.line import Decoder
 from drivers.serial_port import SerialPort
+
+from drivers.line import Decoder
 from monitor import bench as bench_file
 from monitor.bench import Bench, BenchError
-from monitor.calibration import CalibrationError
+from monitor.calibration import CalibrationError, fit
 from monitor.chain import calibration_of
 from monitor.clock import Clock
 from monitor.control import Answer, ControlServer
 from monitor.findings import Finding, line
 from monitor.follow import Follower
 from monitor.logbook import reader
+from monitor.logbook.codec import utc_text
 from monitor.logbook.writer import LogWriter
-from monitor.orders import OrderError, parse
+from monitor.orders import Order, OrderError, parse
 from monitor.places import private_folder, socket_path
 from monitor.recorder import Head, Recorder
 from monitor.tanks import UNWATCHED_S, Unwatched
@@ -140,12 +142,13 @@ class Service:
     def _start_probe(self, probe: str) -> None:
         settings = _settings(self.bench, probe)
         writer = LogWriter(self.folder, probe, self.started, self._run)
-        follower = Follower(probe)
+        stamp = f"{self.started:%Y%m%dT%H%M%SZ}"
+        self._files[probe] = _append_only(self.folder / f"{probe}-{stamp}.findings.jsonl")
         recorder = Recorder(
             probe,
             Decoder(self.bench.probe[probe]),
             writer,
-            follower,
+            Follower(probe),
             self.clock,
             self.zero_s,
             lambda found: self._tell(probe, found),
@@ -158,6 +161,7 @@ class Service:
     def _stop_probe(self, probe: str) -> None:
         self._ports.pop(probe).cancel()
         self.recorders.pop(probe).end()
+        self._files.pop(probe).close()
 
     def _open_port(self, probe: str) -> None:
         settings = self.bench.probe[probe]
@@ -187,7 +191,7 @@ class Service:
         for chunk in reader.chunks(last.path):
             follower.feed(chunk)
         shift = (last.header.started - self.started).total_seconds()
-        return shifted(follower.chain.carry(), shift)
+        return shifted_times(follower.chain.carry(), shift)
 
     def _tell(self, probe: str, found: Iterable[Finding]) -> None:
         for finding in found:
@@ -281,3 +285,59 @@ class Service:
             fields = self._chosen(probe, str(fields.get("set", "")))
         when = None if order.ago_s == 0 else recorder.run_s - order.ago_s
         return recorder.event(order.kind, fields, when)
+
+    def _chosen(self, probe: str, named: str) -> Mapping[str, Any]:
+        """The calibration that a set of standards gives. Raises OrderError, CalibrationError."""
+        settings = self.bench.probe[probe]
+        standards = [each for each in settings.standard if each.set == named]
+        if not standards:
+            sets = ", ".join(sorted({each.set or "unnamed" for each in settings.standard}))
+            raise OrderError(f"set {named[:64]!r} is not in the bench file; expected one of {sets}")
+        return fit(standards, settings.medium, settings.tick_us).as_event()
+
+    def status(self, probe: str) -> dict[str, Any]:
+        """What a watcher may ask about one probe besides its log."""
+        recorder = self.recorders[probe]
+        return {
+            "path": str(recorder.writer.path),
+            "rows": recorder.rows,
+            "linked": recorder.linked,
+            "paused": recorder.paused,
+            "unwritten": recorder.unwritten,
+            "rejected": recorder.decoder.rejected_total,
+        }
+
+
+def _append_only(path: Path) -> IO[str]:
+    mode = os.O_WRONLY | os.O_APPEND | os.O_CREAT | os.O_NOFOLLOW
+    return os.fdopen(os.open(path, mode, 0o600), "w", encoding="ascii")
+
+
+def _settings(bench: Bench, probe: str) -> Head:
+    """The events at the head of a part. Raises CalibrationError."""
+    head: Head = [("bench", bench.for_probe(probe).as_event())]
+    calibration = calibration_of(bench, probe)
+    if calibration is not None:
+        head.append(("calibration", calibration.as_event()))
+    return head
+
+
+def shifted_times(carried: Any, by_s: float) -> Any:
+    """Carried state with its times counted from another run's `started`.
+
+    A key that holds a time is `t`, `time_s`, or ends in `_t`: the rule of every `carry`.
+    """
+    if isinstance(carried, dict):
+        return {
+            key: value + by_s
+            if _is_time(key) and isinstance(value, int | float) and not isinstance(value, bool)
+            else shifted_times(value, by_s)
+            for key, value in carried.items()
+        }
+    if isinstance(carried, list):
+        return [shifted_times(each, by_s) for each in carried]
+    return carried
+
+
+def _is_time(key: str) -> bool:
+    return key in ("t", "time_s") or key.endswith("_t")

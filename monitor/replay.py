@@ -1,0 +1,163 @@
+"""Recorded logs through the very chain that judged them live: findings of one probe or of many.
+
+Each probe's runs are judged by themselves, one after the other; what takes two probes is folded
+over them once all have closed a second. Findings come out in the order of their time, whatever the
+order in which the files were read.
+"""
+
+from __future__ import annotations
+
+from collections import Counter
+from collections.abc import Iterable, Iterator, Sequence
+from dataclasses import dataclass, field
+from datetime import datetime
+
+from monitor.bench import Bench
+from monitor.chain import Watch
+from monitor.findings import Finding, in_order, shifted
+from monitor.follow import Follower
+from monitor.logbook import reader
+from monitor.logbook.reader import LogError, Run
+from monitor.tanks import Unwatched, Watched
+
+
+@dataclass
+class Told:
+    """What a replay has to say besides its findings, for standard error."""
+
+    dropped: Counter[str] = field(default_factory=Counter)
+    messages: list[str] = field(default_factory=list)
+
+
+class ProbeReplay:
+    """One probe's runs in order, advanced a chunk of file at a time."""
+
+    def __init__(
+        self,
+        probe: str,
+        runs: Sequence[Run],
+        zero: datetime,
+        given: Bench | None,
+        watch: Watch | None = None,
+    ) -> None:
+        self.probe = probe
+        self.told = Told()
+        self.done = False
+        self._runs = list(runs)
+        self._zero = zero
+        self._given = given
+        self._watch = watch
+        self._past: list[tuple[str, Watched, float]] = []
+        self.follower: Follower
+        self.offset = 0.0
+        self._chunks: Iterator[bytes | None]
+        self._next_run()
+
+    def _next_run(self) -> None:
+        if hasattr(self, "follower"):
+            self._past.append((self.probe, self.follower.chain.watched, self.offset))
+        run = self._runs.pop(0)
+        self.offset = (run.started - self._zero).total_seconds()
+        self.follower = Follower(
+            self.probe, self._given, run.parts[0].part, self._watch, run.parser()
+        )
+        self._chunks = _text(run)
+
+    @property
+    def tank(self) -> str:
+        """The tank the probe hangs in; its own name until that is known."""
+        judges = self.follower.chain.judges
+        return judges.bench.probe[self.probe].tank if judges else self.probe
+
+    @property
+    def closed_t(self) -> float:
+        """Up to where all has been judged, on the common time."""
+        return self.follower.chain.closed_t + self.offset
+
+    @property
+    def watched(self) -> list[tuple[str, Watched, float]]:
+        """For the fold over a tank's probes: the spans of this run and of those before."""
+        return [*self._past, (self.probe, self.follower.chain.watched, self.offset)]
+
+    def advance(self) -> list[Finding]:
+        """Judge the next chunk. Raises LogError, CalibrationError."""
+        for chunk in self._chunks:
+            found = self.follower.next_part() if chunk is None else self.follower.feed(chunk)
+            return [shifted(f, self.offset) for f in found] if self.offset else found
+        self._finish()
+        return []
+
+    def _finish(self) -> None:
+        chain = self.follower.chain
+        self.told.dropped += self.follower.dropped
+        self.told.messages += chain.refused
+        if chain.judges is None:
+            raise LogError(
+                f"log of {self.probe}: no bench event in it; expected --bench BENCH beside it"
+            )
+        if self._runs:
+            self._next_run()
+        else:
+            self.done = True
+
+
+def _text(run: Run) -> Iterator[bytes | None]:
+    """The bytes of a run's parts; None where a part ends."""
+    for part in run.parts:
+        yield from part.chunks()
+        yield None
+
+
+def replay(probes: Sequence[ProbeReplay]) -> Iterator[list[Finding]]:
+    """Findings of these probes, in order, as they become sure.
+
+    Raises LogError, CalibrationError.
+    """
+    tanks: dict[str, Unwatched] = {}
+    waiting: list[Finding] = []
+    while running := [probe for probe in probes if not probe.done]:
+        waiting += min(running, key=lambda probe: probe.closed_t).advance()
+        waiting += _of_tanks(probes, tanks)
+        sure_t = min((probe.closed_t for probe in probes if not probe.done), default=float("inf"))
+        waiting = in_order(waiting)
+        ready = [finding for finding in waiting if finding["t"] <= sure_t]
+        waiting = waiting[len(ready) :]
+        if ready:
+            yield ready
+
+
+def _of_tanks(probes: Iterable[ProbeReplay], tanks: dict[str, Unwatched]) -> list[Finding]:
+    together: dict[str, list[ProbeReplay]] = {}
+    for probe in probes:
+        together.setdefault(probe.tank, []).append(probe)
+    found: list[Finding] = []
+    for tank, its in together.items():
+        upto_t = min(probe.closed_t for probe in its)
+        fold = tanks.setdefault(tank, Unwatched(tank))
+        found += fold.advance(upto_t, [each for probe in its for each in probe.watched])
+        for probe in its:
+            probe.follower.chain.watched.forget(upto_t - probe.offset - 1300.0)
+    return found
+
+
+def open_logs(
+    paths: Sequence[str], given: Bench | None, watch: Watch | None = None
+) -> list[ProbeReplay]:
+    """The probes that these files hold, ready to be replayed.
+
+    Raises LogError if a file is no log, CalibrationError if the bench's standards allow no fit.
+    """
+    runs = reader.runs(paths)
+    if given is not None:
+        for run in runs:
+            if run.probe not in given.probe:
+                raise LogError(
+                    f"{run.parts[0].path}: probe {run.probe} is not in the bench file; expected"
+                    f" one of {', '.join(given.probe)}"
+                )
+    zero = min(run.started for run in runs)
+    names = dict.fromkeys(run.probe for run in runs)
+    return [
+        ProbeReplay(name, [run for run in runs if run.probe == name], zero, given, watch)
+        for name in names
+    ]
