@@ -11,9 +11,11 @@ import hashlib
 import json
 import math
 from collections.abc import Sequence
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any, NamedTuple
 
 import numpy as np
+from numpy.typing import NDArray
 
 from monitor.blocks import Floats
 from monitor.calibration import remarks
@@ -40,8 +42,8 @@ class Hypotheses(NamedTuple):
     """m weighings of n rows: which rows are in use, the scatter, ln of the prior."""
 
     use: Floats  # (m, n)
-    tau: Floats  # (m,) index of TAU_PCT
-    wrong: Floats  # (m,) 0 = none wrong, i = the i-th of `groups` left out
+    tau: NDArray[np.intp]  # (m,) index of TAU_PCT
+    wrong: NDArray[np.intp]  # (m,) 0 = none wrong, i = the i-th of `groups` left out
     ln_prior: Floats  # (m,)
     groups: tuple[tuple[int, ...], ...]  # rows that may be wrong together
 
@@ -74,7 +76,7 @@ def fit(
     k0 = older.k0_ms if older else math.exp(np.log(np.maximum(rows.k25_ms, 0.001)).mean())
     prior = renewed_prior(older, top_us) if older else first_prior(top_us)
     hypotheses = hypotheses_of(rows, older.scatter if older else None)
-    tau_pct = np.array(TAU_PCT)[hypotheses.tau.astype(int)]
+    tau_pct = np.array(TAU_PCT)[hypotheses.tau]
     with np.errstate(all="ignore"):
         try:
             fits = solve(rows, k0, hypotheses.use, tau_pct, prior)
@@ -89,11 +91,11 @@ def fit(
     if fits.q[heaviest] > WORST_Q:
         raise CalibrationError(remarks.contradiction(rows, fits, heaviest))
     theta, cov = put_together(fits, weight)
-    scatter = np.bincount(hypotheses.tau.astype(int), weight, len(TAU_PCT))
+    scatter = np.asarray(np.bincount(hypotheses.tau, weight, len(TAU_PCT)), dtype=np.float64)
     used = [plain(standard) for standard in standards]
     above = rows.salinity_pct[rows.salinity_pct > 0]
     temps = [s.temp_c for s in standards if s.temp_c is not None]
-    return Calibration(
+    made = Calibration(
         name=name or name_of(standards, medium, tick_us),
         medium=medium,
         theta=tuple(theta.tolist()),
@@ -105,12 +107,14 @@ def fit(
         highest_pct=float(above.max()) if len(above) else 0.0,
         top_us=top_us,
         jitter=jitter,
+        dof=math.inf,
         tick_us=tick_us,
         scatter=tuple(scatter.tolist()),
         remarks=remarks.of_fit(standards, rows, fits, weight, hypotheses, scatter, TAU_PCT),
         date=max((s.taken for s in standards if s.taken), default=None),
         standards=tuple(used),
     )
+    return replace(made, dof=degrees_of_freedom(made, fits, weight))
 
 
 def read_rows(standards: Sequence[Standard], of: str, tick_us: float) -> tuple[Rows, float]:
@@ -236,6 +240,25 @@ def put_together(fits: Fits, weight: Floats) -> tuple[Floats, Floats]:
     cov = np.einsum("m,mij->ij", share, np.linalg.inv(fits.a[kept]))
     cov = cov + np.einsum("m,mi,mj->ij", share, away, away)
     return theta, (cov + cov.T) / 2
+
+
+def degrees_of_freedom(made: Calibration, fits: Fits, weight: Floats) -> float:
+    """Effective degrees of freedom of u in the middle of the standards, as the GUM words it.
+
+    From the spread of the variance over the hypotheses: that of a mixture of normal laws whose
+    kurtosis is Student's.
+    """
+    slopes = made.slopes(
+        made.period_us((made.lowest_pct + made.highest_pct) / 2, made.temp_c), made.temp_c
+    )
+    if slopes is None:
+        return math.inf
+    kept = weight >= weight.max() / 1000
+    d = np.array(slopes.theta)
+    var = np.einsum("i,mij,j->m", d, np.linalg.inv(fits.a[kept]), d)
+    share = weight[kept] / weight[kept].sum()
+    k = float(share @ var**2) / float(share @ var) ** 2
+    return (4 * k - 2) / (k - 1) if k > 1 + 1e-6 else math.inf
 
 
 def renewed_prior(older: Calibration, top_us: float) -> Prior:

@@ -11,12 +11,15 @@ import numpy as np
 from monitor.blocks import Floats
 from monitor.calibration.calibration import CalibrationError
 from monitor.calibration.model import Fits, Rows
+from monitor.calibration.student import f_tail
 
 if TYPE_CHECKING:
     from monitor.bench import Standard
     from monitor.calibration.fitting import Hypotheses
 
 SCATTER_PCT = 0.2  # scatter of the standards beyond which it is said
+LACK_OF_FIT_P = 0.05
+FREE = 3  # parameters that six levels really settle: lnG, p and t0
 UNIT_STEPS = (1e-6, 1e-3, 1e3, 1e6)  # s, ms for us and the reverse
 
 
@@ -73,6 +76,11 @@ def of_fit(
         lines.append(
             f"the standards scatter by {size:.2g} %; weigh a new set or state salinity_u_pct"
         )
+    p = lack_of_fit(rows, fits, int(np.argmax(weight)), hypotheses)
+    if p < LACK_OF_FIT_P:
+        lines.append(
+            f"lack of fit: the levels miss the model by more than repeats differ (F, p {p:.2g})"
+        )
     solutions = len(np.unique(rows.salinity_pct))
     if solutions < 4:
         lines.append(f"only {solutions} solutions: the doubt is wide and none of them is checked")
@@ -115,3 +123,22 @@ def left_out(fits: Fits, weight: Floats, hypotheses: Hypotheses, i: int) -> tupl
     var = var + np.einsum("mi,mij,mj->m", slope, np.linalg.inv(fits.a[which]), slope)
     mean = float(share @ residual)
     return mean, math.sqrt(float(share @ (var + (residual - mean) ** 2)))
+
+
+def lack_of_fit(rows: Rows, fits: Fits, heaviest: int, hypotheses: Hypotheses) -> float:
+    """Probability by chance of so much misfit of the levels, against that of repeats; 1 without.
+
+    The weighted form of the F test for lack of fit: NIST/SEMATECH e-Handbook, 4.4.4.6.
+    """
+    used = hypotheses.use[heaviest] > 0
+    salinity, r = rows.salinity_pct[used], fits.residual[heaviest][used]
+    weight = 1 / fits.variance[heaviest][used]
+    levels, of = np.unique(salinity, return_inverse=True)
+    above, below = len(levels) - FREE, len(r) - len(levels)
+    if above < 1 or below < 1:
+        return 1.0
+    total = np.bincount(of, weight)
+    mean = np.bincount(of, weight * r) / total
+    pure = float((weight * (r - mean[of]) ** 2).sum()) / below
+    lack = float((total * mean**2).sum()) / above
+    return f_tail(lack / max(pure, 1e-300), above, below)
