@@ -66,7 +66,7 @@ def make(name: str, from_s: float, to_s: float, rng: np.random.Generator, **give
     if name not in NAMES:
         raise ValueError(f"no fault {name[:40]!r}; one of {', '.join(NAMES)}")
     least_s = given.pop("least_s", 0.0)
-    figures = {**_DRAWS.get(name, lambda rng: {})(rng), **given}
+    figures = {**(_DRAWS[name](rng) if name in _DRAWS else {}), **given}
     fault = Fault(name, from_s, to_s, figures)
     if "rate_hz" in figures:
         fault.events = _events(fault, least_s, rng)

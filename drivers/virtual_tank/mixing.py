@@ -71,7 +71,7 @@ def _eddies(t: Floats, open_s: float, tau_s: float, rng: np.random.Generator) ->
     white = rng.standard_normal(t.size)
     kernel = np.exp(-np.arange(0.0, 6 * TURBULENCE_S, GRID_S) / TURBULENCE_S)
     kernel /= np.sqrt(np.sum(kernel**2))
-    return fade * np.convolve(white, kernel)[: t.size]
+    return np.asarray(fade * np.convolve(white, kernel)[: t.size])
 
 
 def _stirred(x: Floats, m: Mixing) -> Floats:
@@ -95,11 +95,12 @@ def _plume(x: Floats, m: Mixing) -> Floats:
 
 
 def _zones(x: Floats, m: Mixing) -> Floats:
-    return (m.slow * np.exp(-x / m.slow) - np.exp(-x)) / (m.slow - 1)
+    return np.asarray((m.slow * np.exp(-x / m.slow) - np.exp(-x)) / (m.slow - 1))
 
 
 def _parcel(x: Floats, m: Mixing) -> Floats:
-    return (1 - m.share) * np.exp(-x) + m.share * (1 - np.tanh(2 * (x - m.slow))) / 2
+    late = (1 - np.tanh(2 * (x - m.slow))) / 2
+    return np.asarray((1 - m.share) * np.exp(-x) + m.share * late)
 
 
 def _power(x: Floats, m: Mixing) -> Floats:
@@ -126,7 +127,7 @@ def _slow_plume(x: Floats, m: Mixing) -> Floats:
 def _irregular(x: Floats, m: Mixing) -> Floats:
     angle = 2 * np.pi * x / m.beat + 2 * np.pi * m.share
     waves = np.cos(2 * np.pi * m.share) - np.cos(angle)
-    return np.exp(-x - 0.9 * m.beat / (2 * np.pi) * waves)
+    return np.asarray(np.exp(-x - 0.9 * m.beat / (2 * np.pi) * waves))
 
 
 KINDS: dict[str, Callable[[Floats, Mixing], Floats]] = {

@@ -12,10 +12,10 @@ from typing import NamedTuple
 import numpy as np
 
 from drivers.virtual_tank import noise
-from drivers.virtual_tank.conductivity import conductivity_ms_cm
 from drivers.virtual_tank.faults import Fault
 from drivers.virtual_tank.mixing import Floats
 from drivers.virtual_tank.tank import Tank
+from monitor.water import Medium, medium
 
 JITTER = 0.016  # standard deviation of a reading's time, share of the time between readings
 
@@ -30,17 +30,22 @@ class Readings(NamedTuple):
 
 @dataclass(frozen=True)
 class Circuit:
-    """Constants of a probe: t0_us, g (us at 1 mS/cm), p, and the water's own salts in mS/cm."""
+    """Constants of a probe: t0_us, g (us at 1 mS/cm), p, and the water's own salts in mS/cm.
+
+    The laws of the water are those of its medium; what a bench can get wrong about them is in p,
+    in the background and in the standards' own errors.
+    """
 
     t0_us: float = 12.0
     g: float = 900.0
     p: float = 0.985
     background_ms_cm: float = 0.0015
+    water: Medium = medium("NaCl")  # noqa: RUF009 - frozen
 
     def period_us(self, salinity_pct: Floats, temp_c: Floats) -> Floats:
         """Noise-free period, (n,) us."""
-        kappa = conductivity_ms_cm(salinity_pct, temp_c, self.background_ms_cm)
-        return np.asarray(self.t0_us + self.g * kappa**-self.p)
+        at_25 = self.water.conductivity_25_ms(salinity_pct) + self.background_ms_cm
+        return np.asarray(self.t0_us + self.g * (at_25 * self.water.factor(temp_c)) ** -self.p)
 
 
 @dataclass

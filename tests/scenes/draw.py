@@ -150,7 +150,7 @@ class Scene:
         now = tank.settled_pct
         up = bool(rng.random() < (0.75 if now < 0.1 else 0.35))
         liquid, other = ("saline", "deionised") if up else ("deionised", "saline")
-        nominal, nominal_u = LIQUIDS[liquid]
+        nominal = LIQUIDS[liquid][0]
         step = min(between(rng, 0.0013, 0.022), 0.55 * abs(nominal - now), 0.6 * now)
         volume = round(tank.volume_ml * step / (abs(nominal - now) - step), 1)
         open_s = 0.0 if rng.random() < 0.1 else round(between(rng, 6.0, 75.0), 2)
@@ -408,7 +408,7 @@ def night(scene: Scene, folder: Path) -> None:
 
 
 def main(argv: list[str] | None = None) -> int:
-    ask = argparse.ArgumentParser(description=__doc__.split("\n")[0])  # type: ignore[union-attr]
+    ask = argparse.ArgumentParser(description="Draw scenes with a known truth.")
     ask.add_argument("out", type=Path)
     ask.add_argument("--seed", type=int, default=1)
     ask.add_argument("--doses", type=int, default=0)
