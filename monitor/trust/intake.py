@@ -10,12 +10,13 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
+from itertools import compress
 from typing import NamedTuple, Protocol
 
 from monitor import bench
-from monitor.blocks import NAN, Second
+from monitor.blocks import Second
 from monitor.dosing.ledger import Change, Dose, Struck
-from monitor.trust.measures import hampel_mean
+from monitor.trust.measures import hampel_bounds
 from monitor.trust.minutes import Minutes
 
 LEAST_S = 20  # sure seconds a minute
@@ -53,19 +54,18 @@ class Intake:
         self._quiet_k = 0
         self._out = self._locked = False
         self._left: tuple[float, float, float] | None = None  # time, level, temperature
-        self._levels: list[float] = []
+        self._levels: list[float] = []  # of this minute
         self._salinities: list[float] = []
         self._warmth = 0.0
 
     def step(self, second: Second, level: Levelled, changes: Sequence[Change]) -> bool:
         """One closed second; True when it closed a minute that counts."""
-        for change in changes:
-            if not isinstance(change, Struck):
-                end_t = change.end_s if isinstance(change, Dose) else 0.0
-                self.pause(max(end_t, second.t))
-        for event in second.events:
-            if event.kind in ("out", "back"):
-                self._out = event.kind == "out"
+        if changes:
+            self._changed(second.t, changes)
+        if second.events:
+            for event in second.events:
+                if event.kind in ("out", "back"):
+                    self._out = event.kind == "out"
         locked = level.locked and not self._out
         if locked is not self._locked:
             self._turned(second, level, locked)
@@ -74,7 +74,12 @@ class Intake:
             self._levels.append(ln_us)
             self._salinities.append(second.salinity_pct)
             self._warmth += second.temp_used_c
-        return second.k % 60 == 59 and len(self._levels) > 0 and self._minute(second.t)
+        return second.k % 60 == 59 and self._minute(second.t)
+
+    def _changed(self, t: float, changes: Sequence[Change]) -> None:
+        for change in changes:
+            if not isinstance(change, Struck):
+                self.pause(max(change.end_s, t) if isinstance(change, Dose) else t)
 
     def pause(self, t: float) -> None:
         """Take nothing up until 15 min after t; what comes then is a new segment."""
@@ -86,11 +91,6 @@ class Intake:
         """Nothing before t tells of what comes."""
         self.segment += 1
         self.minutes.forget(t)
-
-    def _begin_minute(self) -> None:
-        self._levels.clear()
-        self._salinities.clear()
-        self._warmth = 0.0
 
     def _turned(self, second: Second, level: Levelled, locked: bool) -> None:
         """The level is lost, or found again: where?"""
@@ -116,16 +116,24 @@ class Intake:
             level += 0.98 * math.log(1.0 + 0.02048 * off + 6.91e-5 * off * off)
         return level
 
+    def _begin_minute(self) -> None:
+        self._levels, self._salinities, self._warmth = [], [], 0.0
+
     def _minute(self, t: float) -> bool:
-        n = len(self._levels)
-        if n >= LEAST_S:
-            temp_c = self._warmth / n
-            level = self._level(hampel_mean(self._levels), temp_c)
-            known = sum(self._salinities) == sum(self._salinities)
-            salinity = hampel_mean(self._salinities) if known else NAN
-            self.minutes.add(t, level, temp_c, salinity, self.segment, self.slope)
+        levels, salinities, warmth = self._levels, self._salinities, self._warmth
         self._begin_minute()
-        return n >= LEAST_S
+        n = len(levels)
+        if n < LEAST_S:
+            return False
+        temp_c = warmth / n
+        low, high = hampel_bounds(levels)
+        if min(levels) < low or max(levels) > high:
+            kept = [low <= level <= high for level in levels]
+            levels, salinities = list(compress(levels, kept)), list(compress(salinities, kept))
+            n = len(levels)
+        level = self._level(sum(levels) / n, temp_c)
+        self.minutes.add(t, level, temp_c, sum(salinities) / n, self.segment, self.slope)
+        return True
 
 
 def floor_us(standards: Sequence[bench.Standard]) -> float:
@@ -138,7 +146,7 @@ def floor_us(standards: Sequence[bench.Standard]) -> float:
     if n < 2:
         return 0.0
     x0, p0 = (sum(row[i] for row in rows) / n for i in (0, 1))
-    xx = sum((x - x0) ** 2 for x, _ in rows)
+    xx = sum((x - x0) * (x - x0) for x, _ in rows)
     if xx <= 0.0:
         return 0.0
     slope = sum((x - x0) * (p - p0) for x, p in rows) / xx

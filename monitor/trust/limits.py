@@ -23,7 +23,7 @@ from monitor.trust.measures import theil_sen
 
 BEGIN_S, END_S = 10, 30
 OF_BAND = 0.02
-SMOOTH = 0.2  # of a second in the salinity that is held against the band
+SMOOTH = 0.3  # share of a second in the salinity that is held against the band
 HALF_S = 30
 HALVES = 10  # half minutes a slope is drawn through
 LEAST_SECONDS = 15  # of a half minute
@@ -141,7 +141,7 @@ class Limits:
         self._smooth = NAN
         self._beyond = self._inside = 0  # seconds on end
         self._halves: list[tuple[float, float, float]] = []  # time, salinity, heading
-        self._begin_half()
+        self._sum, self._n, self._heading = 0.0, 0, 0.0  # of this half minute
         for finding in (carried or {}).get("said", ()):
             self.said[finding["which"]] = dict(finding)
 
@@ -151,10 +151,11 @@ class Limits:
         """One closed second: limits passed, and kept again."""
         if self._idle:
             return []
-        salinity = second.salinity_pct
-        if trust.out or not trust.usable or trust.belief == "not-believed":
-            self._quiet()
+        if not trust.usable:
+            if trust.out or trust.belief == "not-believed":
+                self._quiet()
             return []
+        salinity = second.salinity_pct
         if salinity != salinity:
             return []
         smooth = self._smooth
@@ -169,7 +170,8 @@ class Limits:
         if self._fastest is not None:
             self._sum += salinity
             self._n += 1
-            self._heading = settling.heading or self._heading
+            if settling.heading:
+                self._heading = settling.heading
             if second.k % HALF_S == HALF_S - 1:
                 found += self._speed(second.t, self._fastest, trust)
         return found
@@ -216,6 +218,11 @@ class Limits:
             del self._halves[:-HALVES]
         self._begin_half()
         if len(self._halves) < HALVES:
+            return []
+        ahead = sum(half[1] for half in self._halves[HALVES // 2 :])
+        behind = sum(half[1] for half in self._halves[: HALVES // 2])
+        rough = 3600.0 * (ahead - behind) / (HALVES // 2) ** 2 / HALF_S
+        if not self.said and abs(rough) < 0.5 * fastest:  # far from it: not worth the pairs
             return []
         times, values, headings = zip(*self._halves)
         slope, low, high = (3600.0 * each for each in theil_sen(times, values))

@@ -43,20 +43,18 @@ def mad_sd(values: Sequence[float], about: float | None = None) -> float:
     return MAD_TO_SD * (_MAD_FACTORS[n - 2] if n <= 9 else n / (n - 0.8)) * mad
 
 
-def hampel_mean(values: Sequence[float]) -> float:
-    """Mean of the values within 3 robust standard deviations of their median.
+def hampel_bounds(values: Sequence[float]) -> tuple[float, float]:
+    """Within which values are no strays: 3 robust standard deviations about their median.
 
-    A plain median flips by a whole tick where the tick is coarse; a plain mean follows every
-    bubble. The rule is Hampel's: Davies & Gather, J. Am. Stat. Assoc. 88, 782 (1993).
+    Where over half of the values are equal there is nothing to tell a stray by: no bounds.
+
+    References
+    ----------
+    Davies & Gather, J. Am. Stat. Assoc. 88, 782 (1993).
     """
-    if len(values) < 3:
-        return sum(values) / len(values)
     centre = middle(sorted(values))
     bound = HAMPEL_SDS * mad_sd(values, centre)
-    if bound <= 0.0:  # over half the values are equal: nothing to tell a stray by
-        return sum(values) / len(values)
-    kept = [value for value in values if abs(value - centre) <= bound]
-    return sum(kept) / len(kept)
+    return (centre - bound, centre + bound) if bound > 0.0 else (-math.inf, math.inf)
 
 
 def theil_sen(

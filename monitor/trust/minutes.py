@@ -13,6 +13,7 @@ import math
 from typing import NamedTuple
 
 import numpy as np
+from numpy.typing import NDArray
 
 from monitor.blocks import NAN, Floats
 from monitor.trust.measures import allan_deviation
@@ -146,7 +147,7 @@ def fit(time_s: Floats, value: Floats, temp_c: Floats, segment: Floats, scale: f
     return Line(slope, u, rms, span_h, slope * span_h, share, by_temp)
 
 
-def _centred(values: Floats, edges: Floats) -> Floats:
+def _centred(values: Floats, edges: NDArray[np.intp]) -> Floats:
     """The values less the mean of their segment."""
     if not len(edges):
         return np.asarray(values - float(np.add.reduce(values)) / len(values))

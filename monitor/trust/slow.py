@@ -26,6 +26,7 @@ from monitor.trust.response import DECIDED, Asked, favours_fouling
 # minutes and the least rise (ln) over them
 WINDOWS = ((20, 0.008), (40, 0.005), (80, 0.0045), (160, 0.0045), (320, 0.0045))
 ACROSS = 80  # minutes from which a window may reach across segments
+OVER_BORDERS = 1.4  # times the least rise there: each border costs a free level
 LEAST_PER_H = 0.003
 RMS, SDS, FLICKER, TICKS = 8.0, 5.0, 3.0, 2.0  # how many of each the rise must be
 STRAIGHT = (0.33, 0.85)  # share of the last third; the tail of a mixing brakes
@@ -123,8 +124,10 @@ class Creep:
         for wide, least in WINDOWS:
             if wide > n:
                 break
-            if wide < ACROSS and not minutes.one_segment(wide):
-                continue
+            if not minutes.one_segment(wide):
+                if wide < ACROSS:
+                    continue
+                least *= OVER_BORDERS
             if minutes.moved(wide) > 0.6 * least:
                 line = self._line(wide)
                 if self._rises(line, wide, least, level):

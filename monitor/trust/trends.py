@@ -117,7 +117,7 @@ class Trends:
         line = _line(minutes, n)
         rate = self.said["pct_per_h"]
         along = line.slope if rate > 0 else -line.slope
-        return along + 2.0 * line.u < GONE * abs(rate)
+        return bool(along + 2.0 * line.u < GONE * abs(rate))
 
     def _close(self, t: float) -> Finding:
         assert self.said is not None
