@@ -6,7 +6,7 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 from monitor.blocks import Floats
-from monitor.water import nacl, sea_salt
+from monitor.water import density, nacl, sea_salt
 
 
 class OutOfRangeError(ValueError):
@@ -20,6 +20,7 @@ class Medium:
     conductivity_25_ms : salinity in % by mass -> mS/cm at 25 C
     salinity_pct : mS/cm at 25 C -> % by mass
     slope : d salinity_pct / d mS/cm
+    density_g_ml : salinity in % by mass, temperature in C -> g/mL
     limit_ms : the largest conductivity at 25 C that is converted
     factor_terms : conductivity at T over that at 25 C, polynomial in T - 25, highest power first
     """
@@ -28,6 +29,7 @@ class Medium:
     conductivity_25_ms: Callable[[Floats], Floats]
     salinity_pct: Callable[[Floats], Floats]
     slope: Callable[[float], float]
+    density_g_ml: Callable[[Floats, Floats], Floats]
     limit_ms: float
     factor_terms: tuple[float, ...]
 
@@ -50,6 +52,7 @@ _MEDIA = {
         nacl.conductivity_25_ms,
         nacl.salinity_pct,
         nacl.salinity_slope,
+        density.nacl_g_ml,
         nacl.LIMIT_MS,
         nacl.FACTOR,
     ),
@@ -58,6 +61,7 @@ _MEDIA = {
         sea_salt.conductivity_25_ms,
         sea_salt.salinity_pct,
         sea_salt.salinity_slope,
+        density.sea_salt_g_ml,
         sea_salt.LIMIT_MS,
         sea_salt.FACTOR,
     ),
