@@ -49,11 +49,20 @@ class Judges:
         self.temp_c = settings.temp_c
         if self.temp_c is None and calibration is not None:
             self.temp_c = calibration.temp_c
-        temp_u_c = THERMOMETER_U_C if settings.temp_u_c is None else settings.temp_u_c
+        temp_u_c = settings.temp_u_c
+        if temp_u_c is None:
+            temp_u_c = THERMOMETER_U_C if settings.temp_c is None else NO_THERMOMETER_U_C
         self.ledger = Ledger(bench, settings.tank, carried.get("ledger"))
         self.trust = Trust(probe, settings, carried.get("trust"))
         self.settling = Settling(
-            probe, settings.tank, tank, calibration, temp_u_c, carried.get("settling")
+            probe,
+            settings.tank,
+            tank,
+            calibration,
+            temp_u_c,
+            carried.get("settling"),
+            {name: liquid.salinity_pct for name, liquid in bench.liquid.items()},
+            self.temp_c,
         )
         self.trends = Trends(probe, settings.tank, carried.get("trends"))
         self.limits = Limits(probe, settings.tank, tank, carried.get("limits"))

@@ -80,7 +80,7 @@ class Recorder:
 
     def on_bytes(self, data: bytes, now_s: float) -> None:
         """Bytes of the wire, stamped when they arrived."""
-        readings = self.decoder.feed(data)
+        readings = self.decoder.feed(data, now_s)
         if not readings:
             return
         if self.paused:
@@ -116,7 +116,7 @@ class Recorder:
         if up != self.linked or not self.rows:
             self.linked = up
             if up:
-                self.decoder.opened()
+                self.decoder.opened(self._clock.now_s())
                 self.event("gap", {"link": "back"})
             else:
                 self.event("gap", {"link": "lost", "why": why})
@@ -145,6 +145,8 @@ class Recorder:
         if now - self._rejected_t >= REJECTED_S and (told := self.decoder.take_rejected()):
             self._rejected_t = now
             self.event("rejected", told)
+        for note in self.decoder.take_notes():
+            self._say(f"{self.probe}: {note}")
 
     def next_part(self, utc: datetime) -> None:
         """UTC midnight: the run goes on in its next part."""

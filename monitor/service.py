@@ -14,10 +14,10 @@ from collections.abc import Callable, Iterable, Mapping
 from pathlib import Path
 from typing import IO, Any
 
-from drivers.serial_port import SerialPort
-
 from drivers.line import Decoder
+from drivers.serial_port import SerialPort
 from monitor import bench as bench_file
+from monitor.alarms import AlarmError, AlarmLine, check_owner
 from monitor.bench import Bench, BenchError
 from monitor.calibration import CalibrationError, fit
 from monitor.chain import calibration_of
@@ -26,11 +26,12 @@ from monitor.control import Answer, ControlServer
 from monitor.findings import Finding, line
 from monitor.follow import Follower
 from monitor.logbook import reader
-from monitor.logbook.codec import utc_text
+from monitor.logbook.codec import utc_of, utc_text
 from monitor.logbook.writer import LogWriter
 from monitor.orders import Order, OrderError, parse
 from monitor.places import private_folder, socket_path
 from monitor.recorder import Head, Recorder
+from monitor.supervisor import notify, watchdog_s
 from monitor.tanks import UNWATCHED_S, Unwatched
 
 FLUSH_S = 0.03
@@ -73,12 +74,14 @@ class Service:
         self._tanks: dict[str, Unwatched] = {}
         self._files: dict[str, IO[str]] = {}
         self._lock: int | None = None
+        self.alarms: list[AlarmLine] = []
         self._day = self.started.date()
         self._seen = (clock.now_s(), clock.awake_s(), self.started)
 
     async def run(self) -> None:
         """Record and judge until `stop` is called. Raises ServiceError if it cannot start."""
         self._take_lock()
+        self._raise_alarms()
         control = ControlServer(socket_path(self.bench_path), self._ordered)
         try:
             for probe in self.bench.probe:
@@ -87,7 +90,11 @@ class Service:
             async with asyncio.TaskGroup() as group:
                 tasks = [group.create_task(each) for each in (self._flushes(), self._ticks())]
                 tasks.append(group.create_task(self._syncs()))
+                tasks += [group.create_task(alarm.work()) for alarm in self.alarms]
+                tasks.append(group.create_task(self._watchdog()))
+                notify("READY=1")
                 await self.stopping.wait()
+                notify("STOPPING=1")
                 for task in [*tasks, *self._ports.values()]:
                     task.cancel()
         finally:
@@ -139,6 +146,22 @@ class Service:
                 f"{self.folder}: a service already records here; stop it or choose --logs"
             ) from None
 
+    def _raise_alarms(self) -> None:
+        try:
+            check_owner(self.bench_path, self.bench.alarm)
+        except AlarmError as wrong:
+            raise ServiceError(str(wrong)) from None
+        for name, settings in self.bench.alarm.items():
+            alarm = AlarmLine(name, settings, self.clock.now_s, self._say)
+            self.alarms.append(alarm)
+            self.hooks.append(alarm.take)
+
+    async def _watchdog(self) -> None:
+        every_s = watchdog_s()
+        while every_s is not None:
+            notify("WATCHDOG=1")
+            await asyncio.sleep(every_s)
+
     def _start_probe(self, probe: str) -> None:
         settings = _settings(self.bench, probe)
         writer = LogWriter(self.folder, probe, self.started, self._run)
@@ -167,7 +190,8 @@ class Service:
         settings = self.bench.probe[probe]
         recorder = self.recorders[probe]
         if settings.port is None:
-            raise ServiceError(f"{self.bench_path.name}: probe.{probe}.port: missing; needed to run")
+            place = f"{self.bench_path.name}: probe.{probe}.port"
+            raise ServiceError(f"{place}: missing; expected a port to read")
         port = SerialPort(
             settings.port,
             settings.baud,
@@ -175,6 +199,7 @@ class Service:
             on_up=lambda: recorder.link(True),
             on_down=lambda why: self._down(probe, why),
             clock=self.clock,
+            reset_on_open=settings.reset_on_open,
         )
         self._ports[probe] = asyncio.create_task(port.run(), name=f"port of {probe}")
 
@@ -242,6 +267,8 @@ class Service:
             for recorder in self.recorders.values():
                 recorder.tick()
             self._tell_of_tanks()
+            for alarm in self.alarms:
+                alarm.tick()
             for file in self._files.values():
                 file.flush()
 
@@ -274,6 +301,8 @@ class Service:
             written = [self._write(probe, order) for probe in order.probes]
         except (OrderError, CalibrationError) as wrong:
             return {"ok": False, "why": str(wrong)}
+        if order.kind == "silence":
+            self._silence(order)
         if not all(written):
             return {"ok": False, "why": "nothing can be written to the log now; order not taken"}
         return {"ok": True, "time_s": self.recorders[order.probes[0]].run_s - order.ago_s}
@@ -285,6 +314,11 @@ class Service:
             fields = self._chosen(probe, str(fields.get("set", "")))
         when = None if order.ago_s == 0 else recorder.run_s - order.ago_s
         return recorder.event(order.kind, fields, when)
+
+    def _silence(self, order: Order) -> None:
+        left_s = (utc_of(order.fields["until_utc"]) - self.clock.utc()).total_seconds()
+        for alarm in self.alarms:
+            alarm.silence(str(order.fields["what"]), self.clock.now_s() + left_s)
 
     def _chosen(self, probe: str, named: str) -> Mapping[str, Any]:
         """The calibration that a set of standards gives. Raises OrderError, CalibrationError."""
@@ -304,7 +338,7 @@ class Service:
             "linked": recorder.linked,
             "paused": recorder.paused,
             "unwritten": recorder.unwritten,
-            "rejected": recorder.decoder.rejected_total,
+            "rejected": recorder.decoder.counts.total(),
         }
 
 

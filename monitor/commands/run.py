@@ -46,7 +46,6 @@ def serve(bench: Path, folder: Path, clock: Clock) -> None:
     import asyncio
 
     from monitor import cautions
-    from monitor.alarms import Alarms
     from monitor.outlet import Outlet
     from monitor.service import Service
 
