@@ -14,7 +14,11 @@ ONSET_SLACK_S = 10.0  # a disturbance that began so shortly before a dose is tha
 
 
 def dosed(
-    dose: Dose, history: History, mixing: Mixing | None, answered: Iterable[tuple[Mixing, float]]
+    dose: Dose,
+    history: History,
+    mixing: Mixing | None,
+    answered: Iterable[tuple[Mixing, float]],
+    common: float,
 ) -> Change:
     """The change that a recorded dose began.
 
@@ -24,6 +28,7 @@ def dosed(
     history : the readings so far
     mixing : the change under way, if any
     answered : changes that came to rest, oldest first, and when that was said
+    common : relative standard doubt that all readings have in common
     """
     open_s = max(dose.open_s, SHORTEST_S)
     filtered = history.filtered_at(dose.time_s)
@@ -31,10 +36,10 @@ def dosed(
     if overtaken is not None:
         still = _foreseen(overtaken, filtered)
         extra = abs(filtered - still.level_pct) if filtered == filtered else 0.0
-        return Change(dose.time_s, open_s, still, dose, extra_pct=extra)
+        return Change(dose.time_s, open_s, still, dose, extra_pct=extra, common=common)
     quiet = history.still(dose.time_s)
     if quiet is not None:
-        return Change(dose.time_s, open_s, quiet, dose)
+        return Change(dose.time_s, open_s, quiet, dose, common=common)
     return _into_unknown(dose, open_s, history, filtered)
 
 

@@ -83,6 +83,7 @@ def _change(change: Change, settling: Settling) -> dict[str, Any]:
         "ledger": change.ledger,
         "extra": change.extra_pct / still.level_pct if still.level_pct else 0.0,
         "size": change.size_pct / still.level_pct if still.level_pct else 0.0,
+        "common": change.common,
         "dose": asdict(change.dose) if change.dose is not None else None,
         "us": _or_none(still.period_us),
         "c": _or_none(still.temp_c),
@@ -100,7 +101,7 @@ def _changed(told: Mapping[str, Any], doubt: Doubt) -> Change:
     dose = Dose(**told["dose"]) if told["dose"] else None
     known = told["ledger"] and math.isfinite(level)
     extra, size = told["extra"] * level, told["size"] * level
-    return Change(told["from_t"], told["open_s"], still, dose, known, extra, size)
+    return Change(told["from_t"], told["open_s"], still, dose, known, extra, size, told["common"])
 
 
 def _salinity(doubt: Doubt, period_us: float, temp_c: float) -> float:

@@ -21,6 +21,7 @@ class Doubt:
         self.calibration = calibration
         self.temp_u_c = temp_u_c
         self.temp_c = calibration.temp_c if temp_c is None else temp_c
+        self.unknown_c = max(temp_u_c, NO_THERMOMETER_U_C)
 
     def salinity_pct(self, period_us: Floats, temp_c: Floats) -> Floats:
         """Salinities of readings, (n,)."""
@@ -29,19 +30,21 @@ class Doubt:
 
     def level_pct(self, reading: Bin, sd_pct: float, widen: float) -> float:
         """Standard doubt of a salinity near the reading, of its own sd; `widen` is relative."""
+        return math.hypot(sd_pct, reading[1] * self.common(reading, widen))
+
+    def common(self, reading: Bin, widen: float) -> float:
+        """Relative standard doubt that all readings near this one have in common."""
         _, salinity_pct, _, period_us, temp_c = reading
-        u = self.calibration.u_pct(period_us, *self._temperature(temp_c))
-        return math.sqrt(sd_pct**2 + u**2 + (widen * salinity_pct) ** 2)
+        known_c = self.temp_c if temp_c != temp_c else temp_c
+        off_c = self.unknown_c if temp_c != temp_c else 0.0
+        u = self.calibration.u_pct(period_us, known_c, self.temp_u_c, off_c)
+        return math.hypot(u / salinity_pct, widen) if salinity_pct > 0.0 else widen
 
     def step_pct(self, still: Still, after: list[Bin]) -> float:
         """Standard doubt of the step from still water to the readings after it."""
         to_us = sum(reading[3] for reading in after) / len(after)
         to_c = sum(reading[4] for reading in after) / len(after)
-        to_c, temp_u_c = self._temperature(to_c)
-        from_c, _ = self._temperature(still.temp_c)
-        return self.calibration.u_step_pct(still.period_us, from_c, to_us, to_c, temp_u_c)
-
-    def _temperature(self, temp_c: float) -> tuple[float, float]:
-        if temp_c == temp_c:
-            return temp_c, self.temp_u_c
-        return self.temp_c, max(self.temp_u_c, NO_THERMOMETER_U_C)
+        from_c = still.temp_c
+        if to_c != to_c or from_c != from_c:
+            from_c = to_c = self.temp_c
+        return self.calibration.u_step_pct(still.period_us, from_c, to_us, to_c, self.temp_u_c)

@@ -34,13 +34,21 @@ class Change:
     ledger: bool = True  # the dose's mass balance counts
     extra_pct: float = 0.0  # how far from rest the tank was when this began
     size_pct: float = 0.0  # least size of the step, where the ledger does not tell
+    common: float = 0.0  # relative standard doubt that all readings have in common
 
     @property
     def predicted(self) -> tuple[float, float] | None:
-        """Where the mass balance lands: salinity and its standard doubt."""
+        """Where the mass balance lands: salinity and its standard doubt as against a reading.
+
+        Where all readings are too high by one factor, so are the water before and the landing
+        as read, but not what the dose brought in.
+        """
         if self.dose is None or not self.ledger:
             return None
-        landing, u = self.dose.landing(self.still.level_pct, self.still.u_pct)
+        level, u_level = self.still.level_pct, self.still.u_pct
+        landing, u = self.dose.landing(level, u_level)
+        raised = self.dose.landing(level * (1.0 + self.common), u_level)[0]
+        u = math.hypot(u, self.common * landing - (raised - landing))
         return (landing, u) if math.isfinite(landing) and math.isfinite(u) else None
 
 

@@ -44,7 +44,7 @@ class Records:
             "rested_t": max(rested_t, change.from_t),
             "salinity_pct": salinity,
             "u95_pct": K95 * self.doubt.level_pct(history.bins[-1], sd, trust.widen),
-            **self._verdict(mixing, salinity, sd, history, trust.widen),
+            **self._verdict(mixing, salinity, sd, history),
             **_marked(trust),
         }
 
@@ -73,7 +73,7 @@ class Records:
         }
 
     def _verdict(
-        self, mixing: Mixing, salinity: float, sd: float, history: History, widen: float
+        self, mixing: Mixing, salinity: float, sd: float, history: History
     ) -> dict[str, Any]:
         change = mixing.change
         if change.dose is None or mixing.predicted is None:
@@ -81,7 +81,7 @@ class Records:
         landing, u = mixing.predicted
         after = history.since(history.bins[-1][0] + 1.0 - AFTER_S)
         u_step = self.doubt.step_pct(change.still, after)
-        u_all = math.sqrt(sd**2 + u**2 + u_step**2 + (widen * salinity) ** 2)
+        u_all = math.sqrt(sd**2 + u**2 + u_step**2)
         still = change.still
         outcome = Outcome(change.dose, still.level_pct, still.u_pct, salinity, landing, u_all)
         said: dict[str, Any] = {

@@ -212,11 +212,13 @@ class Settling:
 
     def _dosed(self, dose: Dose, t: float) -> list[Finding]:
         """A dose was recorded, now or late."""
-        if not dose.counts:
+        if not dose.counts or self.doubt is None:
             return []
+        bins = self.history.bins
+        common = self.doubt.common(bins[-1], self._widen) if bins else 0.0
         rested_t = self.at_rest["rested_t"] if self.at_rest is not None else t
         lost = self._lost(t, min(max(dose.time_s, rested_t), t))
-        self._begin(begin.dosed(dose, self.history, self.mixing, self.answered))
+        self._begin(begin.dosed(dose, self.history, self.mixing, self.answered, common))
         return lost
 
     def _disturbed(self, second: Second) -> list[Finding]:
