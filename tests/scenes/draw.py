@@ -27,13 +27,22 @@ from typing import Any
 
 import numpy as np
 
-from drivers.virtual_tank import FOREIGN, USUAL, Circuit, Climate, Fault, Mixing, Probe, Tank
+from drivers.virtual_tank import (
+    FOREIGN,
+    USUAL,
+    Circuit,
+    Climate,
+    Fault,
+    Mixing,
+    Probe,
+    Tank,
+    bench_text,
+)
+from drivers.virtual_tank.bench_text import LIQUIDS
 from drivers.virtual_tank.faults import make
 from drivers.virtual_tank.noise import pink
 
 STEP_S = 0.1  # of the truth
-STANDARDS_PCT = (0.025, 0.05, 0.075, 0.1, 0.125, 0.15)
-LIQUIDS = {"saline": (0.15, 0.0005), "deionised": (0.0, 0.0001)}
 STARTED = "2026-03-14T18:00:00Z"
 FAULTS = {  # length of a plain run, s
     "bubbles": 900.0,
@@ -264,24 +273,12 @@ class Scene:
 
     def _bench(self) -> str:
         """The bench file, its standards read with this very probe."""
-        rng, probe, n = self.rng, self.probe, 120
-        out = [f"# bench of scene {self.name}, drawn", "[probe.p1]", 'tank = "t1"']
-        out += [f"tick_us = {probe.tick_us}", 'medium = "NaCl"']
-        for pct in STANDARDS_PCT:
-            temp = round(25.0 + 0.15 * rng.standard_normal(), 2)
-            true_pct = pct * (1 + 0.0003 * rng.standard_normal())
-            flat = self.circuit.period_us(np.full(n, true_pct), np.full(n, temp))
-            read = flat * np.exp(probe.white * rng.standard_normal(n))
-            read = np.rint(read / probe.tick_us) * probe.tick_us
-            out += ["[[probe.p1.standard]]", f"salinity_pct = {pct}"]
-            out += [f"period_us = {read.mean():.3f}", f"sd_us = {read.std(ddof=1):.4f}"]
-            out += [f"readings = {n}", f"temp_c = {temp}"]
-        out += ["[tank.t1]", f"volume_ml = {self.recorded_ml}"]
-        out += [f"volume_u_ml = {0.005 * self.recorded_ml:.4g}", f'mode = "{self.mode}"']
-        out += [f"rest_band_pct = {self.band_pct}"]
-        for liquid, (pct, u) in LIQUIDS.items():
-            out += [f"[liquid.{liquid}]", f"salinity_pct = {pct}", f"salinity_u_pct = {u}"]
-        return "\n".join(out) + "\n"
+        return (
+            f"# bench of scene {self.name}, drawn\n"
+            + bench_text.probe_text("p1", "t1", self.probe, self.rng)
+            + bench_text.tank_text("t1", self.recorded_ml, self.mode, self.band_pct)
+            + bench_text.liquids_text(LIQUIDS)
+        )
 
 
 def _head(part: int | None = None) -> bytes:
