@@ -51,6 +51,7 @@ class Intake:
         self.slope = 0.0  # ln an hour, expected to go on while nothing is taken
         self.jump: Jump | None = None  # met in this second
         self.floor_us = floor_us(settings.standards_in_force)
+        self.paused_t = -math.inf  # when taking up was last put off
         self._quiet_k = 0
         self._out = self._locked = False
         self._left: tuple[float, float, float] | None = None  # time, level, temperature
@@ -83,6 +84,7 @@ class Intake:
 
     def pause(self, t: float) -> None:
         """Take nothing up until 15 min after t; what comes then is a new segment."""
+        self.paused_t = t
         self._quiet_k = max(self._quiet_k, int(t) + SETTLE_S)
         self.segment += 1
         self._begin_minute()

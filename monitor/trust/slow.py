@@ -30,6 +30,7 @@ OVER_BORDERS = 1.4  # times the least rise there: each border costs a free level
 LEAST_PER_H = 0.003
 RMS, SDS, FLICKER, TICKS = 8.0, 5.0, 3.0, 2.0  # how many of each the rise must be
 STRAIGHT = (0.33, 0.85)  # share of the last third; the tail of a mixing brakes
+YOUNG_S, YOUNG_LEAST = 5400.0, 0.42  # so soon after a dose or step it must be straighter
 TEMP_U_C = 1.0  # of a tank without a thermometer, where the bench does not say
 PER_C = 0.0212  # ln period a Celsius near 25 C
 GONE_MIN, GONE = 50, 0.3  # that long a slope surely under that share of the one said
@@ -59,7 +60,8 @@ class Creep:
         self.unseen = PER_C * temp_u_c  # u of the ln level for want of a thermometer
         self._intake = Intake(settings)
         self._slope = self._u = 0.0  # ln an hour, of the creep in force
-        self._base = NAN  # joined level before it
+        self._base = NAN  # joined level before it; NaN until the first minute after a restart
+        self._kept_cost = 0.0
         self._water = 0.0  # slope that is known to be water
         self._odds = 0.0  # summed log likelihood ratios of the answers to doses
         self._asked: Asked | None = None
@@ -76,8 +78,9 @@ class Creep:
         """ln period risen since the creep in force began; 0 without one."""
         if self.fault is None:
             return 0.0
-        now = self.minutes.recent(ENDS) if len(self.minutes) else 0.0
-        return max(now - self._base, 0.0)
+        if self._base != self._base:
+            return self._kept_cost
+        return max(self.minutes.recent(ENDS) - self._base, 0.0)
 
     def step(self, second: Second, level: Levelled, changes: Sequence[Change]) -> list[Finding]:
         """One closed second: `fouling` begun or ended in it."""
@@ -91,7 +94,11 @@ class Creep:
                 return [self._over(second.t, jump.lost_t)]
         if not minute:
             return []
-        return self._follow(second.t) if self.fault is not None else self._begin(second.t, level)
+        if self.fault is None:
+            return self._begin(second.t, level)
+        if self._base != self._base:
+            self._base = self.minutes.recent(1) - self._kept_cost
+        return self._follow(second.t)
 
     def carry(self) -> dict[str, Any]:
         """The creep in force and what is known of it."""
@@ -111,7 +118,7 @@ class Creep:
         if "fault" in carried:
             self.fault = dict(carried["fault"])
             self._slope, self._u = carried["slope"], carried["u"]
-            self._odds, self._base = carried["odds"], -carried["cost"]
+            self._odds, self._kept_cost = carried["odds"], carried["cost"]
         self._intake.slope = self._slope or self._water
 
     def _begin(self, t: float, level: Levelled) -> list[Finding]:
@@ -148,7 +155,8 @@ class Creep:
             return False
         if line.slope < max(LEAST_PER_H, WATER * self._water):
             return False
-        if not STRAIGHT[0] <= line.share <= STRAIGHT[1]:
+        young = float(self.minutes.column(0, 1)[0]) - self._intake.paused_t < YOUNG_S
+        if not (YOUNG_LEAST if young else STRAIGHT[0]) <= line.share <= STRAIGHT[1]:
             return False
         flicker = self.minutes.flicker(wide)
         if flicker == flicker and line.rise * 2.0 / 3.0 < FLICKER * flicker:
