@@ -44,6 +44,12 @@ class Heard:
         self.up += 1
         self.decoder.opened(-10.0)
 
+    async def opened(self, times: int) -> None:
+        await until(lambda: self.up == times)
+
+    async def lost(self, times: int) -> None:
+        await until(lambda: sum("unplugged" in why for why in self.down) == times)
+
 
 async def until(holds: Callable[[], object], limit_s: float = 8.0) -> None:
     """Wait until this holds."""
@@ -82,7 +88,7 @@ def line() -> Iterator[LineOut]:
 async def test_bytes_are_stamped_and_whole(line: LineOut) -> None:
     heard = Heard()
     async with reading(line.path, heard):
-        await until(lambda: heard.up == 1)
+        await heard.opened(1)
         line.send(b"254.0,24.81\r\n25")
         line.send(b"5.0\r\n")
         await until(lambda: len(heard.rows) == 2)
@@ -97,13 +103,13 @@ async def test_ten_times_unplugged_and_back_without_a_row_lost(line: LineOut) ->
     sent = []
     async with reading(line.path, heard):
         for i in range(10):
-            await until(lambda n=i + 1: heard.up == n)
+            await heard.opened(i + 1)
             for k in range(20):
                 sent.append(str(100 * (i + 1) + k))
                 line.send(f"{sent[-1]}\n".encode())
             await until(lambda: len(heard.rows) == len(sent))
             line.unplug()
-            await until(lambda n=i + 1: sum("unplugged" in why for why in heard.down) == n)
+            await heard.lost(i + 1)
             line.plug()
         await until(lambda: heard.up == 11)
     assert heard.rows == sent
@@ -116,7 +122,7 @@ async def test_port_that_is_not_there_yet_is_told_once_and_found(line: LineOut) 
         await until(lambda: heard.down)
         await asyncio.sleep(0.6)  # several attempts
         line.plug()
-        await until(lambda: heard.up == 1)
+        await heard.opened(1)
     assert heard.down == [f"{line.path}: not there; plug it in"]
 
 
@@ -124,7 +130,7 @@ async def test_noise_of_a_megabyte_and_a_line_without_an_end(line: LineOut) -> N
     heard = Heard()
     rng = random.Random(5)
     async with reading(line.path, heard):
-        await until(lambda: heard.up == 1)
+        await heard.opened(1)
         while heard.n < 1_000_000:
             line.send(rng.randbytes(2000))
             await asyncio.sleep(0.001)
@@ -153,7 +159,7 @@ async def test_port_given_back_can_be_opened_at_once(line: LineOut) -> None:
     for _ in range(3):
         heard = Heard()
         async with reading(line.path, heard):
-            await until(lambda: heard.up == 1)
+            await heard.opened(1)
         assert heard.down == []
 
 
