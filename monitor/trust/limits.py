@@ -3,8 +3,9 @@
 Rules:
 - `high` and `low` begin after 10 s beyond the bound and end after 30 s back inside by the doubt of
   the reading or 2 % of the band, whichever is more.
-- `fast` is judged every half minute on the last ten half minutes: it begins when the slope's 95 %
-  confidence limit is beyond the bound, and ends when the slope is below 0.8 of it.
+- `fast` is judged every half minute on the last five: the change from the first minute to the last
+  must beat the bound by twice its noise to begin, and fall below 0.8 of the bound to end. A slope
+  through all of them would be blind to a step, the fastest change of all.
 - Nothing begins, and nothing ends, while the probe is out or not believed. A doubtful probe's
   findings are marked.
 - While a recorded dose settles, what it was expected to do (up: `high`, rising; down: `low`,
@@ -14,18 +15,20 @@ Rules:
 from __future__ import annotations
 
 from collections.abc import Mapping
+from itertools import pairwise
 from typing import Any, NamedTuple, Protocol
 
 from monitor import bench
 from monitor.blocks import NAN, Second
 from monitor.findings import Finding
-from monitor.trust.measures import theil_sen
+from monitor.trust.measures import mad_sd
 
 BEGIN_S, END_S = 10, 30
 OF_BAND = 0.02
 SMOOTH = 0.3  # share of a second in the salinity that is held against the band
 HALF_S = 30
-HALVES = 10  # half minutes a slope is drawn through
+HALVES = 10  # half minutes looked at
+APART_S = HALF_S * (HALVES - 2)  # from the middle of the first two to that of the last two
 LEAST_SECONDS = 15  # of a half minute
 SLOWER = 0.8
 
@@ -139,7 +142,8 @@ class Limits:
         self._margin = OF_BAND * (self._high - self._low)
         self._fastest = settings.fastest_pct_per_h
         self._smooth = NAN
-        self._beyond = self._inside = 0  # seconds on end
+        self._beyond = 0  # seconds on end
+        self._inside = {"high": 0, "low": 0}
         self._halves: list[tuple[float, float, float]] = []  # time, salinity, heading
         self._sum, self._n, self._heading = 0.0, 0, 0.0  # of this half minute
         for finding in (carried or {}).get("said", ()):
@@ -183,7 +187,8 @@ class Limits:
     def _quiet(self) -> None:
         """What a bad or lifted probe reads counts for nothing, before and after."""
         self._smooth = NAN
-        self._beyond = self._inside = 0
+        self._beyond = 0
+        self._inside = {"high": 0, "low": 0}
         self._halves.clear()
         self._begin_half()
 
@@ -199,8 +204,8 @@ class Limits:
         ):
             if which in self.said:
                 margin = max(self._margin, u95_pct if u95_pct == u95_pct else 0.0)
-                self._inside = self._inside + 1 if over < -margin else 0
-                if self._inside >= END_S:
+                self._inside[which] = self._inside[which] + 1 if over < -margin else 0
+                if self._inside[which] >= END_S:
                     found.append(self._close(t, which))
             elif over > 0.0:
                 self._beyond = self._beyond + 1
@@ -219,23 +224,21 @@ class Limits:
         self._begin_half()
         if len(self._halves) < HALVES:
             return []
-        ahead = sum(half[1] for half in self._halves[HALVES // 2 :])
-        behind = sum(half[1] for half in self._halves[: HALVES // 2])
-        rough = 3600.0 * (ahead - behind) / (HALVES // 2) ** 2 / HALF_S
-        if not self.said and abs(rough) < 0.5 * fastest:  # far from it: not worth the pairs
-            return []
-        times, values, headings = zip(*self._halves)
-        slope, low, high = (3600.0 * each for each in theil_sen(times, values))
+        values = [half[1] for half in self._halves]
+        change = 0.5 * (values[-1] + values[-2] - values[0] - values[1])
+        rate = abs(change) * 3600.0 / APART_S
         if "fast" in self.said:
-            return [self._close(t, "fast")] if abs(slope) < SLOWER * fastest else []
-        if max(low, -high) <= fastest or (1.0 if slope > 0 else -1.0) in headings:
+            return [self._close(t, "fast")] if rate < SLOWER * fastest else []
+        if rate <= fastest or (1.0 if change > 0 else -1.0) in [half[2] for half in self._halves]:
             return []
-        return [self._say(t, times[0] - HALF_S, "fast", abs(slope), fastest, trust)]
+        noise = mad_sd([later - sooner for sooner, later in pairwise(values)]) / 2.0**0.5
+        if abs(change) - 2.0 * noise <= fastest * APART_S / 3600.0:
+            return []
+        return [self._say(t, self._halves[0][0] - HALF_S, "fast", rate, fastest, trust)]
 
     def _say(
         self, t: float, from_t: float, which: str, value: float, bound: float, trust: Trust
     ) -> Finding:
-        self._beyond = self._inside = 0
         self.said[which] = {
             "finding": "limit",
             "probe": self.probe,
@@ -251,5 +254,5 @@ class Limits:
         return dict(self.said[which])
 
     def _close(self, t: float, which: str) -> Finding:
-        self._inside = 0
+        self._inside[which] = 0
         return {**self.said.pop(which), "t": t, "to_t": t}

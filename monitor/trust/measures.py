@@ -1,4 +1,4 @@
-"""Noise measures: robust scale, cleaned mean, robust slope, Allan deviation.
+"""Noise measures: robust scale, bounds for strays, Allan deviation.
 
 Each is the published definition; what is asked of the figures is decided by those who call it.
 """
@@ -55,45 +55,6 @@ def hampel_bounds(values: Sequence[float]) -> tuple[float, float]:
     centre = middle(sorted(values))
     bound = HAMPEL_SDS * mad_sd(values, centre)
     return (centre - bound, centre + bound) if bound > 0.0 else (-math.inf, math.inf)
-
-
-def theil_sen(
-    times: Sequence[float], values: Sequence[float], z: float = 1.96
-) -> tuple[float, ...]:
-    """Slope as the median of all pairwise slopes, and its confidence limits by Kendall's S.
-
-    Parameters
-    ----------
-    times, values : (n,) n >= 2, times ascending and different
-    z : normal quantile of the two-sided confidence
-
-    Returns
-    -------
-    slope, low, high in values' unit per time's; the ranks of the limits are interpolated
-
-    References
-    ----------
-    Gilbert, Statistical Methods for Environmental Pollution Monitoring (1987), ch. 16.5.
-    """
-    n = len(times)
-    slopes = sorted(
-        (values[j] - values[i]) / (times[j] - times[i]) for i in range(n) for j in range(i + 1, n)
-    )
-    ties: dict[float, int] = {}
-    for value in values:
-        ties[value] = ties.get(value, 0) + 1
-    tied = sum(count * (count - 1) * (2 * count + 5) for count in ties.values() if count > 1)
-    wide = z * math.sqrt((n * (n - 1) * (2 * n + 5) - tied) / 18.0)
-    low, high = (_ranked(slopes, 0.5 * (len(slopes) + side)) for side in (-wide, wide + 2.0))
-    return middle(slopes), low, high
-
-
-def _ranked(ordered: Sequence[float], rank: float) -> float:
-    """Value of a fractional rank (the first is 1), the ends beyond them."""
-    place = min(max(rank - 1.0, 0.0), len(ordered) - 1.0)
-    below = int(place)
-    above = min(below + 1, len(ordered) - 1)
-    return ordered[below] + (place - below) * (ordered[above] - ordered[below])
 
 
 def allan_deviation(values: Floats, m: int) -> float:
