@@ -1,0 +1,169 @@
+"""A dosing valve's flow from timed runs into a cylinder: a straight line with its doubt.
+
+collected mL = flow x open s + offset: the offset is what passes, or is missing, at opening and
+closing besides the steady flow. Ordinary least squares; the doubt is the runs' own scatter about
+the line, with Student's t of its degrees of freedom (JCGM 100:2008, H.3, does the same).
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+from monitor.calibration.student import f_tail, t_quantile
+
+Runs = Sequence[tuple[float, float]]
+
+TWO_RUNS_U = 0.02  # of the volume: the scatter assumed where runs are too few to show any
+SHORT_S = 1.0
+OUTLIER_P = 0.01
+
+
+class FlowError(ValueError):
+    """The runs allow no flow; `str()` is the one line to show."""
+
+
+@dataclass(frozen=True)
+class Flow:
+    """Volume = ml_per_s x open_s + offset_ml; standard uncertainties and their covariance."""
+
+    ml_per_s: float
+    u_ml_per_s: float
+    offset_ml: float
+    u_offset_ml: float
+    cov: float
+    sd_ml: float  # of one run about the line
+    dof: float
+    runs: int
+    lack_of_fit_p: float | None  # None without repeated open times
+    remarks: tuple[str, ...]
+
+    @property
+    def k(self) -> float:
+        """Coverage factor for 95 %."""
+        return t_quantile(0.975, self.dof) if math.isfinite(self.dof) else 1.96
+
+    def volume(self, open_s: float) -> tuple[float, float]:
+        """mL that pass in so many seconds, and the standard uncertainty of one such dose."""
+        variance = (
+            (open_s * self.u_ml_per_s) ** 2
+            + self.u_offset_ml**2
+            + 2.0 * open_s * self.cov
+            + self.sd_ml**2
+        )
+        return max(self.ml_per_s * open_s + self.offset_ml, 0.0), math.sqrt(max(variance, 0.0))
+
+    def open_s(self, volume_ml: float) -> float:
+        """Seconds to open for this volume. Infinite where the valve gives nothing."""
+        if self.ml_per_s <= 0:
+            return math.inf
+        return max((volume_ml - self.offset_ml) / self.ml_per_s, 0.0)
+
+
+def flow(runs: Runs) -> Flow:
+    """The valve's flow from (open s, collected mL) runs.
+
+    Raises FlowError if there is no run, or nothing came.
+    """
+    if not runs:
+        raise FlowError("no timed runs; expected runs = [[open s, collected mL], ...]")
+    if not any(ml > 0 for _, ml in runs):
+        raise FlowError("every run collected nothing; expected mL in a cylinder")
+    times = [t for t, _ in runs]
+    if len(set(times)) < 2:
+        return _through_zero(runs)
+    slope, offset, residuals = _line(runs)
+    n, dof = len(runs), len(runs) - 2
+    mean_t = sum(times) / n
+    sxx = sum((t - mean_t) ** 2 for t in times)
+    if dof > 0:
+        sd = math.sqrt(sum(r * r for r in residuals) / dof)
+    else:
+        sd, dof = TWO_RUNS_U * max(ml for _, ml in runs), 2
+    u_slope = sd / math.sqrt(sxx)
+    u_offset = sd * math.sqrt(1.0 / n + mean_t**2 / sxx)
+    cov = -mean_t * sd**2 / sxx
+    return Flow(
+        slope, u_slope, offset, u_offset, cov, sd, dof, n, _lack_of_fit(runs), _remarks(runs)
+    )
+
+
+def _line(runs: Runs) -> tuple[float, float, list[float]]:
+    n = len(runs)
+    mean_t = sum(t for t, _ in runs) / n
+    mean_ml = sum(ml for _, ml in runs) / n
+    sxx = sum((t - mean_t) ** 2 for t, _ in runs)
+    slope = sum((t - mean_t) * (ml - mean_ml) for t, ml in runs) / sxx
+    offset = mean_ml - slope * mean_t
+    return slope, offset, [ml - slope * t - offset for t, ml in runs]
+
+
+def _through_zero(runs: Runs) -> Flow:
+    """One open time only: the offset cannot be told from the flow, and is taken as none."""
+    n = len(runs)
+    mean = sum(ml for _, ml in runs) / n
+    open_s = runs[0][0]
+    sd = TWO_RUNS_U * mean
+    if n > 1:
+        sd = max(math.sqrt(sum((ml - mean) ** 2 for _, ml in runs) / (n - 1)), 1e-3 * mean)
+    said = ("all runs of one length: what passes at opening and closing is unknown, taken as none",)
+    u = math.hypot(sd / math.sqrt(n), TWO_RUNS_U * mean) / open_s
+    return Flow(mean / open_s, u, 0.0, 0.0, 0.0, sd, max(n - 1, 2), n, None, said + _short(runs))
+
+
+def _lack_of_fit(runs: Runs) -> float | None:
+    """p that the means of repeated times scatter about the line as repeats do about their mean."""
+    groups: dict[float, list[float]] = {}
+    for t, ml in runs:
+        groups.setdefault(t, []).append(ml)
+    pure_dof = len(runs) - len(groups)
+    lack_dof = len(groups) - 2
+    if pure_dof < 1 or lack_dof < 1:
+        return None
+    pure = sum((ml - sum(g) / len(g)) ** 2 for g in groups.values() for ml in g)
+    slope, offset, _ = _line(runs)
+    lack = sum(len(g) * (sum(g) / len(g) - slope * t - offset) ** 2 for t, g in groups.items())
+    if pure <= 0:
+        return 0.0 if lack > 1e-12 else 1.0
+    return f_tail((lack / lack_dof) / (pure / pure_dof), lack_dof, pure_dof)
+
+
+def _remarks(runs: Runs) -> tuple[str, ...]:
+    said = list(_short(runs))
+    if len(runs) < 3:
+        said.append("two runs draw a line through anything: the doubt is a guess; time more runs")
+    for i in range(len(runs)):
+        rest = [run for j, run in enumerate(runs) if j != i]
+        away = _deleted_t(runs[i], rest)
+        if away is None:
+            continue
+        t, dof, excess = away
+        if t > t_quantile(1.0 - OUTLIER_P / (2.0 * len(runs)), dof):
+            where = f"run {i + 1} ({runs[i][0]:g} s, {runs[i][1]:g} mL)"
+            if i == 0 and excess < 0:
+                said.append(f"{where} gave {-excess:.2g} mL too little: air in the line before it?")
+            else:
+                said.append(f"{where} is {excess:+.2g} mL off the others' line: time it again")
+    return tuple(said)
+
+
+def _short(runs: Runs) -> tuple[str, ...]:
+    short = [t for t, _ in runs if t < SHORT_S]
+    if not short:
+        return ()
+    return (f"{len(short)} runs shorter than {SHORT_S:g} s: opening and closing rule them",)
+
+
+def _deleted_t(run: tuple[float, float], rest: Runs) -> tuple[float, float, float] | None:
+    """|residual| of a run from the others' line in their standard deviations, dof, residual."""
+    dof = len(rest) - 2
+    if dof < 1 or len({t for t, _ in rest}) < 2:
+        return None
+    slope, offset, residuals = _line(rest)
+    sd = math.sqrt(sum(r * r for r in residuals) / dof)
+    mean_t = sum(t for t, _ in rest) / len(rest)
+    sxx = sum((t - mean_t) ** 2 for t, _ in rest)
+    spread = sd * math.sqrt(1.0 + 1.0 / len(rest) + (run[0] - mean_t) ** 2 / sxx)
+    excess = run[1] - slope * run[0] - offset
+    return abs(excess) / max(spread, 1e-3 * max(run[1], 1e-9)), dof, excess
