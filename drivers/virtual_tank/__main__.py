@@ -12,6 +12,7 @@ import argparse
 import asyncio
 import contextlib
 import math
+import signal
 import sys
 import time
 import tomllib
@@ -129,6 +130,7 @@ def main() -> int:
         why = f"{type(wrong).__name__}: {wrong}".replace("\n", " ")
         print(f"{given.bench}: no bench file that checks ({why!a})", file=sys.stderr)
         return 2
+    signal.signal(signal.SIGTERM, signal.default_int_handler)  # take the ports away then, too
     with contextlib.suppress(KeyboardInterrupt):
         asyncio.run(serve(bench))
     return 0
