@@ -9,7 +9,7 @@ Rules:
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from itertools import compress
 from typing import NamedTuple, Protocol
 
@@ -52,7 +52,7 @@ class Intake:
         self.jump: Jump | None = None  # met in this second
         self.floor_us = floor_us(settings.standards_in_force)
         self.paused_t = -math.inf  # when taking up was last put off
-        self._quiet_k = 0
+        self._quiet_t = 0.0  # the first second that may be taken up again
         self._out = self._locked = False
         self._left: tuple[float, float, float] | None = None  # time, level, temperature
         self._levels: list[float] = []  # of this minute
@@ -71,7 +71,7 @@ class Intake:
         if locked is not self._locked:
             self._turned(second, level, locked)
         ln_us = level.in_gate_ln
-        if locked and ln_us == ln_us and second.k >= self._quiet_k:
+        if locked and ln_us == ln_us and second.k >= self._quiet_t:
             self._levels.append(ln_us)
             self._salinities.append(second.salinity_pct)
             self._warmth += second.temp_used_c
@@ -85,9 +85,20 @@ class Intake:
     def pause(self, t: float) -> None:
         """Take nothing up until 15 min after t; what comes then is a new segment."""
         self.paused_t = t
-        self._quiet_k = max(self._quiet_k, int(t) + SETTLE_S)
+        self._quiet_t = max(self._quiet_t, t + SETTLE_S)
         self.segment += 1
         self._begin_minute()
+
+    def carry(self) -> dict[str, float]:
+        """Until when nothing is to be taken up."""
+        if self.paused_t == -math.inf:
+            return {}
+        return {"paused_t": self.paused_t, "quiet_t": self._quiet_t}
+
+    def resume(self, carried: Mapping[str, float]) -> None:
+        """Go on with what `carry` gave."""
+        self.paused_t = carried.get("paused_t", self.paused_t)
+        self._quiet_t = carried.get("quiet_t", self._quiet_t)
 
     def begin_anew(self, t: float) -> None:
         """Nothing before t tells of what comes."""
@@ -102,7 +113,7 @@ class Intake:
                 self._left = second.t, level.m, second.temp_used_c
             return
         left, self._left = self._left, None
-        if left is None or second.k < self._quiet_k:  # a dose may have moved it anywhere
+        if left is None or second.k < self._quiet_t:  # a dose may have moved it anywhere
             return
         lost_t, before, temp_c = left
         step = self._level(level.m, second.temp_used_c) - self._level(before, temp_c)
@@ -143,7 +154,9 @@ def floor_us(standards: Sequence[bench.Standard]) -> float:
 
     Between 2 us and 0.3 of the shortest period; 0 with fewer than two different salinities.
     """
-    rows = [(s.salinity_pct**-POWER, s.period_us) for s in standards if s.salinity_pct > 0.0]
+    rows = [
+        (math.pow(s.salinity_pct, -POWER), s.period_us) for s in standards if s.salinity_pct > 0.0
+    ]
     n = len(rows)
     if n < 2:
         return 0.0

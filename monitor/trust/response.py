@@ -35,7 +35,9 @@ class Asked:
 
 
 def favours_fouling(asked: Asked, after_pct: float, t: float) -> float:
-    """Log likelihood ratio of fouling against fresh water; NaN if the dose fits neither.
+    """Log likelihood ratio of fouling against fresh water.
+
+    NaN if the dose fits neither, or its liquid's salinity or the tank's volume is unknown.
 
     Parameters
     ----------
@@ -45,8 +47,6 @@ def favours_fouling(asked: Asked, after_pct: float, t: float) -> float:
     dose, read = asked.dose, asked.salinity_pct
     creep = asked.slope * (t - asked.t) / 3600.0
     lost = asked.cost / POWER
-    if dose.tank_ml is None:
-        return NAN
     landed, _ = dose.landing(read * math.exp(lost), 0.0)
     fouled = landed * math.exp(-lost - creep / POWER)
     # Fresh water also fills the tank, unless as much runs out: half of it, and that in doubt.

@@ -33,6 +33,7 @@ STRAIGHT = (0.33, 0.85)  # share of the last third; the tail of a mixing brakes
 YOUNG_S, YOUNG_LEAST = 5400.0, 0.42  # so soon after a dose or step it must be straighter
 TEMP_U_C = 1.0  # of a tank without a thermometer, where the bench does not say
 PER_C = 0.0212  # ln period a Celsius near 25 C
+LEAST_RISING = 10  # minutes through which its own slope is drawn
 GONE_MIN, GONE = 50, 0.3  # that long a slope surely under that share of the one said
 WATER = 1.6  # a creep explained as water is doubted again when that much steeper
 WIPED = 0.5  # share of the cost by which the level falls at once
@@ -102,7 +103,11 @@ class Creep:
 
     def carry(self) -> dict[str, Any]:
         """The creep in force and what is known of it."""
-        kept: dict[str, Any] = {"cause": self.cause, "water": self._water}
+        kept: dict[str, Any] = {
+            "cause": self.cause,
+            "water": self._water,
+            "intake": self._intake.carry(),
+        }
         if self.fault is not None:
             kept.update(
                 fault=dict(self.fault),
@@ -120,6 +125,7 @@ class Creep:
             self._slope, self._u = carried["slope"], carried["u"]
             self._odds, self._kept_cost = carried["odds"], carried["cost"]
         self._intake.slope = self._slope or self._water
+        self._intake.resume(carried["intake"])
 
     def _begin(self, t: float, level: Levelled) -> list[Finding]:
         """No creep in force: is there one?"""
@@ -166,6 +172,9 @@ class Creep:
 
     def _say(self, t: float, line: Line) -> Finding:
         from_t, self._base = self._knee()
+        since = int(np.sum(self.minutes.column(0, len(self.minutes)) > from_t + 30.0))
+        if since >= LEAST_RISING:  # the window also held what lay before the creep
+            line = self._line(since)
         self._slope, self._u = line.slope, line.u
         self._odds, self.cause = 0.0, ""
         self._intake.slope = line.slope
@@ -227,11 +236,16 @@ class Creep:
         """A dose is given: note what was read before it."""
         self._asked = None  # a struck dose, or two in one mixing, decide nothing
         dose = changes[-1]
-        if not isinstance(dose, Dose) or not dose.counts or len(self.minutes) < ENDS:
+        if not isinstance(dose, Dose) or not dose.counts:
             return
-        salinity = float(self.minutes.column(3, 3).mean())
-        read_t = float(self.minutes.column(0, 1)[0]) - 60.0
-        if salinity == salinity and t - read_t < SETTLE_S:
+        kept = len(self.minutes)
+        times = self.minutes.column(0, kept)
+        before = int(np.searchsorted(times, dose.time_s, side="right"))  # it may be told of late
+        if before < 3 or t - times[before - 1] > SETTLE_S:
+            return
+        salinity = float(self.minutes.column(3, kept)[before - 3 : before].mean())
+        if salinity == salinity:
+            read_t = float(times[before - 2]) - 30.0
             self._asked = Asked(dose, salinity, self.cost, self._slope, read_t)
 
     def _answered(self, t: float, asked: Asked) -> list[Finding]:

@@ -49,11 +49,11 @@ class Stream:
     def __post_init__(self) -> None:
         self.probe = bench.Probe(tank="t1", standard=STANDARDS, temp_u_c=self.temp_u_c)
         n = int(self.hours * 3600)
-        t = np.arange(n) + 0.5
+        t: Floats = np.arange(n, dtype=np.float64) + 0.5
         rng = np.random.default_rng(self.seed)
         temp_c = self.temp_c(t)
         above = GAIN * self.salinity(t) ** -POWER * np.exp(self.film(t)) / warmth(temp_c) ** 0.98
-        noise = self.noise / np.sqrt(2.0) * rng.standard_normal(n)
+        noise = self.noise * 0.5**0.5 * rng.standard_normal(n)
         self.period_us = (FLOOR_US + above) * np.exp(noise)
         seen_c = temp_c if self.thermometer else np.full(n, 25.0)
         above = (self.period_us - FLOOR_US) * warmth(seen_c) ** 0.98 / GAIN

@@ -161,7 +161,7 @@ def test_the_floor_is_the_standards_intercept() -> None:
 def test_a_line_gives_slope_and_doubt_of_white_noise() -> None:
     """The slope's own scatter over many draws is what its u says (ordinary least squares)."""
     rng = np.random.default_rng(1)
-    t = np.arange(1, 101) * 60.0
+    t: Floats = np.arange(1, 101, dtype=np.float64) * 60.0
     lines = [
         fit(t, 0.01 * t / 3600 + 0.001 * rng.standard_normal(100), t * 0 + 25.0, t * 0, 1.0)
         for _ in range(300)
