@@ -13,25 +13,17 @@ said from later data.
 from __future__ import annotations
 
 import argparse
-import fnmatch
-import gzip
 import json
 import math
 import random
-import re
-import shlex
-import statistics
 import subprocess
 import sys
-import tempfile
-import time
-from collections import defaultdict
-from collections.abc import Callable, Iterator
-from dataclasses import asdict, dataclass, field
+from collections.abc import Callable
+from dataclasses import asdict
 from pathlib import Path
-from typing import Any
 
-Record = dict[str, Any]
+from tests.scenes.said import Record, Scene, cut_differs, real, replay, scenes, well_formed
+from tests.scenes.tally import Tally, listed, summary
 
 EARLY_S = 2.0  # a rest declared more than this before the truth is early
 TOO_SHORT_S = 30.0  # a rest that the next dose ends sooner than this need not have been seen
@@ -46,126 +38,6 @@ IN_TIME_S = {
     "fouling": 5400,
 }
 NO_REST_ON = ("no-pulses", "short", "stuck", "loose-lead", "lodged-bubble")
-NEEDS = {
-    "rest": ("t", "rested_t", "salinity_pct", "u95_pct"),
-    "outlook": ("t", "salinity_pct", "u95_pct"),
-    "fault": ("t", "from_t"),
-    "trend": ("t", "from_t", "pct_per_h", "u95_pct_per_h"),
-    "limit": ("t", "value", "bound"),
-}
-ROW = re.compile(rb"\d+(\.\d+)?,\d+(\.\d+)?(,(-?\d+(\.\d+)?)?)?\n")
-
-
-@dataclass
-class Scene:
-    """One scene on disk: its truth and its files."""
-
-    name: str
-    truth: Record
-    logs: list[Path]
-    bench: Path
-
-    @property
-    def doses(self) -> Iterator[tuple[Record, float]]:
-        """Each scored dose, and when the next one (or the end) comes."""
-        doses = self.truth["doses"]
-        after = [d["t"] for d in doses[1:]] + [self.truth["duration_s"]]
-        return ((d, end) for d, end in zip(doses, after) if d.get("scored", True))
-
-
-@dataclass
-class Tally:
-    """All that is counted over the scenes."""
-
-    doses: int = 0
-    missed: int = 0
-    early: int = 0
-    worst_early: float = 0.0
-    late: list[float] = field(default_factory=list)
-    rested_err: list[float] = field(default_factory=list)
-    plateau_in: int = 0
-    u95: list[float] = field(default_factory=list)
-    outlook_in: int = 0
-    outlook_none: int = 0
-    outlook_u95: list[float] = field(default_factory=list)
-    n_right: int = 0
-    true_verdict: int = 0
-    n_wrong: int = 0
-    caught_wrong: int = 0
-    early_wrong: int = 0
-    late_wrong: list[float] = field(default_factory=list)
-    faults: dict[str, list[float | None]] = field(default_factory=lambda: defaultdict(list))
-    false_faults: list[str] = field(default_factory=list)
-    late_faults: list[str] = field(default_factory=list)
-    ended: int = 0
-    unended: int = 0
-    trend_n: int = 0
-    trend_hit: int = 0
-    trend_scenes: int = 0
-    false_trends: list[str] = field(default_factory=list)
-    bad_rests: list[str] = field(default_factory=list)
-    malformed: list[str] = field(default_factory=list)
-    looks_ahead: list[str] = field(default_factory=list)
-    broken: list[str] = field(default_factory=list)
-    hours: float = 0.0
-    seconds: float = 0.0
-
-
-def scenes(folder: Path, only: str) -> Iterator[Scene]:
-    """The scenes of a folder whose name fits the pattern, in order."""
-    for path in sorted(folder.glob("*.truth.json")):
-        name = path.name.removesuffix(".truth.json")
-        if fnmatch.fnmatch(name, only):
-            plain = [folder / f"{name}.log", folder / f"{name}.log.gz"]
-            logs = [p for p in plain if p.exists()] or sorted(folder.glob(f"{name}.part*.log*"))
-            yield Scene(name, json.loads(path.read_text()), logs, folder / f"{name}.bench.toml")
-
-
-def replay(command: str, logs: list[Path], bench: Path) -> tuple[list[Record], float]:
-    """Findings of these logs and the seconds it took. Raises RuntimeError if it fails."""
-    argv: list[str] = []
-    for word in shlex.split(command):
-        argv += [str(p) for p in logs] if word == "{log}" else [word.format(bench=bench)]
-    began = time.perf_counter()
-    done = subprocess.run(argv, capture_output=True, text=True, timeout=600, check=False)
-    took = time.perf_counter() - began
-    if done.returncode != 0:
-        raise RuntimeError(f"exit {done.returncode}: {done.stderr.strip()[-300:]}")
-    return [json.loads(line) for line in done.stdout.splitlines() if line.strip()], took
-
-
-def real(x: Any) -> bool:
-    return isinstance(x, int | float) and not isinstance(x, bool) and math.isfinite(x)
-
-
-def flaw(found: Any, last_t: float) -> str | None:
-    """What makes a record none that the format allows."""
-    if not isinstance(found, dict):
-        return "no object"
-    for key in NEEDS.get(found.get("finding", ""), ("t",)):
-        if not real(found.get(key)):
-            return key
-    dose_t = found.get("dose_t", "")
-    if found.get("finding") == "outlook" and dose_t is not None and not real(dose_t):
-        return "dose_t"
-    if found["t"] < last_t - 1e-9:
-        return "t goes back"
-    u95 = found.get("u95_pct")
-    if u95 is not None and (not real(u95) or u95 < 0):
-        return "u95"
-    return None
-
-
-def well_formed(found: list[Record], tally: Tally, name: str) -> list[Record]:
-    """The records that the format allows; the others are counted and named."""
-    good: list[Record] = []
-    for record in found:
-        wrong = flaw(record, good[-1]["t"] if good else -math.inf)
-        if wrong:
-            tally.malformed.append(f"{name}: {wrong} in {json.dumps(record)[:80]}")
-        else:
-            good.append(record)
-    return good
 
 
 def score_dose(tally: Tally, dose: Record, next_t: float, found: list[Record]) -> str:
@@ -323,21 +195,6 @@ def score_broken(tally: Tally, scene: Scene, why: Exception) -> None:
     tally.trend_n += bool(scene.truth["trend_pct_per_h"])
 
 
-def cut_differs(command: str, scene: Scene, found: list[Record], rng: random.Random) -> bool:
-    """Whether the log cut at a random row says something else up to that row."""
-    last = scene.logs[-1]
-    data = gzip.decompress(last.read_bytes()) if last.suffix == ".gz" else last.read_bytes()
-    lines = data.splitlines(keepends=True)
-    rows = [i for i, line in enumerate(lines) if ROW.fullmatch(line)]
-    at = rows[rng.randrange(len(rows) // 5, len(rows))]
-    until = float(lines[at].split(b",")[0])
-    with tempfile.TemporaryDirectory() as folder:
-        short = Path(folder) / "cut.log"
-        short.write_bytes(b"".join(lines[: at + 1]))
-        again, _ = replay(command, [*scene.logs[:-1], short], scene.bench)
-    return [f for f in again if f["t"] < until] != [f for f in found if f["t"] < until]
-
-
 def score(tally: Tally, scene: Scene, command: str, cuts: random.Random | None) -> str:
     """Replay one scene and count what it says; gives the line to print."""
     tally.hours += scene.truth["duration_s"] / 3600
@@ -354,54 +211,6 @@ def score(tally: Tally, scene: Scene, command: str, cuts: random.Random | None) 
     score_bad_rests(tally, scene, found)
     notes += score_faults(tally, scene, found) + score_trend(tally, scene, found)
     return f"{scene.name:24s} {took:5.2f}s  " + "; ".join(notes)
-
-
-def median(values: list[float]) -> float:
-    return statistics.median(values) if values else math.nan
-
-
-def p90(values: list[float]) -> float:
-    return sorted(values)[int(0.9 * (len(values) - 1))] if values else math.nan
-
-
-def summary(tally: Tally) -> Iterator[str]:
-    """The figures, a line each."""
-    r, n = tally, len(tally.u95)
-    yield (
-        f"rest: {r.doses} doses, missed {r.missed}, early {r.early} (worst by {r.worst_early:.1f}"
-        f" s), lateness median {median(r.late):.1f} s p90 {p90(r.late):.1f} s,"
-        f" rested_t error median {median(r.rested_err):.1f} s"
-    )
-    yield (
-        f"wrong doses apart: early {r.early_wrong}/{r.n_wrong},"
-        f" lateness median {median(r.late_wrong):.1f} s p90 {p90(r.late_wrong):.1f} s"
-    )
-    u95 = 100 * median(r.u95)
-    yield f"plateau: {r.plateau_in}/{n} inside u95, u95 median {u95:.2f} % of reading"
-    yield (
-        f"outlook at half time: {r.outlook_in}/{len(r.outlook_u95)} inside u95, none for"
-        f" {r.outlook_none}, u95 median {100 * median(r.outlook_u95):.0f} % of the step"
-    )
-    yield (
-        f"verdict: right doses that agree {r.true_verdict}/{r.n_right},"
-        f" wrong doses caught {r.caught_wrong}/{r.n_wrong}"
-    )
-    for name, after in sorted(r.faults.items()):
-        found = [x for x in after if x is not None]
-        yield f"fault {name}: found {len(found)}/{len(after)}, after median {median(found):.0f} s"
-    yield from listed(f"false faults in {r.hours:.1f} probe-hours", r.false_faults, 20)
-    yield f"trends: {r.trend_hit}/{r.trend_n}; {r.seconds:.1f} s in all"
-    yield from listed("broken scenes", r.broken)
-    yield from listed("faults found too late", r.late_faults)
-    yield f"faults whose end was missed by over 60 s: {r.unended}/{r.ended}"
-    yield from listed(f"untrue trends, of {r.trend_scenes} scenes without", r.false_trends)
-    yield from listed("rests that should not have been said", r.bad_rests)
-    yield from listed("malformed records", r.malformed)
-
-
-def listed(title: str, what: list[str], most: int = 10) -> Iterator[str]:
-    yield f"{title}: {len(what)}"
-    yield from (f"  {x}" for x in what[:most])
 
 
 def main(argv: list[str] | None = None) -> int:

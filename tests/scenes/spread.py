@@ -19,7 +19,7 @@ from monitor import bench
 from monitor.calibration import fit
 
 if TYPE_CHECKING:
-    from tests.scenes.score import Scene
+    from tests.scenes.said import Scene
 
 WINDOWS_S = (45, 90)
 EARLY_S = 2.0
