@@ -83,6 +83,11 @@ class Creep:
             return self._kept_cost
         return max(self.minutes.recent(ENDS) - self._base, 0.0)
 
+    def straight(self, line: Line) -> bool:
+        """No tail of a mixing, no step: the newest minutes' line keeps its slope to its end."""
+        young = float(self.minutes.column(0, 1)[0]) - self._intake.paused_t < YOUNG_S
+        return (YOUNG_LEAST if young else STRAIGHT[0]) <= line.share <= STRAIGHT[1]
+
     def step(self, second: Second, level: Levelled, changes: Sequence[Change]) -> list[Finding]:
         """One closed second: `fouling` begun or ended in it."""
         intake = self._intake
@@ -161,8 +166,7 @@ class Creep:
             return False
         if line.slope < max(LEAST_PER_H, WATER * self._water):
             return False
-        young = float(self.minutes.column(0, 1)[0]) - self._intake.paused_t < YOUNG_S
-        if not (YOUNG_LEAST if young else STRAIGHT[0]) <= line.share <= STRAIGHT[1]:
+        if not self.straight(line):
             return False
         flicker = self.minutes.flicker(wide)
         if flicker == flicker and line.rise * 2.0 / 3.0 < FLICKER * flicker:

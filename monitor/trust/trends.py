@@ -27,9 +27,8 @@ LEAST_MIN = 30
 WINDOWS = (400, 200, 100, 60)
 LEAST = 0.002  # of the reading
 SURE = 0.4  # u95 against rate; below the half that is asked for, since it is a guess itself
-STRAIGHT = (0.3, 0.9)
 AGAIN_S, SOONEST_S = 3600, 900
-SDS, OF_RATE = 2.4, 0.02  # u95 = root of (SDS u)^2 + (OF_RATE rate)^2
+SDS, OF_RATE = 2.7, 0.025  # u95 = root of (SDS u)^2 + (OF_RATE rate)^2
 GONE_MIN, GONE = 50, 0.3
 STEADY = 0.3  # share of an unknown temperature's doubt by which it may change within a stretch
 SAME_RMS, SAME_U = 1.6, 4.0  # a longer window must look like the last hour
@@ -85,7 +84,7 @@ class Trends:
         if not (abs(line.rise) >= LEAST * level and u95 < SURE * abs(line.slope)):
             return []
         if self.said is None:
-            if not STRAIGHT[0] <= line.share <= STRAIGHT[1]:
+            if not trust.creep.straight(line):
                 return []
             return [self._say(t, float(minutes.column(0, n)[0]) - 60.0, line, u95, trust)]
         waited = t - self.said["t"]
