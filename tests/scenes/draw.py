@@ -4,9 +4,10 @@
 
 `--doses` right doses, half of kinds a bench mostly shows (dose-KIND-NN), half of foreign kinds
 (foreign-KIND-NN); `--faults` runs of each fault, plain and with a dose that still mixes
-(mixing-FAULT-NN); `--hours` with nothing wrong (calm, thermostat), `--nights` of 12 h; `--other` of each special
-dose (wrong, double, late, midnight, wiped, damaged, unrecorded); `--trends` of evaporation, leak-in
-and fouling-dosed. The truth is computed from the salinity at the probe before any noise:
+(mixing-FAULT-NN); `--hours` with nothing wrong (calm, thermostat), `--nights` of 12 h; `--other`
+of each special dose (wrong, double, late, midnight, wiped, damaged, unrecorded); `--trends` of
+evaporation, leak-in and fouling-dosed. The truth is computed from the salinity at the probe before
+any noise:
 
 - doses[].rest_t: the earliest time after which it stays within band_pct of final_pct; null where
   the next dose came first. final_pct, step_pct: by what truly went in. ledger_wrong: what was

@@ -19,11 +19,10 @@ import random
 import subprocess
 import sys
 from collections.abc import Callable
-from dataclasses import asdict
 from pathlib import Path
 
 from tests.scenes.said import Record, Scene, cut_differs, real, replay, scenes, well_formed
-from tests.scenes.tally import Tally, listed, summary
+from tests.scenes.tally import Tally, listed, median, p90, summary
 
 EARLY_S = 2.0  # a rest declared more than this before the truth is early
 TOO_SHORT_S = 30.0  # a rest that the next dose ends sooner than this need not have been seen
@@ -237,7 +236,8 @@ def main(argv: list[str] | None = None) -> int:
 
         print(*spread.summary(chosen), sep="\n")
     if given.json:
-        given.json.write_text(json.dumps(asdict(tally), indent=1))
+        late = {"late_median": median(tally.late), "late_p90": p90(tally.late)}
+        given.json.write_text(json.dumps({**vars(tally), **late}, indent=1) + "\n")
     return 0
 
 

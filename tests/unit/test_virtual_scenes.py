@@ -192,3 +192,16 @@ def test_scripted_rule_waits_for_its_window() -> None:
     dose = {"t": 100.0}
     assert spread.declared(level, dose, 45, 0.001) == pytest.approx(130 + 45, abs=4)
     assert spread.declared(level[:150], dose, 45, 0.001) == -1
+
+
+def test_figures_are_printed_and_kept(
+    drawn: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    kept = tmp_path / "figures.json"
+    nothing = f"{sys.executable} -c pass"
+    asked = [str(drawn), "--only", "dose-*", "--spread", "--cuts", "--json", str(kept)]
+    assert score.main([*asked, "--command", nothing]) == 0
+    said = capsys.readouterr().out
+    assert "spread over 45 s: 12 doses" in said
+    assert "scenes where a finding used later data: 0" in said
+    assert json.loads(kept.read_text())["missed"] == 12
