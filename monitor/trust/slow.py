@@ -63,6 +63,7 @@ class Creep:
         self._slope = self._u = 0.0  # ln an hour, of the creep in force
         self._base = NAN  # joined level before it; NaN until the first minute after a restart
         self._kept_cost = 0.0
+        self._blind = False  # found without a thermometer
         self._water = 0.0  # slope that is known to be water
         self._odds = 0.0  # summed log likelihood ratios of the answers to doses
         self._asked: Asked | None = None
@@ -120,6 +121,7 @@ class Creep:
                 u=self._u,
                 cost=self.cost,
                 odds=self._odds,
+                blind=self._blind,
             )
         return kept
 
@@ -129,6 +131,7 @@ class Creep:
             self.fault = dict(carried["fault"])
             self._slope, self._u = carried["slope"], carried["u"]
             self._odds, self._kept_cost = carried["odds"], carried["cost"]
+            self._blind = carried["blind"]
         self._intake.slope = self._slope or self._water
         self._intake.resume(carried["intake"])
 
@@ -181,6 +184,7 @@ class Creep:
             line = self._line(since)
         self._slope, self._u = line.slope, line.u
         self._odds, self.cause = 0.0, ""
+        self._blind = line.by_temp != line.by_temp
         self._intake.slope = line.slope
         self.fault = {
             "finding": "fault",
@@ -197,10 +201,14 @@ class Creep:
     def _word(self) -> None:
         """The evidence: what was seen, both causes, the act that tells them apart."""
         assert self.fault is not None
+        warmth = "no dose or temperature explains it"
+        if self._blind:
+            cooler_c = self.cost / PER_C
+            warmth = f"no dose explains it; no thermometer: {cooler_c:.1f} C cooler looks the same"
         self.fault["evidence"] = (
             f"period up {100.0 * self.cost:.2f} % since {self.fault['from_t']:.0f} s,"
             f" {100.0 * self._slope:.2f} +- {200.0 * self._u:.2f} %/h,"
-            f" no dose or temperature explains it; {CAUSES[self.cause]}"
+            f" {warmth}; {CAUSES[self.cause]}"
         )
 
     def _knee(self) -> tuple[float, float]:

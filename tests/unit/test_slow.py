@@ -77,6 +77,7 @@ def test_the_tail_of_a_slow_mixing_is_no_film() -> None:
 def test_without_a_thermometer_a_film_must_beat_a_cooling_by_two_kelvin() -> None:
     (said,) = faults(Stream(5.0, film=film(0.03), thermometer=False).judged()[0])
     assert 0.03 * (said["t"] - BEGAN) / 3600 > 0.04
+    assert "no thermometer" in said["evidence"]
     known = Stream(5.0, film=film(0.03), thermometer=False, temp_u_c=0.2)
     assert faults(known.judged()[0])[0]["t"] < said["t"]
 
