@@ -1,0 +1,1 @@
+"""The morning page: what happened, in order of importance, made from the logs alone."""

@@ -1,0 +1,222 @@
+"""The night in sentences, most important first."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterable
+from typing import Any, NamedTuple
+
+from monitor.findings import Finding
+from monitor.report.night import Lane, Night
+
+
+class Section(NamedTuple):
+    """A heading and its lines; `urgent` where a person has to act."""
+
+    title: str
+    lines: list[str]
+    urgent: bool = False
+
+
+def sections(night: Night) -> list[Section]:
+    """What happened, in order of importance; sections without a line are left out."""
+    told = [
+        Section("Needs you now", list(_open(night)), urgent=True),
+        Section("Out of limits", list(_limits(night))),
+        Section("Doses", list(_doses(night))),
+        Section("Probe faults", list(_faults(night))),
+        Section("Trends", list(_trends(night))),
+        Section("Questions", list(_questions(night))),
+        Section("Gaps and losses", list(_gaps(night))),
+        Section("Checks, notes, orders", list(_notes(night))),
+        Section("How sure", [_how_sure(lane) for lane in night.lanes]),
+    ]
+    kept = [section for section in told if section.lines]
+    if kept[0].title != "Needs you now":
+        kept.insert(0, Section("Needs you now", ["Nothing: all that began is over."]))
+    return kept
+
+
+def clock(night: Night, t: float) -> str:
+    """Local time of day, with the date where it is not the night's first."""
+    when, first = night.when(t), night.when(night.from_t)
+    return when.strftime("%H:%M:%S" if when.date() == first.date() else "%d %b %H:%M:%S")
+
+
+def span(night: Night, from_t: float, to_t: float | None) -> str:
+    """From when to when, and how long."""
+    end = night.to_t if to_t is None else to_t
+    until = f"until {clock(night, end)}" if to_t is not None else "and it lasts"
+    return f"from {clock(night, from_t)} {until} ({length(end - from_t)})"
+
+
+def length(seconds: float) -> str:
+    """A length of time in words."""
+    if seconds < 120:
+        return f"{seconds:.0f} s"
+    if seconds < 7200:
+        return f"{seconds / 60:.0f} min"
+    return f"{seconds / 3600:.1f} h"
+
+
+def pct(value: float | None, u95: float | None = None) -> str:
+    """A salinity with as many digits as its doubt allows."""
+    if value is None or not math.isfinite(value):
+        return "no salinity"
+    if u95 is None or not math.isfinite(u95) or u95 <= 0:
+        return f"{value:.4f} %"
+    digits = max(2, min(6, 1 - math.floor(math.log10(u95))))
+    return f"{value:.{digits}f} +- {u95:.{digits}f} %"
+
+
+def lasting(night: Night, kind: str) -> list[Finding]:
+    """The last word on each condition of this kind: one record a condition."""
+    last: dict[Any, Finding] = {}
+    for f in night.findings:
+        if f["finding"] == kind:
+            name = f.get("fault") or f.get("which") or f.get("what") or ""
+            last[f.get("probe") or f.get("tank"), name, f.get("from_t")] = f
+    return list(last.values())
+
+
+def _open(night: Night) -> Iterable[str]:
+    kinds = ("unwatched", "limit", "fault", "notice")
+    for f in (f for kind in kinds for f in lasting(night, kind) if f["to_t"] is None):
+        yield _words(night, f)
+    for lane in night.lanes:
+        if lane.minutes and lane.minutes[-1].belief == "out":
+            yield f"{lane.tank}: the probe is out of the tank; put it back and say so"
+        moving = _unsettled(night, lane)
+        if moving:
+            yield f"{lane.tank}: the dose of {clock(night, moving)} is not at rest yet"
+
+
+def _words(night: Night, f: Finding) -> str:
+    whose = f.get("tank") or f["probe"]
+    when = span(night, f["from_t"], f["to_t"])
+    if f["finding"] == "limit":
+        unit = "%/h" if f["which"] == "fast" else "%"
+        said = f"{f['which']}: {f['value']:.4g} {unit}, bound {f['bound']:.4g} {unit}"
+        return f"{whose}: {said}, {when}"
+    if f["finding"] == "unwatched":
+        return f"{whose}: unwatched {when}: {f['why']}"
+    if f["finding"] == "notice":
+        return f"{whose}: {f['text']} ({clock(night, f['from_t'])})"
+    gone = f"; withdrawn: {f['withdrawn']}" if f.get("withdrawn") else ""
+    return f"{f['probe']}: {f['fault']} {when}: {f['evidence']}{gone}"
+
+
+def _unsettled(night: Night, lane: Lane) -> float | None:
+    """When the dose began that no rest has answered, the newest one; None if all are."""
+    struck = {str(e.fields.get("of")) for e in lane.events if e.kind == "strike"}
+    doses = [e for e in lane.events if e.kind == "dose"]
+    doses = [e for e in doses if str(e.fields.get("id", "")) not in struck]
+    if not doses:
+        return None
+    newest = max(e.time_s for e in doses)
+    rested = any(
+        f["finding"] == "rest" and f["probe"] == lane.probe and f["t"] >= newest
+        for f in night.findings
+    )
+    return None if rested else newest
+
+
+def _limits(night: Night) -> Iterable[str]:
+    for kind in ("limit", "unwatched"):
+        yield from (_words(night, f) for f in lasting(night, kind))
+
+
+def _doses(night: Night) -> Iterable[str]:
+    rests = [f for f in night.findings if f["finding"] == "rest" and f.get("to_t") is None]
+    for lane in night.lanes:
+        for event in (e for e in lane.events if e.kind == "dose"):
+            f = event.fields
+            size = (
+                f"{f['volume_ml']:g} mL" if "volume_ml" in f else f"{f.get('open_s', 0):g} s open"
+            )
+            what = (
+                f"{lane.tank}: {clock(night, event.time_s)} {size} {f.get('liquid', '')}".rstrip()
+            )
+            mine = [
+                r
+                for r in rests
+                if r["probe"] == lane.probe
+                and r["dose_t"] is not None
+                and abs(r["dose_t"] - event.time_s) < 0.05
+            ]
+            yield f"{what}: {_verdict(mine[0], event.time_s) if mine else 'no rest was called'}"
+
+
+def _verdict(rest: Finding, dose_t: float) -> str:
+    at = f"at rest after {length(max(rest['rested_t'] - dose_t, 0.0))}"
+    landed = pct(rest["salinity_pct"], rest["u95_pct"])
+    said = {
+        "agrees": "as predicted",
+        "disagrees": "NOT as predicted",
+        "no-prediction": "no prediction",
+    }[rest["verdict"]]
+    if rest.get("predicted_pct") is not None:
+        said += f" ({pct(rest['predicted_pct'], rest['predicted_u95_pct'])})"
+    why = "; ".join(rest.get("why") or ())
+    return f"{at} at {landed}, {said}" + (f": {why}" if why else "")
+
+
+def _faults(night: Night) -> Iterable[str]:
+    return (_words(night, f) for f in lasting(night, "fault"))
+
+
+def _trends(night: Night) -> Iterable[str]:
+    for f in lasting(night, "trend"):
+        rate = f"{f['pct_per_h']:+.2g} +- {f['u95_pct_per_h']:.1g} %/h"
+        when = span(night, f["from_t"], f["to_t"])
+        yield f"{f['tank']}: {rate} {when}; fits: {', '.join(f['likely'])}"
+
+
+def _questions(night: Night) -> Iterable[str]:
+    return (_words(night, f) for f in lasting(night, "notice"))
+
+
+def _gaps(night: Night) -> Iterable[str]:
+    for lane in night.lanes:
+        lost: float | None = None
+        for event in (e for e in lane.events if e.kind == "gap"):
+            if event.fields.get("link") == "lost":
+                lost = event.time_s
+                why = str(event.fields.get("why", "lost"))
+            elif lost is not None:
+                yield f"{lane.probe}: no readings ({why}) {span(night, lost, event.time_s)}"
+                lost = None
+        if lost is not None:
+            yield f"{lane.probe}: no readings ({why}) {span(night, lost, None)}"
+        for what, n in sorted(lane.dropped.items()):
+            yield f"{lane.probe}: {n} lines of the log dropped: {what}"
+        yield from lane.messages
+
+
+def _notes(night: Night) -> Iterable[str]:
+    for lane in night.lanes:
+        for event in lane.events:
+            if event.kind in ("dose", "gap"):
+                continue
+            by = f", by {event.fields['by']}" if event.fields.get("by") else ""
+            shown = {
+                key: value
+                for key, value in event.fields.items()
+                if key not in ("id", "by", "tank") and value not in (None, "")
+            }
+            said = ", ".join(f"{key} {value}" for key, value in shown.items())
+            yield f"{lane.probe}: {clock(night, event.time_s)} {event.kind} {said}{by}".rstrip()
+
+
+def _how_sure(lane: Lane) -> str:
+    if not lane.minutes:
+        return f"{lane.probe}: no readings"
+    n = len(lane.minutes)
+    shares = {
+        word: sum(m.belief == word for m in lane.minutes) / n
+        for word in ("believed", "doubtful", "not-believed", "out")
+    }
+    said = ", ".join(f"{word} {share:.0%}" for word, share in shares.items() if share)
+    doubts = sorted(m.u95_pct for m in lane.minutes if math.isfinite(m.u95_pct))
+    doubt = f"; typical doubt +- {doubts[len(doubts) // 2]:.2g} %" if doubts else ""
+    return f"{lane.probe} in {lane.tank}: {said}{doubt}"

@@ -1,0 +1,149 @@
+"""A stretch of time of one bench, gathered from its logs through the very chain that judged it."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+from datetime import datetime, timedelta
+from typing import NamedTuple
+
+from monitor.bench import Bench
+from monitor.blocks import NAN, Event, Second
+from monitor.chain import Judges
+from monitor.findings import Finding
+from monitor.replay import open_logs, replay
+
+TOLD = ("dose", "strike", "water", "out", "back", "note", "check", "compare", "silence", "gap")
+
+
+class Minute(NamedTuple):
+    """One minute of one probe. Salinities in %, NaN where no reading was usable."""
+
+    t: float  # its end, s since the first `started`
+    mean_pct: float
+    low_pct: float
+    high_pct: float
+    u95_pct: float
+    temp_c: float
+    readings: int
+    belief: str
+
+
+@dataclass
+class Lane:
+    """What one probe has to tell of the night."""
+
+    probe: str
+    tank: str = ""
+    label: str = ""
+    aim_pct: tuple[float, float] | None = None
+    minutes: list[Minute] = field(default_factory=list)
+    events: list[Event] = field(default_factory=list)
+    dropped: dict[str, int] = field(default_factory=dict)
+    messages: list[str] = field(default_factory=list)
+
+
+@dataclass
+class Night:
+    """Everything the report is made of."""
+
+    started: datetime  # where times are counted from
+    from_t: float
+    to_t: float
+    lanes: list[Lane]
+    findings: list[Finding]
+
+    def when(self, t: float) -> datetime:
+        """Local time of a time of the night, with its offset."""
+        return (self.started + timedelta(seconds=t)).astimezone()
+
+
+class _Minutes:
+    """Sums seconds into minutes as they are judged."""
+
+    def __init__(self, lane: Lane, offset: float) -> None:
+        self.lane = lane
+        self.offset = offset
+        self._minute: int | None = None
+        self._values: list[float] = []
+        self._readings = 0
+        self._temp = self._u95 = NAN
+        self._belief = ""
+
+    def see(self, second: Second, judges: Judges) -> None:
+        """One judged second."""
+        if self._minute != second.k // 60:
+            self.close()
+            self._minute = second.k // 60
+            settings = judges.bench.probe[self.lane.probe]
+            self.lane.tank = settings.tank
+            self.lane.label = judges.bench.tank[settings.tank].label
+            self.lane.aim_pct = judges.bench.tank[settings.tank].aim_pct
+        self._readings += second.n_rows
+        if judges.trust.usable and not math.isnan(second.salinity_pct):
+            self._values.append(second.salinity_pct)
+        self._temp = second.temp_used_c
+        self._u95 = judges.settling.u95_pct
+        self._belief = "out" if judges.trust.out else judges.trust.belief
+        for event in second.events:
+            if event.kind in TOLD:
+                self.lane.events.append(event._replace(time_s=event.time_s + self.offset))
+
+    def close(self) -> None:
+        """The minute is over."""
+        if self._minute is None:
+            return
+        values = self._values
+        mean, low, high = (
+            (sum(values) / len(values), min(values), max(values)) if values else (NAN, NAN, NAN)
+        )
+        t = 60.0 * (self._minute + 1) + self.offset
+        self.lane.minutes.append(
+            Minute(t, mean, low, high, self._u95, self._temp, self._readings, self._belief)
+        )
+        self._values, self._readings = [], 0
+
+
+def gather(
+    paths: Sequence[str],
+    given: Bench | None = None,
+    since: datetime | None = None,
+    until: datetime | None = None,
+) -> Night:
+    """Judge these logs and keep what lies between `since` and `until`.
+
+    Raises LogError, CalibrationError.
+    """
+    lanes: dict[str, Lane] = {}
+    sums: dict[tuple[str, float], _Minutes] = {}
+
+    def see(probe: str, offset: float, second: Second, judges: Judges) -> None:
+        minutes = sums.get((probe, offset))
+        if minutes is None:
+            lane = lanes.setdefault(probe, Lane(probe))
+            minutes = sums[probe, offset] = _Minutes(lane, offset)
+        minutes.see(second, judges)
+
+    probes = open_logs(paths, given, see)
+    findings = [finding for batch in replay(probes) for finding in batch]
+    for minutes in sums.values():
+        minutes.close()
+    for probe in probes:
+        lane = lanes.setdefault(probe.probe, Lane(probe.probe))
+        lane.dropped = dict(probe.told.dropped)
+        lane.messages = probe.told.messages
+    zero = probes[0].zero
+    first = 0.0 if since is None else (since - zero).total_seconds()
+    ends = [probe.closed_t for probe in probes]
+    last = max(ends) if until is None else (until - zero).total_seconds()
+    night = Night(zero, max(first, 0.0), min(last, max(ends)), list(lanes.values()), [])
+    night.findings = [f for f in findings if _touches(f, night)]
+    for lane in night.lanes:
+        lane.minutes = [m for m in lane.minutes if night.from_t < m.t <= night.to_t + 60]
+        lane.events = [e for e in lane.events if night.from_t <= e.time_s <= night.to_t]
+    return night
+
+
+def _touches(finding: Finding, night: Night) -> bool:
+    return night.from_t <= finding["t"] <= night.to_t
