@@ -89,7 +89,7 @@ class Recorder:
         t = max(now_s - self._zero_s, self._last_t)
         stamp = f"{t:.3f}"
         self._last_t = self._last_row_t = float(stamp)
-        self._waiting += [codec.row_line(stamp, reading) for reading in readings]
+        self._waiting += [codec.row_line(stamp, *reading) for reading in readings]
         self.rows += len(readings)
 
     def flush(self) -> None:

@@ -8,17 +8,21 @@ order in which the files were read.
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Iterable, Iterator, Sequence
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from dataclasses import dataclass, field
 from datetime import datetime
+from functools import partial
 
 from monitor.bench import Bench
-from monitor.chain import Watch
+from monitor.blocks import Second
+from monitor.chain import Judges
 from monitor.findings import Finding, in_order, shifted
 from monitor.follow import Follower
 from monitor.logbook import reader
 from monitor.logbook.reader import LogError, Run
 from monitor.tanks import Unwatched, Watched
+
+Witness = Callable[[str, float, Second, Judges], None]  # probe, offset of its run, ...
 
 
 @dataclass
@@ -38,15 +42,16 @@ class ProbeReplay:
         runs: Sequence[Run],
         zero: datetime,
         given: Bench | None,
-        watch: Watch | None = None,
+        witness: Witness | None = None,
     ) -> None:
+        """`zero`: where the times of findings are counted from. `witness` sees each second."""
         self.probe = probe
+        self.zero = zero
         self.told = Told()
         self.done = False
         self._runs = list(runs)
-        self._zero = zero
         self._given = given
-        self._watch = watch
+        self._witness = witness
         self._past: list[tuple[str, Watched, float]] = []
         self.follower: Follower
         self.offset = 0.0
@@ -57,10 +62,11 @@ class ProbeReplay:
         if hasattr(self, "follower"):
             self._past.append((self.probe, self.follower.chain.watched, self.offset))
         run = self._runs.pop(0)
-        self.offset = (run.started - self._zero).total_seconds()
-        self.follower = Follower(
-            self.probe, self._given, run.parts[0].part, self._watch, run.parser()
-        )
+        self.offset = (run.started - self.zero).total_seconds()
+        watch = None
+        if self._witness is not None:
+            watch = partial(self._witness, self.probe, self.offset)
+        self.follower = Follower(self.probe, self._given, run.parts[0].part, watch, run.parser())
         self._chunks = _text(run)
 
     @property
@@ -141,13 +147,17 @@ def _of_tanks(probes: Iterable[ProbeReplay], tanks: dict[str, Unwatched]) -> lis
 
 
 def open_logs(
-    paths: Sequence[str], given: Bench | None, watch: Watch | None = None
+    paths: Sequence[str],
+    given: Bench | None,
+    witness: Witness | None = None,
+    bare_probe: str | None = None,
+    bare_rate_hz: float | None = None,
 ) -> list[ProbeReplay]:
     """The probes that these files hold, ready to be replayed.
 
     Raises LogError if a file is no log, CalibrationError if the bench's standards allow no fit.
     """
-    runs = reader.runs(paths)
+    runs = reader.runs(paths, bare_probe, bare_rate_hz)
     if given is not None:
         for run in runs:
             if run.probe not in given.probe:
@@ -158,6 +168,6 @@ def open_logs(
     zero = min(run.started for run in runs)
     names = dict.fromkeys(run.probe for run in runs)
     return [
-        ProbeReplay(name, [run for run in runs if run.probe == name], zero, given, watch)
+        ProbeReplay(name, [run for run in runs if run.probe == name], zero, given, witness)
         for name in names
     ]

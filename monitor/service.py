@@ -363,14 +363,20 @@ def shifted_times(carried: Any, by_s: float) -> Any:
     """
     if isinstance(carried, dict):
         return {
-            key: value + by_s
-            if _is_time(key) and isinstance(value, int | float) and not isinstance(value, bool)
-            else shifted_times(value, by_s)
+            key: _moved(value, by_s) if _is_time(key) else shifted_times(value, by_s)
             for key, value in carried.items()
         }
-    if isinstance(carried, list):
+    if isinstance(carried, list | tuple):
         return [shifted_times(each, by_s) for each in carried]
     return carried
+
+
+def _moved(value: Any, by_s: float) -> Any:
+    if isinstance(value, list | tuple):
+        return [_moved(each, by_s) for each in value]
+    if isinstance(value, int | float) and not isinstance(value, bool):
+        return value + by_s
+    return value
 
 
 def _is_time(key: str) -> bool:

@@ -1,0 +1,1 @@
+"""The log: what is recorded and replayed, its text, its files."""

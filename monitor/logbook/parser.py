@@ -1,0 +1,237 @@
+"""Log text in any pieces to Blocks and Events, in the order of the file. No file is touched here.
+
+Rules:
+- The same text in other pieces gives the same rows and events, though not the same Blocks.
+- What is no row and no event is dropped and counted by what is wrong with it; nothing stops it
+  but a header that is no log's.
+- A last line without LF is torn, however well it reads; `finish` counts it.
+"""
+
+from __future__ import annotations
+
+import re
+from collections import Counter
+
+import numpy as np
+
+from monitor.blocks import NAN, Block, Event
+from monitor.logbook import lanes
+from monitor.logbook.codec import (
+    LINE_MOST,
+    EventError,
+    Header,
+    HeaderError,
+    event_of,
+    header_of,
+)
+
+Item = Block | Event
+_HEADER_MOST = 200  # comment lines before the columns
+_STANDARD = (["time_s", "period_us", "temp_c"], ["time_s", "period_us"])
+
+
+class Parser:
+    """Parses one file of a log.
+
+    header : what its head says, None until that was read
+    dropped : lines that were no row and no event, by what is wrong with them
+    """
+
+    def __init__(self) -> None:
+        self.header: Header | None = None
+        self.dropped: Counter[str] = Counter()
+        self.lines = 0
+        self._head: list[str] = []
+        self._columns: list[str] | None = None
+        self._tail = b""
+        self._skipping = False
+        self._last_t = -1.0
+
+    def feed(self, data: bytes) -> list[Item]:
+        """Rows and events that these further bytes complete.
+
+        Raises HeaderError if this is no log.
+        """
+        cut = data.rfind(b"\n")
+        if cut < 0:
+            self._keep(self._tail + data)
+            return []
+        text = self._tail + data[: cut + 1]
+        self._tail = b""
+        self._keep(data[cut + 1 :])
+        if self._skipping_at_start:
+            text = text[text.index(b"\n") + 1 :]
+            self._skipping_at_start = False
+        if self._columns is None:
+            text = self._read_head(text)
+        return self._read(text) if text else []
+
+    _skipping_at_start = False
+
+    def finish(self) -> list[Item]:
+        """The file is at its end."""
+        if self._tail or self._skipping_at_start:
+            self.dropped["torn"] += 1
+            self._tail = b""
+        if self.header is None and self._head:
+            self.header = header_of(self._head)
+        return []
+
+    def _keep(self, tail: bytes) -> None:
+        if len(tail) > LINE_MOST:
+            if not self._skipping_at_start:
+                self.dropped["line over 1 MB"] += 1
+            self._skipping_at_start = True
+            tail = b""
+        self._tail = tail
+
+    def _read_head(self, text: bytes) -> bytes:
+        """Take the header's lines off the text, up to the columns' names."""
+        at = 0
+        while at < len(text):
+            end = text.index(b"\n", at)
+            line = text[at:end]
+            if line.startswith(b"#!"):
+                return text[at:]
+            at = end + 1
+            self.lines += 1
+            if line.startswith(b"#") or not self._head:
+                self._head.append(line[:1000].decode("utf-8", "replace"))
+                if len(self._head) == 1 or len(self._head) > _HEADER_MOST:
+                    header_of([self._head[0], "# probe: x", "# started: 2000-01-01T00:00:00Z"])
+                if len(self._head) > _HEADER_MOST:
+                    raise HeaderError("no line of column names; expected time_s,period_us,temp_c")
+                continue
+            self.header = header_of(self._head)
+            self._columns = _columns(line)
+            break
+        return text[at:]
+
+    def _read(self, text: bytes) -> list[Item]:
+        items: list[Item] = []
+        at = 0
+        while at < len(text):
+            if text.startswith(b"#", at):
+                end = text.index(b"\n", at)
+                self._comment(text[at:end], items)
+                at = end + 1
+                continue
+            mark = text.find(b"\n#", at)
+            end = len(text) if mark < 0 else mark + 1
+            self._rows(text[at:end], items)
+            at = end
+        return items
+
+    def _comment(self, line: bytes, items: list[Item]) -> None:
+        self.lines += 1
+        if not line.startswith(b"#!"):
+            return
+        if len(line) > LINE_MOST:
+            self.dropped["line over 1 MB"] += 1
+            return
+        try:
+            items.append(event_of(line.decode("utf-8")))
+        except (EventError, UnicodeDecodeError):
+            self.dropped["malformed event"] += 1
+
+    def _rows(self, text: bytes, items: list[Item]) -> None:
+        n = text.count(b"\n")
+        self.lines += n
+        if self._columns in _STANDARD and n >= lanes.FEW:
+            rows = lanes.fast(text)
+            if not rows.good.all():
+                for i in np.flatnonzero(~rows.good).tolist():
+                    self.dropped[_wrong(text.split(b"\n", i + 1)[i])] += 1
+            table = np.stack((rows.time_s, rows.period_us, rows.temp_c))[:, rows.good]
+        else:
+            table = self._slowly(text)
+        if not table.shape[1]:
+            return
+        newest = np.maximum.accumulate(np.concatenate(([self._last_t], table[0])))
+        back = table[0] < newest[:-1]
+        if back.any():
+            self.dropped["time goes back"] += int(back.sum())
+            table = table[:, ~back]
+        self._last_t = float(newest[-1])
+        if table.shape[1]:
+            items.append(Block(*table))
+
+    def _slowly(self, text: bytes) -> np.ndarray:
+        rows: list[tuple[float, float, float]] = []
+        standard = self._columns in _STANDARD
+        for line in text.split(b"\n")[:-1]:
+            row = lanes.slow(line) if standard else self._by_name(line)
+            if row is None:
+                self.dropped[_wrong(line)] += 1
+            else:
+                rows.append(row)
+        return np.array(rows, np.float64).reshape(-1, 3).T
+
+    def _by_name(self, line: bytes) -> tuple[float, float, float] | None:
+        """A row whose columns stand in another order, or among unknown ones."""
+        columns = self._columns or []
+        cells = line.split(b",")
+        if len(cells) == len(columns) - 1 and columns[-1] == "temp_c":
+            cells.append(b"")
+        if len(cells) != len(columns):
+            return None
+        by_name = dict(zip(columns, cells))
+        return lanes.slow(
+            b",".join((by_name["time_s"], by_name["period_us"], by_name.get("temp_c", b"")))
+        )
+
+
+def _columns(line: bytes) -> list[str]:
+    """Names of the columns. Raises HeaderError without time_s and period_us."""
+    names = [name.strip() for name in line.decode("utf-8", "replace").split(",")]
+    for name in ("time_s", "period_us"):
+        if names.count(name) != 1:
+            raise HeaderError(f"no column {name}; expected time_s,period_us,temp_c")
+    return names
+
+
+def _wrong(line: bytes) -> str:
+    """What is wrong with a line that is no row."""
+    if b"\0" in line:
+        return "NUL in line"
+    if len(line) > LINE_MOST:
+        return "line over 1 MB"
+    return "no number" if line.count(b",") in (1, 2) else "number of columns"
+
+
+class BareParser:
+    """Numbers only, without header: a capture of the wire. Time is counted by the reading rate."""
+
+    _ROW = re.compile(rb"[ \t]*(\d{1,12}(?:\.\d{1,9})?)(?:[,; \t]+(-?\d{1,3}(?:\.\d{1,6})?))?\s*")
+
+    def __init__(self, rate_hz: float) -> None:
+        self.header: Header | None = None
+        self.dropped: Counter[str] = Counter()
+        self.lines = 0
+        self._rate_hz = rate_hz
+        self._tail = b""
+        self._rows = 0
+
+    def feed(self, data: bytes) -> list[Item]:
+        """Rows that these further bytes complete."""
+        *lines, self._tail = (self._tail + data).split(b"\n")
+        if len(self._tail) > LINE_MOST:
+            self.dropped["line over 1 MB"] += 1
+            self._tail = b""
+        rows: list[tuple[float, float, float]] = []
+        for line in lines:
+            self.lines += 1
+            found = self._ROW.fullmatch(line)
+            if found is None:
+                self.dropped[_wrong(line)] += 1
+                continue
+            time_s = round(self._rows / self._rate_hz, 6)
+            self._rows += 1
+            rows.append((time_s, float(found[1]), float(found[2]) if found[2] else NAN))
+        return [Block(*np.array(rows).T)] if rows else []
+
+    def finish(self) -> list[Item]:
+        """The capture is at its end."""
+        if self._tail:
+            self.dropped["torn"] += 1
+        return []

@@ -1,0 +1,134 @@
+"""Writing a log: append-only, in parts, never harming what was already written.
+
+Promise: a line that `append` took is with the operating system, so it survives a kill -9 of the
+program; after the next `sync` it is on the disk and survives a power cut. After a write that
+failed or fell short, the file is cut back to its last whole line before anything else is written.
+"""
+
+from __future__ import annotations
+
+import gzip
+import os
+import shutil
+from datetime import datetime, timedelta
+from pathlib import Path
+
+from monitor.logbook.codec import Header, file_name, parse_name
+
+
+class LogWriteError(OSError):
+    """Nothing can be written now; `str()` says why in one line."""
+
+
+class LogWriter:
+    """Writes the parts of one run of one probe."""
+
+    def __init__(self, folder: Path, probe: str, started: datetime, run: str) -> None:
+        """Make the first part's file. Raises LogWriteError."""
+        self.folder = folder
+        self.header = Header(probe, started, run, 1)
+        self._whole = 0  # bytes up to the last line that was written whole
+        self._fd = self._create()
+        self.path = self.folder / file_name(self.header)
+
+    def head(self) -> str:
+        """The header's text, to be appended first."""
+        return self.header.text()
+
+    def append(self, data: bytes) -> None:
+        """Append whole lines. Raises LogWriteError; then nothing of them counts as written."""
+        view = memoryview(data)
+        try:
+            while view:
+                view = view[os.write(self._fd, view) :]
+        except OSError as wrong:
+            raise LogWriteError(wrong.errno, f"{self.path.name}: {wrong.strerror}") from None
+        self._whole += len(data)
+
+    def recover(self) -> None:
+        """After a failure: cut back to the last whole line, and see whether writing works.
+
+        Raises LogWriteError while it does not.
+        """
+        try:
+            os.ftruncate(self._fd, self._whole)
+            os.lseek(self._fd, 0, os.SEEK_END)
+            probe = b"#\n"
+            written = os.write(self._fd, probe)
+            if written != len(probe):
+                os.ftruncate(self._fd, self._whole)
+                raise LogWriteError(28, f"{self.path.name}: disk full")
+        except LogWriteError:
+            raise
+        except OSError as wrong:
+            raise LogWriteError(wrong.errno, f"{self.path.name}: {wrong.strerror}") from None
+        self._whole += len(probe)
+
+    def sync(self) -> None:
+        """Bring what was written to the disk; may take seconds, call it from a thread."""
+        try:
+            os.fsync(self._fd)
+        except OSError:
+            pass  # a disk that fails shows at the next append
+
+    def next_part(self) -> None:
+        """Close this part and begin the next. Raises LogWriteError and keeps this one."""
+        before, header = self._fd, self.header
+        self.header = Header(header.probe, header.started, header.run, header.part + 1)
+        try:
+            self._fd = self._create()
+        except LogWriteError:
+            self.header = header
+            raise
+        self.path = self.folder / file_name(self.header)
+        self._whole = 0
+        os.fsync(before)
+        os.close(before)
+
+    def close(self) -> None:
+        """Sync and close."""
+        self.sync()
+        os.close(self._fd)
+
+    def _create(self) -> int:
+        path = self.folder / file_name(self.header)
+        flags = os.O_WRONLY | os.O_CREAT | os.O_EXCL | os.O_APPEND | os.O_NOFOLLOW | os.O_CLOEXEC
+        try:
+            return os.open(path, flags, 0o600)
+        except OSError as wrong:
+            raise LogWriteError(wrong.errno, f"{path.name}: {wrong.strerror}") from None
+
+
+def compress(path: Path) -> Path:
+    """Gzip a finished part: temporary name, fsync, rename, then remove the plain one.
+
+    Raises OSError; the plain file stays in that case.
+    """
+    packed = path.with_name(path.name + ".gz")
+    temporary = path.with_name(path.name + ".gz.tmp")
+    temporary.unlink(missing_ok=True)
+    flags = os.O_WRONLY | os.O_CREAT | os.O_EXCL | os.O_NOFOLLOW
+    try:
+        with (
+            path.open("rb") as plain,
+            os.fdopen(os.open(temporary, flags, 0o600), "wb") as raw,
+        ):
+            with gzip.GzipFile(filename="", fileobj=raw, mode="wb", compresslevel=6) as out:
+                shutil.copyfileobj(plain, out, 1 << 18)
+            raw.flush()
+            os.fsync(raw.fileno())
+        temporary.rename(packed)
+    finally:
+        temporary.unlink(missing_ok=True)
+    path.unlink()
+    return packed
+
+
+def outlived(folder: Path, now: datetime, keep_days: float) -> list[Path]:
+    """Finished logs older than is to be kept; only a list, nothing is removed here."""
+    last = (now - timedelta(days=keep_days)).timestamp()
+    return [
+        path
+        for path in sorted(folder.glob("*.log.gz"))
+        if parse_name(path.name) and path.stat().st_mtime < last
+    ]
