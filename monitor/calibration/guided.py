@@ -17,10 +17,11 @@ from typing import Any
 from monitor.bench import Standard
 from monitor.calibration.calibration import CalibrationError
 from monitor.calibration.fitting import fit
+from monitor.water import medium
 
 REST_S = 20
 LEAST_S = 15  # readings are taken over at least so long
-TREND = 3e-4  # relative change over REST_S that is still rest
+TREND = 5e-4  # relative change from half to half of REST_S that is still rest: slow noise
 BUBBLE = 4e-3  # relative jump up of a second's mean that is no noise
 STRAY = 0.02  # and of a single reading
 SILENCE_S = 5  # without a reading
@@ -49,13 +50,13 @@ class GuidedRun:
 
     def __init__(
         self,
-        medium: str,
+        of: str,
         tick_us: float,
         plan: Sequence[float] = (),
         readings: int = 120,
         taken: Sequence[Mapping[str, Any]] = (),
     ) -> None:
-        self.medium = medium
+        self.medium = of
         self.tick_us = tick_us
         self.plan = list(plan)
         self.readings = readings
@@ -66,6 +67,8 @@ class GuidedRun:
         self._pool = Pooled()
         self._second = -1
         self._open: list[tuple[float, float]] = []
+        self._last_warmth = 0.0
+        self._level_us = 0.0
         self._noise = 0.0, 0.0  # of a second's mean, of a single reading
 
     # what a person says
@@ -134,19 +137,29 @@ class GuidedRun:
             self._settle("no pulse: is the probe in, and switched on?")
             return
         logs = [math.log(period) for period in pulses]
-        mean = math.fsum(logs) / len(logs)
-        if self.phase == "read" and self._bubble(mean, max(logs)):
+        temps = [temp for _, temp in rows if temp == temp]
+        warmth = self._warmth(temps)  # takes the temperature's part out
+        mean = math.fsum(logs) / len(logs) + warmth
+        if self.phase == "read" and self._bubble(mean, max(logs) + warmth):
             self._settle("a bubble, or the probe was moved: tap it and hold still")
         pool = self._pool
         pool.seconds.append(mean)
-        pool.squares += math.fsum((value - mean) ** 2 for value in logs)
+        self._level_us = math.exp(mean - warmth)
+        pool.squares += math.fsum((value + warmth - mean) ** 2 for value in logs)
         pool.free += len(logs) - 1
         if self.phase == "settle":
             self._rest()
             return
         pool.periods += pulses
-        pool.temps += [temp for _, temp in rows if temp == temp]
+        pool.temps += temps
         self._enough()
+
+    def _warmth(self, temps: Sequence[float]) -> float:
+        """What to add to ln period, at most, to have it at 25 C; the last one where none is."""
+        if temps:
+            mean = math.fsum(temps) / len(temps)
+            self._last_warmth = math.log(medium(self.medium).sensitivity(mean)[0])
+        return self._last_warmth
 
     def _bubble(self, mean: float, highest: float) -> bool:
         level = self._pool.seconds[-1]
@@ -231,7 +244,7 @@ class GuidedRun:
     def _level(self) -> str:
         if not self._pool.seconds:
             return ""
-        return f", {math.exp(self._pool.seconds[-1]):.1f} us"
+        return f", {self._level_us:.1f} us"
 
 
 def _halves(seconds: Sequence[float]) -> tuple[float, float]:

@@ -80,7 +80,7 @@ def summary(calibration: Calibration) -> list[str]:
         f"circuit's own time {t0:.1f} +- {2 * sd[0]:.1f} us, polarisation exponent"
         f" {p:.4f} +- {2 * sd[2]:.4f}, water's own {1000 * b:.1f} +- {2000 * sd[4]:.1f} uS/cm",
     ]
-    if len({s["salinity_pct"] for s in calibration.standards if s["salinity_pct"] > 0}) > 1:
+    if len({s["salinity_pct"] for s in calibration.standards if s["salinity_pct"] > 0}) > 2:
         lines.append(line_error(calibration))
     middle = (calibration.lowest_pct + calibration.highest_pct) / 2
     u = calibration.u_pct(calibration.period_us(middle, calibration.temp_c), calibration.temp_c)
@@ -93,10 +93,10 @@ def line_error(calibration: Calibration) -> str:
     from monitor.bench import Standard
 
     standards = [Standard(**dict(s)) for s in calibration.standards]
-    line = candidates(standards, calibration.medium)["line, S on P"]
+    straight = candidates(standards, calibration.medium)["line, S on P"]
     salinity = np.linspace(calibration.lowest_pct, calibration.highest_pct, 50)
     periods = np.array([calibration.period_us(s, calibration.temp_c) for s in salinity.tolist()])
-    off = line(periods, np.full(50, calibration.temp_c)) / salinity - 1
+    off = straight(periods, np.full(50, calibration.temp_c)) / salinity - 1
     worst = int(np.argmax(np.abs(off)))
     return (
         f"a straight line through them would be {100 * off[worst]:+.0f} % off"

@@ -73,7 +73,8 @@ def set_name(bench: Bench, probe: str, date: str) -> str:
     """A name for a new set: the date, with a letter where that is taken."""
     settings = bench.probe.get(probe)
     used = {standard.set for standard in settings.standard} if settings else set()
-    for letter in ("", *"bcdefghijklmnopqrstuvwxyz"):
+    letters: list[str] = ["", *"bcdefghijklmnopqrstuvwxyz"]
+    for letter in letters:
         if date + letter not in used:
             return date + letter
     return f"{date}-{len(used)}"
