@@ -1,4 +1,4 @@
-"""`stillbrine calibrate`: take standards with a live probe, or from a table, into the bench file."""
+"""`stillbrine calibrate`: standards from a live probe or a table into the bench file."""
 
 from __future__ import annotations
 

@@ -23,16 +23,20 @@ if TYPE_CHECKING:
 
 SHOW_S = 0.25
 SILENT_S = 3.0
-ESCAPES = str.maketrans({i: "?" for i in [*range(32), *range(127, 160)]})
+ESCAPES = str.maketrans(dict.fromkeys([*range(32), *range(127, 160)], "?"))
 
 
 class Guide:
     """One run, from the first word to the last standard."""
 
-    def __init__(self, probe: Probe, plan: Sequence[float], readings: int, resume: Path) -> None:
+    def __init__(
+        self, probe: Probe, plan: Sequence[float], readings: int, resume: Path | None
+    ) -> None:
+        """`resume`: where standards taken so far are kept; None where nothing is."""
         self._probe = probe
         self._resume = resume
-        taken = _left_over(resume)
+        taken = _left_over(resume) if resume else []
+        self._until = 0
         self.run = GuidedRun(probe.medium, probe.tick_us, plan, readings, taken)
         self._clock = HostClock()
         self._decoder = Decoder(probe)
@@ -41,15 +45,17 @@ class Guide:
         self._link = "waiting for the port"
         self._last_s = self._clock.now_s()
         self._shown = ""
+        self._half = b""
         self._kept = len(taken)
         if taken:
             _say(f"going on with {len(taken)} standards taken before")
 
-    def walk(self) -> list[dict[str, Any]]:
-        """The standards that were taken, once the person says `done`.
+    def walk(self, until: int = 0) -> list[dict[str, Any]]:
+        """The standards that were taken, once the person says `done`, or once there are `until`.
 
         Raises Refusal if the run was left before, Wrong if the port cannot be one.
         """
+        self._until = until
         asyncio.run(self._walk())
         if self._left:
             kept = f"; {len(self.run.taken)} standards wait in {self._resume}" if self._kept else ""
@@ -96,6 +102,8 @@ class Guide:
             self.run.feed(now_s, float(reading.period_us), temp)
         if len(self.run.taken) != self._kept:
             self._save()
+        if self._until and len(self.run.taken) >= self._until and self._end:
+            self._end.set()
 
     def _up(self) -> None:
         self._link = ""
@@ -108,10 +116,15 @@ class Guide:
     # what the person says
 
     def _typed(self) -> None:
-        line = sys.stdin.readline()
-        if not line:
+        data = os.read(sys.stdin.fileno(), 4096)
+        if not data:
             self._leave()
             return
+        *lines, self._half = (self._half + data).split(b"\n")
+        for line in lines:
+            self._obey(line.decode(errors="replace"))
+
+    def _obey(self, line: str) -> None:
         self._shown = ""
         word = line.strip().lower().removesuffix("%").strip()
         if word == "done":
@@ -169,6 +182,8 @@ class Guide:
         if len(taken) == self._kept:
             return
         self._kept = len(taken)
+        if self._resume is None:
+            return
         if not taken:
             self._resume.unlink(missing_ok=True)
             return
