@@ -19,6 +19,7 @@ import grp
 import os
 import random
 import re
+import socket
 import termios
 from collections.abc import Callable
 from pathlib import Path
@@ -135,6 +136,8 @@ class _Link(asyncio.Protocol):
 
     def connection_made(self, transport: asyncio.BaseTransport) -> None:
         self._transport = transport
+        if (link := transport.get_extra_info("socket")) is not None:
+            _notice_silence(link)
         if self._closing:
             transport.close()
         else:
@@ -166,11 +169,19 @@ def address_from(url: str) -> tuple[str, int] | None:
     found = _SOCKET.fullmatch(url)
     if found and 0 < int(found[2]) < 65536:
         return found[1].strip("[]"), int(found[2])
-    if not url.startswith("/dev/") or "\0" in url or ".." in url.split("/"):
+    if not url.startswith("/dev/") or not url.isprintable() or ".." in url.split("/"):
         raise PortError(
             f"port {url[:80]!a}: cannot be read; expected /dev/... or socket://host:port"
         )
     return None
+
+
+def _notice_silence(link: socket.socket) -> None:
+    """A far end that lost its power says nothing: ask it, so that the link is seen to be lost."""
+    link.setsockopt(socket.SOL_SOCKET, socket.SO_KEEPALIVE, 1)
+    for option, value in (("TCP_KEEPIDLE", 10), ("TCP_KEEPINTVL", 5), ("TCP_KEEPCNT", 3)):
+        if hasattr(socket, option):
+            link.setsockopt(socket.IPPROTO_TCP, getattr(socket, option), value)
 
 
 def _opened(path: str, baud: int) -> serial.Serial:

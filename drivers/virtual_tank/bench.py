@@ -77,6 +77,7 @@ class VirtualBench:
     def dose(self, tank: str, liquid: str, volume_ml: float, open_s: float = 0.0) -> Pour:
         """Pour from now on, evenly over `open_s`. KeyError for a name that is none."""
         poured_s = max(open_s, 1.0)
+        self.tanks[tank].forget(self.time_s)  # a bench that runs for weeks stays as small
         return self.tanks[tank].pour(self.time_s, self._liquids[liquid], volume_ml, poured_s)
 
     def fault(self, probe: str, name: str, lasts_s: float = LONGEST_S, **figures: Any) -> Fault:
@@ -84,7 +85,7 @@ class VirtualBench:
         broken = self._devices[probe].probe
         now = self.time_s
         made = make(name, now, now + lasts_s, self._rng, least_s=1.05 / broken.rate_hz, **figures)
-        broken.faults.append(made)
+        broken.faults[:] = [f for f in broken.faults if f.to_s > now] + [made]
         return made
 
     def mend(self, probe: str) -> None:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -33,6 +34,12 @@ ACTS = (
     Act(560.0, "dose", "t1", {"liquid": "deionised", "volume_ml": 90.0, "open_s": 11.0}),
     Act(700.0, "fault", "p1", {"fault": "lodged-bubble", "lasts_s": 150.0, "height": 0.22}),
 )
+LAP_S = 900.0
+
+
+def acts(lap: int = 0) -> list[Act]:
+    """What happens in the demo's next quarter of an hour; the same in every lap."""
+    return [replace(act, at_s=act.at_s + lap * LAP_S) for act in ACTS]
 
 
 def build(clock: Clock, folder: Path | None, seed: int = 1) -> tuple[VirtualBench, str]:

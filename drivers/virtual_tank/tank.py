@@ -75,6 +75,12 @@ class Tank:
         self.pours.append(poured)
         return poured
 
+    def forget(self, before_s: float) -> None:
+        """Keep of doses that were mixed by then only where they ended; the past is lost."""
+        mixing = [p for p in self.pours if p.at_s + p.response.size * GRID_S >= before_s]
+        self.start_pct = self.settled_pct - sum(p.step_pct for p in mixing)
+        self.pours = mixing
+
     @property
     def settled_pct(self) -> float:
         """Where all that was poured ends up, drift left aside."""

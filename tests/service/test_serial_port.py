@@ -204,6 +204,7 @@ async def test_port_served_over_the_network() -> None:
         "/etc/passwd",
         "/dev/../etc/passwd",
         "/dev/a\0b",
+        "/dev/tty\x1b[2J",
         "spy:///dev/ttyUSB0",
         "rfc2217://h:1",
         "socket://h",

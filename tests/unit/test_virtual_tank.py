@@ -129,6 +129,18 @@ def test_later_doses_do_not_change_the_past() -> None:
     assert np.array_equal(tank.salinity_pct(t), before)
 
 
+def test_what_is_mixed_may_be_forgotten() -> None:
+    tank = Tank(0.08, 1000.0, Mixing("loop", turbulence=0.1), rng(), water_ml_per_h=-5.0)
+    for at in (0.0, 400.0, 3000.0):
+        tank.pour(at, 0.15, 60.0, 10.0)
+    t = np.arange(3000.0, 3400.0, 0.3)
+    before = tank.salinity_pct(t)
+    tank.forget(3010.0)
+    assert len(tank.pours) == 1
+    assert tank.salinity_pct(t) == pytest.approx(before, rel=1e-12)
+    assert tank.volume_ml == 1180.0
+
+
 def test_period_is_shorter_with_more_salt_and_when_warmer() -> None:
     salinity = np.linspace(0.02, 0.2, 40)
     period = Circuit().period_us(salinity, np.full(40, 25.0))
