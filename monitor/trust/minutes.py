@@ -40,7 +40,7 @@ class Minutes:
     """The newest minutes: end of the minute, ln level, temperature, salinity, segment."""
 
     def __init__(self) -> None:
-        self._table = np.empty((_COLUMNS, 2 * MOST))
+        self._table = np.zeros((_COLUMNS, 2 * MOST))
         self.start = self.stop = 0
         self.joined: list[float] = []  # the level with the jumps between segments taken out
         self._sums = [0.0]  # of joined

@@ -8,6 +8,7 @@ import math
 import numpy as np
 import pytest
 
+from monitor import bench
 from monitor.blocks import Floats
 from monitor.findings import Finding
 from monitor.trust.intake import floor_us
@@ -80,6 +81,15 @@ def test_without_a_thermometer_a_film_must_beat_a_cooling_by_two_kelvin() -> Non
     assert "no thermometer" in said["evidence"]
     known = Stream(5.0, film=film(0.03), thermometer=False, temp_u_c=0.2)
     assert faults(known.judged()[0])[0]["t"] < said["t"]
+
+
+def test_without_standards_there_are_faults_and_no_trends() -> None:
+    stream = Stream(3.0, film=film(0.03))
+    stream.probe = bench.Probe(tank="t1")
+    stream.read_pct = stream.read_pct * np.nan
+    found, creep = stream.judged()
+    assert [finding["finding"] for finding in found] == ["fault"]
+    assert creep.cost == pytest.approx(0.03 * 2.0, rel=0.1)
 
 
 @pytest.mark.parametrize("out", [None, (9000, 9120)], ids=["in place", "taken out"])
