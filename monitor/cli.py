@@ -10,7 +10,7 @@ import sys
 
 import typer
 
-from monitor.commands import Refusal, Wrong, replay
+from monitor.commands import Refusal, Wrong, check, ports, replay, report, run, salinity, standards
 
 app = typer.Typer(
     name="stillbrine",
@@ -20,7 +20,16 @@ app = typer.Typer(
     pretty_exceptions_enable=False,
     context_settings={"help_option_names": ["-h", "--help"]},
 )
-app.command("replay")(replay.command)
+for name, module in {
+    "run": run,
+    "replay": replay,
+    "report": report,
+    "salinity": salinity,
+    "standards": standards,
+    "ports": ports,
+    "check": check,
+}.items():
+    app.command(name)(module.command)
 
 
 def main() -> None:

@@ -136,7 +136,7 @@ class Recorder:
             return
         silent = now - self._last_row_t
         due = SILENT_THEN_S if silent > SILENT_EACH_S else 1.0
-        if silent >= 1.0 and now - self._alive_t >= due or now - self._alive_t >= ALIVE_S:
+        if (silent >= 1.0 and now - self._alive_t >= due) or now - self._alive_t >= ALIVE_S:
             self._alive_t = now
             self.event("alive", {"utc": self._utc()})
         if now - self._carried_t >= CARRY_S:
