@@ -2,12 +2,15 @@
 
 Each model is a recursive least-squares fit behind a scalar Kalman filter: the filter whitens the
 turbulence (first-order autoregressive, fading as the model's tank mixes), the recursion keeps the
-coefficients, their covariance and the likelihood up to date. A second costs a dozen NumPy calls.
+coefficients, their covariance and the weight up to date. A second costs two dozen NumPy calls.
+No tank is one of the models: at every second it may go on as any other, with a small chance, so
+that a model that explained the beginning best cannot hold on when the end is another's.
 
 References
 ----------
 Kalman, J. Basic Eng. 82 (1960) 35: the filter. Hoeting, Madigan, Raftery and Volinsky, Statist.
-Sci. 14 (1999) 382: weighing models by their evidence.
+Sci. 14 (1999) 382: weighing models by their evidence. Herbster and Warmuth, Machine Learning 32
+(1998) 151: the shared weight.
 """
 
 from __future__ import annotations
@@ -16,15 +19,13 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
-from numpy.typing import NDArray
 
 from monitor.blocks import Floats
 from monitor.settling.models import SETTLE_S, TERMS, Bank, bank
 
 FEWEST = 3  # readings before the first judgement
-FORGET_EVERY = 8  # readings between two looks at models to drop
-HOPELESS = 18.0  # ln of the weight, against the best, at which a model is dropped
-LIGHT = 9.0  # models lighter than the best by this are left out of a judgement
+SWITCH = 0.01  # chance a second that the tank goes on as another of the models
+LIGHT = 9.0  # models whose ln weight is less than the best by this are left out of a judgement
 STRAY_SD = 6.0
 STRAYS = 5  # in a row are believed again
 
@@ -90,8 +91,9 @@ class Fit:
         self.cov = np.ascontiguousarray(np.moveaxis(prior, 0, -1))
         models = self.bank.tau.size
         self.c = np.zeros((TERMS, models))
-        self.rss = np.zeros(models)
-        self.ln_spread = np.zeros(models)  # sum of ln(predictive variance / floor_var)
+        self.rss = np.zeros(models)  # squared errors of prediction, each by its variance
+        self.prior = self.bank.prior_weight
+        self.weight = self.prior
         self.carried = np.zeros((TERMS + 1, models))  # the filters' states: of y, 1, g1 to g4
         self.after = np.zeros(models)  # their variance after the last reading
         self.n = 0
@@ -127,47 +129,35 @@ class Fit:
         step = cov_g / total
         self.c += step * off
         self.cov -= cov_g[:, None] * step[None]
-        self.rss += off * off / total
-        self.ln_spread += np.log(total / self.floor_var)
+        error = off * off / total
+        self.rss += error
+        ln_chance = -0.5 * (error / self.s2 + np.log(total / self.floor_var))
+        weight = self.weight * np.exp(ln_chance - ln_chance.max())
+        weight /= weight.sum()
+        self.weight = (1.0 - SWITCH) * weight + SWITCH * self.prior
         self.n += 1
         self.x = x
-        if self.n % FORGET_EVERY == 0:
-            self._forget()
+        self.s2 = max(1.0, float(self.rss.min()) / max(self.n - 3, 1))
         return True
 
     def models(self) -> Models:
-        """What the models say now, the hopeless left out."""
-        self.s2 = max(1.0, float(self.rss.min()) / max(self.n - 3, 1))
-        ln_weight = self.bank.ln_prior - 0.5 * (self.rss / self.s2 + self.ln_spread)
-        which = np.flatnonzero(ln_weight > ln_weight.max() - LIGHT)
-        weight, ln_sum = _normalised(ln_weight[which])
+        """What the models say now, the light ones left out."""
+        which = np.flatnonzero(self.weight > self.weight.max() * math.exp(-LIGHT))
+        weight = self.weight[which] / self.weight[which].sum()
         cov = self.cov[..., which] * self.s2
-        return Models(self.bank.take(which), self.x, weight, self.c[:, which], cov, self.s2, ln_sum)
+        return Models(self.bank.take(which), self.x, weight, self.c[:, which], cov, self.s2, 0.0)
 
     def _stray(self, off: Floats, total: Floats) -> bool:
         """Whether the reading is far outside of what the models expect; many in a row are not."""
         if self.n < 6:
             return False
-        best = int(self.rss.argmin())
-        if off[best] ** 2 > 9.0 * total[best]:
-            ln_weight = self.bank.ln_prior - 0.5 * (self.rss / self.s2 + self.ln_spread)
-            weight, _ = _normalised(ln_weight)
-            if float(weight @ (np.abs(off) / np.sqrt(self.s2 * total))) > STRAY_SD:
-                self.strays += 1
-                return self.strays <= STRAYS
+        best = int(self.weight.argmax())
+        far = off[best] ** 2 > 9.0 * total[best]
+        if far and float(self.weight @ (np.abs(off) / np.sqrt(self.s2 * total))) > STRAY_SD:
+            self.strays += 1
+            return self.strays <= STRAYS
         self.strays = 0
         return False
-
-    def _forget(self) -> None:
-        s2 = max(1.0, float(self.rss.min()) / max(self.n - 3, 1))
-        ln_weight = self.bank.ln_prior - 0.5 * (self.rss / s2 + self.ln_spread)
-        hopeful = ln_weight > ln_weight.max() - HOPELESS
-        if hopeful.all():
-            return
-        which: NDArray[np.intp] = np.flatnonzero(hopeful)
-        self.bank = self.bank.take(which)
-        for name in ("turbulence", "fade", "cov", "c", "rss", "ln_spread", "carried", "after"):
-            setattr(self, name, np.ascontiguousarray(getattr(self, name)[..., which]))
 
 
 def _normalised(ln_weight: Floats) -> tuple[Floats, float]:

@@ -4,8 +4,8 @@ from __future__ import annotations
 
 import math
 from collections import deque
-from collections.abc import Iterable
-from dataclasses import dataclass
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, replace
 
 from monitor.dosing.ledger import Dose
 from monitor.settling.fit import FEWEST, Fit
@@ -14,6 +14,7 @@ from monitor.settling.models import SETTLE_S
 from monitor.settling.rest import NEEDED, Expected, Judgement, judge
 
 LEDGER_ODDS = 20.0  # for the recorded dose, against anything else having gone in
+OTHER_ODDS = 1.0  # for the same volume of another liquid
 LEDGER_ERROR = 5e-4  # of the step: what the mass balance leaves out
 SOONEST = 6  # readings before rest may be called
 NEAR_BANDS = 1.2  # the filtered value has to stay this near to the landing
@@ -36,18 +37,18 @@ class Change:
     size_pct: float = 0.0  # least size of the step, where the ledger does not tell
     common: float = 0.0  # relative standard doubt that all readings have in common
 
-    @property
-    def predicted(self) -> tuple[float, float] | None:
+    def predicted(self, liquid_pct: float | None = None) -> tuple[float, float] | None:
         """Where the mass balance lands: salinity and its standard doubt as against a reading.
 
         Where all readings are too high by one factor, so are the water before and the landing
-        as read, but not what the dose brought in.
+        as read, but not what the dose brought in. `liquid_pct`: had it been another liquid.
         """
         if self.dose is None or not self.ledger:
             return None
+        dose = self.dose if liquid_pct is None else replace(self.dose, liquid_pct=liquid_pct)
         level, u_level = self.still.level_pct, self.still.u_pct
-        landing, u = self.dose.landing(level, u_level)
-        raised = self.dose.landing(level * (1.0 + self.common), u_level)[0]
+        landing, u = dose.landing(level, u_level)
+        raised = dose.landing(level * (1.0 + self.common), u_level)[0]
         u = math.hypot(u, self.common * landing - (raised - landing))
         return (landing, u) if math.isfinite(landing) and math.isfinite(u) else None
 
@@ -55,18 +56,15 @@ class Change:
 class Mixing:
     """Follows one change. Times are seconds of the run, the fit's x counts from `start_t`."""
 
-    def __init__(self, change: Change, band_pct: float) -> None:
+    def __init__(self, change: Change, band_pct: float, liquids: Mapping[str, float]) -> None:
+        """`liquids`: salinity (%) of each at hand, one of which may have been mistaken."""
         self.change = change
         self.band = band_pct
         self.start_t = change.from_t + change.open_s + SETTLE_S
         self.level_pct = change.still.level_pct  # what the fit counts from; NaN until a reading
-        self.predicted = change.predicted
-        self.step_pct = 0.0
-        self.expected: tuple[Expected, ...] = ()
-        if self.predicted is not None:
-            self.step_pct = self.predicted[0] - change.still.level_pct
-            sd = math.hypot(self.predicted[1], LEDGER_ERROR * self.step_pct)
-            self.expected = (Expected(self.step_pct, sd, LEDGER_ODDS),)
+        self.predicted = change.predicted()
+        self.expected = self._expected(liquids)
+        self.step_pct = self.expected[0].step_pct if self.expected else 0.0
         self.scale = max(3.0 * band_pct, abs(self.step_pct), change.size_pct)
         self.extra = change.extra_pct
         if self.level_pct != self.level_pct:
@@ -122,6 +120,20 @@ class Mixing:
         """Whether the readings scatter so much that what began the change goes on."""
         fit = self.fit
         return fit is not None and fit.n >= fewest and fit.s2 > times
+
+    def _expected(self, liquids: Mapping[str, float]) -> tuple[Expected, ...]:
+        """The step of the recorded dose first, then those of the other liquids."""
+        change = self.change
+        if self.predicted is None or change.dose is None:
+            return ()
+        own = change.dose.liquid
+        others = [change.predicted(pct) for name, pct in liquids.items() if name != own]
+        steps = []
+        for landing, odds in [(self.predicted, LEDGER_ODDS), *((o, OTHER_ODDS) for o in others)]:
+            if landing is not None:
+                step = landing[0] - change.still.level_pct
+                steps.append(Expected(step, math.hypot(landing[1], LEDGER_ERROR * step), odds))
+        return tuple(steps)
 
     def _fit(self, salinity_pct: float) -> Fit:
         still = self.change.still

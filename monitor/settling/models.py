@@ -43,7 +43,7 @@ class Bank:
     slope: Floats  # (M,)
     ahead: Floats  # (6, M) s, the moments at which a model is asked whether it stays at rest
     level: Floats  # (M,) turbulence
-    ln_prior: Floats  # (M,)
+    prior_weight: Floats  # (M,) sums to 1
 
     def take(self, which: NDArray[Any]) -> Bank:
         """The models `which` alone."""
@@ -113,7 +113,7 @@ def bank() -> Bank:
     count = np.bincount(kind)[kind]
     return Bank(
         kind, tau, rates.T.copy(), omega, phase, flat, slope, ahead.T.copy(), level,
-        -np.log(3.0 * count),
+        1.0 / (3.0 * count),
     )  # fmt: skip
 
 

@@ -70,6 +70,7 @@ class Settling:
         self.band = settings.rest_band_pct
         self.doubt = Doubt(calibration, temp_u_c, temp_c) if calibration is not None else None
         self.records = Records(probe, tank, self.doubt, liquids or {}) if self.doubt else None
+        self.liquids = liquids or {}
         self.history = History()
         self.level = Level(self.band)
         self.mixing: Mixing | None = None
@@ -251,7 +252,7 @@ class Settling:
         self._onset_t = None
         self.level.restart()
         self.outlook = None
-        self.mixing = Mixing(change, self.band)
+        self.mixing = Mixing(change, self.band, self.liquids)
         self.mixing.catch_up(self.history.since(change.from_t))
 
     def _follow_anew(self) -> None:
