@@ -67,7 +67,8 @@ def replay(command: str, logs: list[Path], bench: Path) -> tuple[list[Record], f
     done = subprocess.run(argv, capture_output=True, text=True, timeout=600, check=False)
     took = time.perf_counter() - began
     if done.returncode != 0:
-        raise RuntimeError(f"exit {done.returncode}: {done.stderr.strip()[-300:]}")
+        last = done.stderr.strip().rpartition("\n")[2]
+        raise RuntimeError(f"exit {done.returncode}: {last[:300]}")
     return [json.loads(line) for line in done.stdout.splitlines() if line.strip()], took
 
 
