@@ -61,9 +61,7 @@ def test_the_event_of_a_probe_reads_back_the_same() -> None:
         (("[logs]", "[lgos]"), "lgos", "logs, perhaps"),
     ],
 )
-def test_what_is_wrong_is_said_in_one_line(
-    change: tuple[str, str], place: str, said: str
-) -> None:
+def test_what_is_wrong_is_said_in_one_line(change: tuple[str, str], place: str, said: str) -> None:
     with pytest.raises(BenchError) as wrong:
         parse(GOOD.replace(*change), "b.toml")
     line = str(wrong.value)
