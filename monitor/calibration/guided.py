@@ -112,10 +112,15 @@ class GuidedRun:
         if self.phase == "question":
             return f"{self.why}; keep or drop it?"
         left = self.to_come()
+        if not self.taken and not self.why:
+            return f"into which standard first?{' ' + self._list(left) if left else ''}"
         after = "; ".join(part for part in (self.why, "rinse the probe") if part)
         if not left:
             return f"{after}; all {len(self.taken)} taken: another one, or done?"
-        return f"{after}; into which standard next? {', '.join(f'{s:g}' for s in left)} % to come"
+        return f"{after}; into which standard next? {self._list(left)}"
+
+    def _list(self, left: Sequence[float]) -> str:
+        return f"{', '.join(f'{s:g}' for s in left)} % to come"
 
     def to_come(self) -> list[float]:
         """Planned salinities that are not taken yet."""

@@ -24,6 +24,10 @@ MS_PER_PCT = 21.0  # d conductivity / d salinity, roughly: turns doubt of salini
 LEAST_SALTS_MS = 1e-4  # the water's own conductivity beside a standard of 0 %
 
 
+USUAL_T0 = (0.05, 0.04)
+LONG_T0 = (0.4, 0.2)  # a circuit whose own resistor is no smaller than the probe's
+
+
 @dataclass(frozen=True)
 class Prior:
     """What is known of theta beforehand: means (5,) and the inverse of its covariance (5, 5)."""
@@ -37,10 +41,13 @@ class Prior:
         return np.asarray(1 / np.sqrt(np.diag(self.weight)))
 
 
-def first_prior(top_us: float) -> Prior:
-    """Prior for a new probe whose shortest standard period is `top_us`."""
-    mean = np.array([0.05 * top_us, 0.0, 0.98, 0.0, 0.0015])
-    sd = np.array([0.04 * top_us, 1e6, 0.015, 0.003, 0.001])
+def first_prior(top_us: float, share: tuple[float, float] = USUAL_T0) -> Prior:
+    """Prior for a new probe whose shortest standard period is `top_us`.
+
+    `share`: mean and sd of t0 as a share of that period.
+    """
+    mean = np.array([share[0] * top_us, 0.0, 0.98, 0.0, 0.0015])
+    sd = np.array([share[1] * top_us, 1e6, 0.015, 0.003, 0.001])
     return Prior(mean, np.diag(1 / sd**2))
 
 

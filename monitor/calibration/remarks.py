@@ -15,7 +15,7 @@ from monitor.calibration.student import f_tail
 
 if TYPE_CHECKING:
     from monitor.bench import Standard
-    from monitor.calibration.fitting import Hypotheses
+    from monitor.calibration.hypotheses import Hypotheses
 
 SCATTER_PCT = 0.2  # scatter of the standards beyond which it is said
 LACK_OF_FIT_P = 0.05

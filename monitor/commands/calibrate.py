@@ -125,8 +125,8 @@ def _with_probe(
         medium_of(medium)
     except OutOfRangeError as wrong:
         raise Wrong(f"--medium: {wrong}") from None
-    gap = "\n" if text and not text.endswith("\n\n") else ""
-    return text + gap + new_bench(probe, port, medium, tick_us)
+    gap = "\n" if text.endswith("\n") else "\n\n"
+    return (text + gap if text.strip() else text) + new_bench(probe, port, medium, tick_us)
 
 
 def _from_table(table: Path) -> list[dict[str, Any]]:

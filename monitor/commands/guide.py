@@ -181,6 +181,8 @@ class Guide:
         taken = self.run.taken
         if len(taken) == self._kept:
             return
+        if len(taken) > self._kept:
+            taken[-1]["taken"] = self._clock.utc().isoformat(timespec="seconds")
         self._kept = len(taken)
         if self._resume is None:
             return

@@ -197,9 +197,11 @@ def _checks(path: Path, probe: str, calibration: Calibration) -> list[Check]:
 
 
 def _utc(text: str | None) -> datetime | None:
-    if text is None:
+    """The time that a text holds; None where it holds none (`taken` is the user's own text)."""
+    try:
+        when = datetime.fromisoformat(text or "")
+    except ValueError:
         return None
-    when = datetime.fromisoformat(text)
     return when if when.tzinfo else when.replace(tzinfo=UTC)
 
 

@@ -17,8 +17,9 @@ from scipy.optimize import least_squares
 
 from monitor.bench import Standard
 from monitor.calibration import Calibration, CalibrationError, fit
-from monitor.calibration.fitting import TAU_PCT, hypotheses_of, read_rows
+from monitor.calibration.hypotheses import TAU_PCT, hypotheses_of
 from monitor.calibration.model import evaluate, first_prior, solve
+from monitor.calibration.readings import read_rows
 
 SALINITY = [0.025, 0.05, 0.075, 0.1, 0.125, 0.15]
 PERIOD = [1370.413, 715.648, 489.947, 374.923, 307.930, 260.240]

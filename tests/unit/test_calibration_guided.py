@@ -50,7 +50,7 @@ class Bench:
 
 def test_six_standards_in_any_order_give_a_calibration() -> None:
     bench = Bench()
-    assert "into which standard next" in bench.run.say()
+    assert "into which standard first? 0.025, 0.05" in bench.run.say()
     for salinity in (0.1, 0.025, 0.15, 0.05, 0.075, 0.125):
         bench.take(salinity)
         assert bench.run.phase == "ask"
