@@ -12,6 +12,7 @@ import argparse
 import asyncio
 import contextlib
 import math
+import re
 import signal
 import sys
 import time
@@ -123,9 +124,10 @@ def main() -> int:
     if not 0 < given.speed <= 1000:
         print(f"--speed: {given.speed} is not accepted; expected 0 to 1000", file=sys.stderr)
         return 2
+    folder = shelf("virtual-" + re.sub(r"[^A-Za-z0-9_-]", "_", given.bench.stem)[:40])
     try:
         tables = tomllib.loads(given.bench.read_text())
-        bench = build(tables, FastClock(given.speed), shelf("virtual"))
+        bench = build(tables, FastClock(given.speed), folder)
     except (OSError, ValueError, KeyError, TypeError, AttributeError) as wrong:
         why = f"{type(wrong).__name__}: {wrong}".replace("\n", " ")
         print(f"{given.bench}: no bench file that checks ({why!a})", file=sys.stderr)
@@ -133,6 +135,9 @@ def main() -> int:
     signal.signal(signal.SIGTERM, signal.default_int_handler)  # take the ports away then, too
     with contextlib.suppress(KeyboardInterrupt):
         asyncio.run(serve(bench))
+    if folder is not None:
+        with contextlib.suppress(OSError):  # another one still uses it
+            folder.rmdir()
     return 0
 
 
