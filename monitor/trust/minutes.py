@@ -147,6 +147,22 @@ def fit(time_s: Floats, value: Floats, temp_c: Floats, segment: Floats, scale: f
     return Line(slope, u, rms, span_h, slope * span_h, share, by_temp)
 
 
+def knee(time_s: Floats, level: Floats) -> tuple[float, float]:
+    """When a creep began and the level before it: flat, then a line, by least squares.
+
+    time_s, level : (n,) float64, n > ENDS
+    """
+    knees = time_s[:-ENDS]
+    ramps = np.maximum(time_s - knees[:, None], 0.0)
+    ramps -= ramps.mean(axis=1)[:, None]
+    off = level - level.mean()
+    gain = ramps @ off
+    best = int(np.argmax(gain * gain / (ramps * ramps).sum(axis=1)))
+    ramp = ramps[best]
+    slope = float(gain[best]) / float(ramp @ ramp)
+    return float(knees[best]), float(level.mean()) + slope * float(ramp[0])
+
+
 def _centred(values: Floats, edges: NDArray[np.intp]) -> Floats:
     """The values less the mean of their segment."""
     if not len(edges):

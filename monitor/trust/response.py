@@ -21,6 +21,7 @@ OFF = 4.0  # doubts: a dose that fits neither cause was wrong itself
 WIDEN = 1.5
 STEP_U = (0.01, 0.005, 0.01)  # of the step: volume, liquid, calibration
 READING_U = 0.0005  # of the reading
+CREEP_U = 0.15  # of what creeps on while the dose mixes
 
 
 @dataclass(frozen=True)
@@ -31,6 +32,7 @@ class Asked:
     salinity_pct: float  # read before it
     cost: float  # ln period risen so far
     slope: float  # ln period an hour
+    slope_u: float
     t: float  # when it was read
 
 
@@ -45,7 +47,8 @@ def favours_fouling(asked: Asked, after_pct: float, t: float) -> float:
     t : s, when
     """
     dose, read = asked.dose, asked.salinity_pct
-    creep = asked.slope * (t - asked.t) / 3600.0
+    hours = (t - asked.t) / 3600.0
+    creep = asked.slope * hours
     lost = asked.cost / POWER
     landed, _ = dose.landing(read * math.exp(lost), 0.0)
     fouled = landed * math.exp(-lost - creep / POWER)
@@ -53,7 +56,8 @@ def favours_fouling(asked: Asked, after_pct: float, t: float) -> float:
     fuller = replace(dose, tank_ml=dose.tank_ml * (1.0 + 0.5 * lost))
     diluted = fuller.landing(read, 0.0)[0] * (1.0 - creep / POWER)
     step = abs(landed - read * math.exp(lost))
-    u = WIDEN * math.hypot(step * math.hypot(*STEP_U), READING_U * read)
+    creep_u = math.hypot(asked.slope_u * hours, CREEP_U * creep)
+    u = WIDEN * math.hypot(step * math.hypot(*STEP_U), READING_U * read, creep_u * read)
     u_diluted = math.hypot(u, 0.3 * lost * step)
     z_fouled, z_diluted = (after_pct - fouled) / u, (after_pct - diluted) / u_diluted
     if min(abs(z_fouled), abs(z_diluted)) > OFF:

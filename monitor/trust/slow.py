@@ -20,7 +20,7 @@ from monitor.blocks import NAN, Second
 from monitor.dosing.ledger import Change, Dose
 from monitor.findings import Finding
 from monitor.trust.intake import SETTLE_S, Intake, Levelled
-from monitor.trust.minutes import ENDS, Line, Minutes, fit
+from monitor.trust.minutes import ENDS, Line, Minutes, fit, knee
 from monitor.trust.response import DECIDED, Asked, favours_fouling
 
 # minutes and the least rise (ln) over them
@@ -33,6 +33,8 @@ STRAIGHT = (0.33, 0.85)  # share of the last third; the tail of a mixing brakes
 YOUNG_S, YOUNG_LEAST = 5400.0, 0.42  # so soon after a dose or step it must be straighter
 TEMP_U_C = 1.0  # of a tank without a thermometer, where the bench does not say
 PER_C = 0.0212  # ln period a Celsius near 25 C
+LATELY = 40  # minutes whose slope is the creep's slope of late
+MIXED = 3  # minutes read once a dose has mixed
 LEAST_RISING = 10  # minutes through which its own slope is drawn
 GONE_MIN, GONE = 50, 0.3  # that long a slope surely under that share of the one said
 WATER = 1.6  # a creep explained as water is doubted again when that much steeper
@@ -178,8 +180,9 @@ class Creep:
         return level.noise >= 0.4 * tick or line.rise >= TICKS * tick
 
     def _say(self, t: float, line: Line) -> Finding:
-        from_t, self._base = self._knee()
-        since = int(np.sum(self.minutes.column(0, len(self.minutes)) > from_t + 30.0))
+        times = self.minutes.column(0, len(self.minutes))
+        from_t, self._base = knee(times - 30.0, np.array(self.minutes.joined))
+        since = int(np.sum(times - 30.0 > from_t))
         if since >= LEAST_RISING:  # the window also held what lay before the creep
             line = self._line(since)
         self._slope, self._u = line.slope, line.u
@@ -210,20 +213,6 @@ class Creep:
             f" {100.0 * self._slope:.2f} +- {200.0 * self._u:.2f} %/h,"
             f" {warmth}; {CAUSES[self.cause]}"
         )
-
-    def _knee(self) -> tuple[float, float]:
-        """When the creep began and the level before it: flat, then a line, by least squares."""
-        time_s = self.minutes.column(0, len(self.minutes))
-        level = np.array(self.minutes.joined)
-        knees = time_s[:-ENDS]
-        ramps = np.maximum(time_s - knees[:, None], 0.0)
-        ramps -= ramps.mean(axis=1)[:, None]
-        off = level - level.mean()
-        gain = ramps @ off
-        best = int(np.argmax(gain * gain / (ramps * ramps).sum(axis=1)))
-        ramp = ramps[best]
-        slope = float(gain[best]) / float(ramp @ ramp)
-        return float(knees[best]) - 30.0, float(level.mean()) + slope * float(ramp[0])
 
     def _follow(self, t: float) -> list[Finding]:
         """The creep in force: answered by a dose, wiped, or gone?"""
@@ -258,12 +247,23 @@ class Creep:
         salinity = float(self.minutes.column(3, kept)[before - 3 : before].mean())
         if salinity == salinity:
             read_t = float(times[before - 2]) - 30.0
-            self._asked = Asked(dose, salinity, self.cost, self._slope, read_t)
+            slope, u = self._now()
+            self._asked = Asked(dose, salinity, self.cost, slope, u, read_t)
+
+    def _now(self) -> tuple[float, float]:
+        """The creep's slope of late and its u: a film may slow down as it grows."""
+        wide = min(len(self.minutes), LATELY)
+        if wide < LEAST_RISING or not self.minutes.one_segment(wide):
+            return self._slope, self._u
+        line = self._line(wide)
+        return line.slope, line.u
 
     def _answered(self, t: float, asked: Asked) -> list[Finding]:
         """A dose has mixed: what does its answer speak for?"""
+        if not self.minutes.one_segment(MIXED):
+            return []
         self._asked = None
-        odds = favours_fouling(asked, float(self.minutes.column(3, 1)[0]), t)
+        odds = favours_fouling(asked, float(self.minutes.column(3, MIXED).mean()), t - 30.0 * MIXED)
         if odds != odds:
             return []
         self._odds += odds

@@ -13,7 +13,7 @@ from tests.unit.streams import dose
 
 GIVEN = dose(7200.0, 250.0, 0.15)
 READ, COST, SLOPE = 0.08, 0.03, 0.02
-ASKED = Asked(GIVEN, READ, COST, SLOPE, 7200.0)
+ASKED = Asked(GIVEN, READ, COST, SLOPE, 0.0005, 7200.0)
 AFTER_T = 8400.0
 
 
@@ -45,11 +45,12 @@ def test_a_dose_of_unknown_volume_or_liquid_says_nothing(unknown: str) -> None:
         READ,
         COST,
         SLOPE,
+        0.0005,
         7200.0,
     )
     assert math.isnan(favours_fouling(vague, seen_clean(), AFTER_T))
 
 
 def test_a_small_film_is_not_decided_by_one_dose() -> None:
-    slight = Asked(GIVEN, READ, 0.004, 0.0, 7200.0)
+    slight = Asked(GIVEN, READ, 0.004, 0.0, 0.0005, 7200.0)
     assert abs(favours_fouling(slight, GIVEN.landing(READ, 0.0)[0], AFTER_T)) < 1.0
