@@ -73,7 +73,7 @@ class Decoder:
 
     def opened(self, now_s: float) -> None:
         """The port was opened at `now_s`: half a line from before will not go on."""
-        if self._tail and not self._skipping:
+        if self._tail:
             self._reject("cut off", self._tail, now_s)
         self._tail, self._skipping = "", False
         self._opened_s = now_s
@@ -84,12 +84,12 @@ class Decoder:
         if lines and self._skipping:
             del lines[0]
             self._skipping = False
-        if len(tail) > LINE_MAX + 1:  # one more, for the CR of a line that just fits
-            if not self._skipping:
-                self._reject("too long", tail, now_s)
-            self._skipping, tail = True, tail[: LINE_MAX + 2]
+        readings = self._read(lines, now_s)
+        if len(tail) > LINE_MAX + 1 and not self._skipping:  # one more: a CR may be its last
+            self._reject("too long", tail, now_s)
+            self._skipping = True
         self._tail = "" if self._skipping else tail
-        return self._read(lines, now_s)
+        return readings
 
     def take_rejected(self) -> dict[str, Any] | None:
         """Fields of a `rejected` event for what was no reading since the last call."""

@@ -126,18 +126,23 @@ def main() -> int:
         return 2
     folder = shelf("virtual-" + re.sub(r"[^A-Za-z0-9_-]", "_", given.bench.stem)[:40])
     try:
-        tables = tomllib.loads(given.bench.read_text())
-        bench = build(tables, FastClock(given.speed), folder)
+        return _serve_file(given.bench, given.speed, folder)
+    finally:
+        if folder is not None:
+            with contextlib.suppress(OSError):  # another one still uses it
+                folder.rmdir()
+
+
+def _serve_file(file: Path, speed: float, folder: Path | None) -> int:
+    try:
+        bench = build(tomllib.loads(file.read_text()), FastClock(speed), folder)
     except (OSError, ValueError, KeyError, TypeError, AttributeError) as wrong:
         why = f"{type(wrong).__name__}: {wrong}".replace("\n", " ")
-        print(f"{given.bench}: no bench file that checks ({why!a})", file=sys.stderr)
+        print(f"{file}: no bench file that checks ({why!a})", file=sys.stderr)
         return 2
     signal.signal(signal.SIGTERM, signal.default_int_handler)  # take the ports away then, too
     with contextlib.suppress(KeyboardInterrupt):
         asyncio.run(serve(bench))
-    if folder is not None:
-        with contextlib.suppress(OSError):  # another one still uses it
-            folder.rmdir()
     return 0
 
 
