@@ -149,6 +149,7 @@ class Trust:
         self.usable = self.usable and self.belief != "not-believed"
         self._busy = bool(
             not self.level.locked
+            or second.k < self.level.locked_k + lodged.ALL
             or set(self.faults) - {"fouling"}
             or self._jumps.last
             or self._blind
@@ -178,7 +179,7 @@ class Trust:
 
     def _anew(self, t: float) -> None:
         """What was read before tells nothing of what comes."""
-        self.level.forget(t)
+        self.level.forget()
         self._jumps.forget()
         self._hum.forget()
         self._silence.restart(t)

@@ -60,7 +60,7 @@ class Level:
         self.rate_hz = carried.get("rate_hz") or settings.rate_hz or 0.0
         self.gate = GATE[1]
         self.medians: deque[tuple[int, float]] = deque(maxlen=64)
-        self.mixing_since_k = 0
+        self.locked_k = -1  # the second in which it locked last
         self.dosed_until_t = -math.inf
         self.step_ln = 0.0  # largest |ln| step that the newest dose can make
         self._lost = 0
@@ -91,20 +91,18 @@ class Level:
             else:
                 self.dosed_until_t = max(self.dosed_until_t, t)
                 self.step_ln = 0.1
-            self.unlock(t)
+            self.unlock()
 
-    def unlock(self, t: float) -> None:
+    def unlock(self) -> None:
         """Believe no level until the readings stand still again."""
-        if self.locked:
-            self.mixing_since_k = int(t)
         self.locked = False
         self._lost = 0
         self._recent.clear()
         self._scale = 0.0
 
-    def forget(self, t: float) -> None:
+    def forget(self) -> None:
         """What was read before tells nothing of what comes (out and back, a gap)."""
-        self.unlock(t)
+        self.unlock()
         self.medians.clear()
 
     def calm(self, second: Second) -> bool:
@@ -166,13 +164,13 @@ class Level:
         else:
             self._miss(second, noisy)
         if self.locked and drifting and self._sat_wrong():
-            self.unlock(second.t)
+            self.unlock()
         return [Judged(second.k, time_s, ln_us, m, self.gate, drifting)]
 
     def _miss(self, second: Second, noisy: bool) -> None:
         self._lost += 1
         if self.locked and self._lost >= (LOST_NOISY_S if noisy else LOST_S):
-            self.unlock(second.t)
+            self.unlock()
 
     def _sat_wrong(self) -> bool:
         """The median of 25 medians is beyond 0.8 of the gate: the level is another."""
@@ -208,6 +206,7 @@ class Level:
         end, moves, spread = line([ln for _, ln in last])
         if spread < 2.2 * self.sb + 0.0005 and abs(moves) < max(0.004, 5.0 * self.sb):
             self.locked = True
+            self.locked_k = second.k
             self.m = end
             self._lost = 0
 
