@@ -1,7 +1,7 @@
 """Limits: outside the band that is aimed at, or changing faster than is allowed.
 
 Rules:
-- `high` and `low` begin after 10 s beyond the bound and end after 30 s back inside by the doubt of
+- `high` and `low` begin after 10 s beyond the bound and end after 60 s back inside by the doubt of
   the reading or 2 % of the band, whichever is more.
 - `fast` is judged every half minute on the last five: the change from the first minute to the last
   must beat the bound by twice its noise to begin, and fall below 0.8 of the bound to end. A slope
@@ -23,7 +23,7 @@ from monitor.blocks import NAN, Second
 from monitor.findings import Finding
 from monitor.trust.measures import mad_sd
 
-BEGIN_S, END_S = 10, 30
+BEGIN_S, END_S = 10, 60
 OF_BAND = 0.02
 SMOOTH = 0.3  # share of a second in the salinity that is held against the band
 HALF_S = 30

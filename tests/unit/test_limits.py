@@ -50,7 +50,7 @@ def test_beyond_the_band_is_said_once_and_ended_once() -> None:
     assert (said["which"], said["bound"], said["to_t"]) == ("high", 0.11, None)
     assert said["value"] > 0.11
     assert 100 <= said["from_t"] < said["t"] <= 120
-    assert 430 <= ended["to_t"] <= 450
+    assert 460 <= ended["to_t"] <= 480
     assert {**ended, "t": 0, "to_t": 0} == {**said, "t": 0, "to_t": 0}
 
 
