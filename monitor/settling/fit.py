@@ -17,6 +17,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 
@@ -25,9 +26,18 @@ from monitor.settling.models import SETTLE_S, TERMS, Bank, bank
 
 FEWEST = 3  # readings before the first judgement
 SWITCH = 0.01  # chance a second that the tank goes on as another of the models
-LIGHT = 9.0  # models whose ln weight is less than the best by this are left out of a judgement
-STRAY_SD = 6.0
+LIGHT = 1e-4  # models of less weight than this, against the best, are left out of a judgement
+EDDIES = 0.375  # what a second's mean leaves of the variance of turbulence
+STRAY_SD, STRAY_N = 6.0, 6  # off by so many standard deviations, after so many readings
 STRAYS = 5  # in a row are believed again
+
+
+class Innovation(NamedTuple):
+    """A value against its prediction, for M models."""
+
+    off: Floats  # (M,) value - prediction
+    var: Floats  # (M,) of that
+    cov_g: Floats  # (T, M) covariance of the coefficients with the prediction
 
 
 @dataclass(frozen=True)
@@ -40,7 +50,7 @@ class Models:
     c: Floats  # (5, H)
     cov: Floats  # (5, 5, H)
     s2: float  # how much more scatter there is than was foreseen, at least 1
-    ln_evidence: float
+    ln_evidence: float  # of what was observed beyond the fit
 
     def landing(self) -> tuple[float, float]:
         """Mean and standard deviation of c0."""
@@ -71,6 +81,70 @@ class Models:
         )
 
 
+class LeastSquares:
+    """Recursive least squares of M linear models at once, T terms each.
+
+    Parameters
+    ----------
+    cov : (T, T, M), covariance of the coefficients before any reading; their means are 0
+    """
+
+    def __init__(self, cov: Floats) -> None:
+        self.cov = np.ascontiguousarray(cov)
+        self.c = np.zeros(cov.shape[1:])
+        self.rss = np.zeros(cov.shape[2])  # squared errors of prediction, each by its variance
+
+    def foresee(self, terms: Floats, value: Floats, var: Floats) -> Innovation:
+        """How far the value (M,), of noise var (M,), is from what terms (T, M) predict."""
+        cov_g = (self.cov * terms).sum(axis=1)
+        total = var + (terms * cov_g).sum(axis=0)
+        return Innovation(value - (terms * self.c).sum(axis=0), total, cov_g)
+
+    def learn(self, seen: Innovation) -> Floats:
+        """Take the value in; its squared error by the variance predicted, (M,)."""
+        step = seen.cov_g / seen.var
+        self.c += step * seen.off
+        self.cov -= seen.cov_g[:, None] * step[None]
+        error = seen.off * seen.off / seen.var
+        self.rss += error
+        return error
+
+
+class Whitening:
+    """Scalar Kalman filters that take the fading turbulence out of the readings and the terms.
+
+    Parameters
+    ----------
+    var : (M,) %^2, of the turbulence when the dose has run in
+    tau : (M,) s, with which it fades
+    floor_var : %^2, of one second's mean in still water
+    """
+
+    def __init__(self, var: Floats, tau: Floats, floor_var: float) -> None:
+        self.var, self.tau, self.floor_var = var, tau, floor_var
+        self.fade = np.exp(-0.25 - 1.0 / tau)  # in a second: eddies live 4 s
+        self.after = np.zeros(tau.size)  # variance of the turbulence after the last reading
+        self.state = np.zeros((TERMS + 1, tau.size))  # of the value and the terms
+        self.x = math.nan
+
+    def innovations(self, x: float, rows: Floats) -> tuple[Floats, Floats, Floats]:
+        """Rows (T + 1, M) without what the filters expected: with that, and the variance (M,)."""
+        entry = self.var * np.exp(-2.0 * (x + SETTLE_S) / self.tau)
+        if self.x != self.x:
+            return rows, self.state, entry
+        steps = x - self.x
+        fade = self.fade if steps == 1.0 else self.fade**steps
+        held = fade * self.state
+        return rows - held, held, fade * fade * self.after + entry * -math.expm1(-0.5 * steps)
+
+    def learn(self, x: float, white: Floats, held: Floats, before: Floats) -> None:
+        """Take in what `innovations` gave."""
+        gain = before / (before + self.floor_var)
+        self.state = held + gain * white
+        self.after = before * (1.0 - gain)
+        self.x = x
+
+
 class Fit:
     """Follow the salinity after a dose, relative to where it stood before.
 
@@ -85,17 +159,11 @@ class Fit:
     def __init__(self, open_s: float, scale: float, extra: float, floor_var: float) -> None:
         self.bank = bank()
         self.floor_var = floor_var
-        self.turbulence = 0.375 * (self.bank.level * (scale + extra)) ** 2
-        self.fade = np.exp(-0.25 - 1.0 / self.bank.tau)
-        prior = np.linalg.inv(self.bank.prior(max(open_s, 0.5), scale, extra))
-        self.cov = np.ascontiguousarray(np.moveaxis(prior, 0, -1))
-        models = self.bank.tau.size
-        self.c = np.zeros((TERMS, models))
-        self.rss = np.zeros(models)  # squared errors of prediction, each by its variance
-        self.prior = self.bank.prior_weight
-        self.weight = self.prior
-        self.carried = np.zeros((TERMS + 1, models))  # the filters' states: of y, 1, g1 to g4
-        self.after = np.zeros(models)  # their variance after the last reading
+        turbulence = EDDIES * (self.bank.level * (scale + extra)) ** 2
+        self.whitening = Whitening(turbulence, self.bank.tau, floor_var)
+        prior: Floats = np.linalg.inv(self.bank.prior(open_s, scale, extra))
+        self.squares = LeastSquares(np.moveaxis(prior, 0, -1))
+        self.weight = self.bank.weight
         self.n = 0
         self.x = math.nan
         self.s2 = 1.0
@@ -103,59 +171,44 @@ class Fit:
 
     def add(self, x: float, y: float) -> bool:
         """Take in the reading y (%) of the second whose middle is x; False if it is a stray one."""
-        bank_ = self.bank
-        entry = self.turbulence * np.exp(-2.0 * (x + SETTLE_S) / bank_.tau)
-        row = np.empty_like(self.carried)
-        row[0], row[1] = y, 1.0
-        row[2:] = bank_.shapes(np.array([[x]]))[:, 0]
-        if self.n:
-            steps = x - self.x
-            fade = self.fade if steps == 1.0 else self.fade**steps
-            before = fade * fade * self.after + entry * (1.0 - math.exp(-0.5 * steps))
-            held = fade * self.carried
-            row -= held
-        else:
-            before, held = entry, self.carried
-        white = before + self.floor_var
-        g = row[1:]
-        cov_g = (self.cov * g).sum(axis=1)
-        total = white + (g * cov_g).sum(axis=0)
-        off = row[0] - (g * self.c).sum(axis=0)
-        if self._stray(off, total):
+        rows = np.empty((TERMS + 1, self.bank.tau.size))
+        rows[0], rows[1] = y, 1.0
+        rows[2:] = self.bank.shapes(np.array([[x]]))[:, 0]
+        white, held, before = self.whitening.innovations(x, rows)
+        seen = self.squares.foresee(white[1:], white[0], before + self.floor_var)
+        if self._stray(seen):
             return False
-        gain = before / white
-        self.carried = held + gain * row
-        self.after = before * (1.0 - gain)
-        step = cov_g / total
-        self.c += step * off
-        self.cov -= cov_g[:, None] * step[None]
-        error = off * off / total
-        self.rss += error
-        ln_chance = -0.5 * (error / self.s2 + np.log(total / self.floor_var))
-        weight = self.weight * np.exp(ln_chance - ln_chance.max())
-        weight /= weight.sum()
-        self.weight = (1.0 - SWITCH) * weight + SWITCH * self.prior
+        self.whitening.learn(x, white, held, before)
+        error = self.squares.learn(seen)
+        self._weigh(-0.5 * (error / self.s2 + np.log(seen.var)))
         self.n += 1
         self.x = x
-        self.s2 = max(1.0, float(self.rss.min()) / max(self.n - 3, 1))
+        self.s2 = max(1.0, float(self.squares.rss.min()) / max(self.n - 3, 1))
         return True
 
     def models(self) -> Models:
         """What the models say now, the light ones left out."""
-        which = np.flatnonzero(self.weight > self.weight.max() * math.exp(-LIGHT))
+        which = np.flatnonzero(self.weight > self.weight.max() * LIGHT)
         weight = self.weight[which] / self.weight[which].sum()
-        cov = self.cov[..., which] * self.s2
-        return Models(self.bank.take(which), self.x, weight, self.c[:, which], cov, self.s2, 0.0)
+        c, cov = self.squares.c[:, which], self.squares.cov[..., which] * self.s2
+        return Models(self.bank.take(which), self.x, weight, c, cov, self.s2, 0.0)
 
-    def _stray(self, off: Floats, total: Floats) -> bool:
+    def _weigh(self, ln_chance: Floats) -> None:
+        weight = self.weight * np.exp(ln_chance - ln_chance.max())
+        weight /= weight.sum()
+        self.weight = (1.0 - SWITCH) * weight + SWITCH * self.bank.weight
+
+    def _stray(self, seen: Innovation) -> bool:
         """Whether the reading is far outside of what the models expect; many in a row are not."""
-        if self.n < 6:
+        if self.n < STRAY_N:
             return False
         best = int(self.weight.argmax())
-        far = off[best] ** 2 > 9.0 * total[best]
-        if far and float(self.weight @ (np.abs(off) / np.sqrt(self.s2 * total))) > STRAY_SD:
-            self.strays += 1
-            return self.strays <= STRAYS
+        far = seen.off[best] ** 2 > 9.0 * seen.var[best]
+        if far:
+            sds = np.abs(seen.off) / np.sqrt(self.s2 * seen.var)
+            if float(self.weight @ sds) > STRAY_SD:
+                self.strays += 1
+                return self.strays <= STRAYS
         self.strays = 0
         return False
 

@@ -19,6 +19,7 @@ LEDGER_ERROR = 5e-4  # of the step: what the mass balance leaves out
 SOONEST = 6  # readings before rest may be called
 NEAR_BANDS = 1.2  # the filtered value has to stay this near to the landing
 NEAR_S, NEAR_ALONE_S = 8, 30  # for so long, with the ledger and without it
+FLAT_SURE, FLAT_BANDS, FLAT_S = 0.95, 0.5, 60  # standing still elsewhere than the ledger says
 UNLIKELY = 0.3  # below this chance of rest every third reading is judged
 SHORTEST_S = 0.5  # a dose poured at once
 UNKNOWN_BANDS = 10.0  # size of a change that nothing tells anything about
@@ -67,11 +68,13 @@ class Mixing:
         self.step_pct = self.expected[0].step_pct if self.expected else 0.0
         self.scale = max(3.0 * band_pct, abs(self.step_pct), change.size_pct)
         self.extra = change.extra_pct
+        if self.level_pct != self.level_pct or not (self.expected or change.size_pct):
+            self.scale = UNKNOWN_BANDS * band_pct
         if self.level_pct != self.level_pct:
-            self.scale = self.extra = UNKNOWN_BANDS * band_pct
+            self.extra = self.scale
         self.fit: Fit | None = None
         self.judgement: Judgement | None = None
-        self.filtered: deque[tuple[int, float]] = deque(maxlen=NEAR_ALONE_S + 1)
+        self.filtered: deque[tuple[int, float]] = deque(maxlen=FLAT_S + 1)
         self.ready = 0  # judgements in a row that say rest
 
     def follow(self, k: int, salinity_pct: float, filtered_pct: float) -> bool:
@@ -153,13 +156,16 @@ class Mixing:
             return False
         if said.p_told > 0.5:
             sure = said.p_rest > 0.93 and said.p_rest_free > 0.15
-            return sure and self._stayed(said.landing[0], k, NEAR_S)
+            if sure and self._stayed(said.landing[0], k, NEAR_S):
+                return True
+            flat = said.p_rest_free > FLAT_SURE
+            return flat and self._stayed(said.landing_free[0], k, FLAT_S, FLAT_BANDS)
         return said.p_rest_free > 0.8 and self._stayed(said.landing_free[0], k, NEAR_ALONE_S)
 
-    def _stayed(self, step_pct: float, k: int, for_s: int) -> bool:
+    def _stayed(self, step_pct: float, k: int, for_s: int, bands: float = NEAR_BANDS) -> bool:
         """Whether the filtered value was near the landing for so long."""
         landing = self.level_pct + step_pct
-        bound = NEAR_BANDS * self.band
-        if self.filtered[0][0] > k - for_s and len(self.filtered) <= NEAR_ALONE_S:
+        bound = bands * self.band
+        if self.filtered[0][0] > k - for_s and len(self.filtered) <= FLAT_S:
             return False
         return all(abs(f - landing) <= bound for at, f in self.filtered if at > k - for_s)

@@ -43,7 +43,7 @@ class Bank:
     slope: Floats  # (M,)
     ahead: Floats  # (6, M) s, the moments at which a model is asked whether it stays at rest
     level: Floats  # (M,) turbulence
-    prior_weight: Floats  # (M,) sums to 1
+    weight: Floats  # (M,) before any reading; sums to 1
 
     def take(self, which: NDArray[Any]) -> Bank:
         """The models `which` alone."""
