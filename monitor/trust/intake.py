@@ -19,7 +19,8 @@ from monitor.dosing.ledger import Change, Dose, Struck
 from monitor.trust.measures import hampel_bounds
 from monitor.trust.minutes import Minutes
 
-LEAST_S = 20  # sure seconds a minute
+LEAST_S = 20  # sure seconds a minute; fewer where readings come less than once a second
+FEWEST = 3
 SETTLE_S = 900  # after a dose or step nothing is called slow
 STEP = 0.015  # ln
 POWER = 0.95  # period above the circuit's own goes as salinity^-0.95 (fits PSS-78 and NaCl to 2 %)
@@ -33,6 +34,7 @@ class Levelled(Protocol):
     m: float
     noise: float
     tick_us: float
+    rate_hz: float
 
 
 class Jump(NamedTuple):
@@ -75,7 +77,7 @@ class Intake:
             self._levels.append(ln_us)
             self._salinities.append(second.salinity_pct)
             self._warmth += second.temp_used_c
-        return second.k % 60 == 59 and self._minute(second.t)
+        return second.k % 60 == 59 and self._minute(second.t, level.rate_hz)
 
     def _changed(self, t: float, changes: Sequence[Change]) -> None:
         for change in changes:
@@ -132,11 +134,11 @@ class Intake:
     def _begin_minute(self) -> None:
         self._levels, self._salinities, self._warmth = [], [], 0.0
 
-    def _minute(self, t: float) -> bool:
+    def _minute(self, t: float, rate_hz: float) -> bool:
         levels, salinities, warmth = self._levels, self._salinities, self._warmth
         self._begin_minute()
         n = len(levels)
-        if n < LEAST_S:
+        if n < max(LEAST_S * min(rate_hz, 1.0), FEWEST):
             return False
         temp_c = warmth / n
         low, high = hampel_bounds(levels)

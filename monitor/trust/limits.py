@@ -2,9 +2,9 @@
 
 Rules:
 - `high` and `low` begin after 10 s beyond the bound and end after 60 s back inside by the doubt of
-  the reading or 2 % of the band, whichever is more.
-- `fast` is judged every half minute on the last five: the change from the first minute to the last
-  must beat the bound by twice its noise to begin, and fall below 0.8 of the bound to end. A slope
+  the reading (at least 2 and at most 25 % of the band).
+- `fast` is judged every half minute on the last five minutes: the change from the first minute to
+  the last must beat the bound by twice its noise to begin, and fall below 0.8 of it to end. A slope
   through all of them would be blind to a step, the fastest change of all.
 - Nothing begins, and nothing ends, while the probe is out or not believed. A doubtful probe's
   findings are marked.
@@ -24,12 +24,12 @@ from monitor.findings import Finding
 from monitor.trust.measures import mad_sd
 
 BEGIN_S, END_S = 10, 60
-OF_BAND = 0.02
+OF_BAND = (0.02, 0.25)
 SMOOTH = 0.3  # share of a second in the salinity that is held against the band
 HALF_S = 30
 HALVES = 10  # half minutes looked at
 APART_S = HALF_S * (HALVES - 2)  # from the middle of the first two to that of the last two
-LEAST_SECONDS = 15  # of a half minute
+LEAST_SECONDS = 3  # with a salinity, of a half minute
 SLOWER = 0.8
 
 
@@ -139,7 +139,7 @@ class Limits:
         self.said: dict[str, Finding] = {}  # in force, by which
         self._idle = settings.aim_pct is None and settings.fastest_pct_per_h is None
         self._low, self._high = settings.aim_pct or (-1.0, 1e9)
-        self._margin = OF_BAND * (self._high - self._low)
+        self._margins = tuple(share * (self._high - self._low) for share in OF_BAND)
         self._fastest = settings.fastest_pct_per_h
         self._smooth = NAN
         self._beyond = 0  # seconds on end
@@ -203,7 +203,8 @@ class Limits:
             ("low", self._low - self._smooth, -1.0),
         ):
             if which in self.said:
-                margin = max(self._margin, u95_pct if u95_pct == u95_pct else 0.0)
+                least, most = self._margins
+                margin = min(max(least, u95_pct), most) if u95_pct == u95_pct else least
                 self._inside[which] = self._inside[which] + 1 if over < -margin else 0
                 if self._inside[which] >= END_S:
                     found.append(self._close(t, which))

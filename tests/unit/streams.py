@@ -62,7 +62,9 @@ class Stream:
 
     def seconds(self) -> Iterable[tuple[Second, Any, tuple[Change, ...]]]:
         """Each second with the level's judge and the ledger's changes."""
-        level = SimpleNamespace(locked=False, in_gate_ln=NAN, m=NAN, noise=self.noise, tick_us=0.5)
+        level = SimpleNamespace(
+            locked=False, in_gate_ln=NAN, m=NAN, noise=self.noise, tick_us=0.5, rate_hz=2.0
+        )
         rows = zip(self.period_us, np.log(self.period_us), self.read_pct, self.seen_c, strict=True)
         locked_k = 10
         for k, (period_us, ln_us, read_pct, temp_c) in enumerate(rows):

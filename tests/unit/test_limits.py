@@ -73,6 +73,11 @@ def test_a_salinity_that_rides_on_the_bound_does_not_chatter() -> None:
     assert len(found) == 1
 
 
+def test_a_great_doubt_does_not_hold_a_limit_for_ever() -> None:
+    found, _ = watch(lambda k: 0.12 if k < 200 else 0.10, 600, u95_pct=0.02)
+    assert [f["to_t"] is None for f in found] == [True, False]
+
+
 def test_a_short_excursion_is_none() -> None:
     assert watch(lambda k: 0.12 if 100 <= k < 105 else 0.10, 300)[0] == []
 
