@@ -59,7 +59,7 @@ class Trust:
         self.faults: dict[str, Finding] = {
             each["fault"]: dict(each) for each in carried.get("faults", ())
         }
-        self._carried = bool(self.faults)
+        self._carried = bool(self.faults) or self.creep.fault is not None
         self._jumps = Jumps()
         self._silence = Silence(carried.get("silence"))
         self._short = Short(settings.standards_in_force)
@@ -160,7 +160,7 @@ class Trust:
         """Say once more what was in force in the run before."""
         self._carried = False
         if "fouling" not in self.faults and self.creep.fault is not None:
-            self.faults["fouling"] = dict(self.creep.fault)
+            self.faults["fouling"] = self.creep.fault
         return [{**fault, "t": second.t} for fault in self.faults.values()]
 
     def _meet(self, second: Second, changes: Sequence[Change]) -> None:
@@ -327,8 +327,8 @@ class Trust:
         """Know of the creep's fault too."""
         for finding in found:
             if finding["fault"] == "fouling":
-                if finding["to_t"] is None:
-                    self.faults["fouling"] = finding
+                if self.creep.fault is not None:  # its evidence grows with what doses tell
+                    self.faults["fouling"] = self.creep.fault
                 else:
                     self.faults.pop("fouling", None)
 

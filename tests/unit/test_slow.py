@@ -9,9 +9,10 @@ import numpy as np
 import pytest
 
 from monitor import bench
-from monitor.blocks import Floats
+from monitor.blocks import Floats, Second
 from monitor.findings import Finding
 from monitor.trust.intake import floor_us
+from monitor.trust.judge import Trust
 from monitor.trust.minutes import MOST, Minutes, fit
 from monitor.trust.slow import Creep
 from tests.unit.streams import FLOOR_US, STANDARDS, Stream, dose
@@ -161,6 +162,19 @@ def test_a_restart_keeps_the_creep_and_its_cost() -> None:
     ended = faults(stream.judged(carried, first_k=9000)[0])[0]
     assert ended["from_t"] == said[0]["from_t"]
     assert ended["to_t"] == pytest.approx(12000.0, abs=60.0)
+
+
+def test_after_a_restart_the_judge_says_it_again_and_doubts() -> None:
+    stream = Stream(3.0, film=film(0.03))
+    creep = Creep("p1", stream.probe)
+    said: list[Finding] = []
+    for second, level, changes in stream.seconds():
+        said += creep.step(second, level, changes)
+    judge = Trust("p1", stream.probe, json.loads(json.dumps({"creep": creep.carry()})))
+    again, belief = judge.step(Second(0), ())
+    assert again == {**said[0], "t": 1.0}
+    assert (belief["belief"], judge.belief) == ("doubtful", "doubtful")
+    assert judge.faults.keys() == {"fouling"}
 
 
 def test_the_floor_is_the_standards_intercept() -> None:
