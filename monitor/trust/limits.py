@@ -28,7 +28,6 @@ OF_BAND = (0.02, 0.25)
 SMOOTH = 0.3  # share of a second in the salinity that is held against the band
 HALF_S = 30
 HALVES = 10  # half minutes looked at
-APART_S = HALF_S * (HALVES - 2)  # from the middle of the first two to that of the last two
 LEAST_SECONDS = 3  # with a salinity, of a half minute
 SLOWER = 0.8
 
@@ -225,17 +224,19 @@ class Limits:
         self._begin_half()
         if len(self._halves) < HALVES:
             return []
-        values = [half[1] for half in self._halves]
+        halves = self._halves
+        values = [half[1] for half in halves]
         change = 0.5 * (values[-1] + values[-2] - values[0] - values[1])
-        rate = abs(change) * 3600.0 / APART_S
+        apart_h = (halves[-1][0] + halves[-2][0] - halves[0][0] - halves[1][0]) / 7200.0
+        rate = abs(change) / apart_h
         if "fast" in self.said:
             return [self._close(t, "fast")] if rate < SLOWER * fastest else []
-        if rate <= fastest or (1.0 if change > 0 else -1.0) in [half[2] for half in self._halves]:
+        if rate <= fastest or (1.0 if change > 0 else -1.0) in [half[2] for half in halves]:
             return []
         noise = mad_sd([later - sooner for sooner, later in pairwise(values)]) / 2.0**0.5
-        if abs(change) - 2.0 * noise <= fastest * APART_S / 3600.0:
+        if abs(change) - 2.0 * noise <= fastest * apart_h:
             return []
-        return [self._say(t, self._halves[0][0] - HALF_S, "fast", rate, fastest, trust)]
+        return [self._say(t, halves[0][0] - HALF_S, "fast", rate, fastest, trust)]
 
     def _say(
         self, t: float, from_t: float, which: str, value: float, bound: float, trust: Trust

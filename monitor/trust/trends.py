@@ -52,11 +52,8 @@ class Trends:
         if second.k % EVERY_S != EVERY_S - 1:
             return []
         minutes = trust.creep.minutes
-        if (
-            self.said is not None
-            and self.said["pct_per_h"] < 0
-            and trust.creep.over_t > self.said["t"]
-        ):
+        said = self.said
+        if said is not None and said["pct_per_h"] < 0 and trust.creep.over_t > said["t"]:
             return [self._close(second.t)]
         if len(minutes) < LEAST_MIN or minutes.column(0, 1)[0] < second.t:
             return []
@@ -73,11 +70,9 @@ class Trends:
         if line is None:
             return []
         level = float(minutes.column(3, 1)[0])
-        unseen = (
-            STEADY * trust.creep.unseen * level / line.span_h
-            if line.by_temp != line.by_temp
-            else 0.0
-        )
+        unseen = 0.0
+        if line.by_temp != line.by_temp:
+            unseen = STEADY * trust.creep.unseen * level / line.span_h
         u95 = math.hypot(SDS * math.hypot(line.u, unseen), OF_RATE * line.slope)
         if self.said is not None and self._ended(minutes):
             return [self._close(t)]
@@ -150,8 +145,10 @@ def _best(minutes: Minutes, trust: Trust) -> tuple[Line | None, int]:
     if fouling is not None:
         since = int(np.sum(minutes.column(0, n) > fouling["from_t"]))
         n = max(min(n, since), LEAST_MIN)
-    salinity = minutes.column(3, n)
-    if not math.isfinite(float(salinity.sum())):
+    unknown = np.flatnonzero(np.isnan(minutes.column(3, n)))
+    if len(unknown):
+        n -= int(unknown[-1]) + 1
+    if n < LEAST_MIN:
         return None, 0
     hour_n = min(60, n)
     hour = _line(minutes, hour_n)
