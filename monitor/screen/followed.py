@@ -1,0 +1,238 @@
+"""Growing logs as a source: what a service records is followed, what a person does is ordered.
+
+A watcher that dies harms nothing; a service that dies is told by its log's silence.
+"""
+
+from __future__ import annotations
+
+import asyncio
+import time
+from collections.abc import Mapping
+from datetime import datetime
+from pathlib import Path
+from typing import Any
+
+from monitor.bench import Bench
+from monitor.blocks import Second
+from monitor.chain import Judges
+from monitor.control import ControlError, give
+from monitor.findings import Finding, in_order, shifted
+from monitor.follow import Follower
+from monitor.logbook import reader
+from monitor.logbook.reader import Part, Tail
+from monitor.screen.source import ActError
+from monitor.tanks import Unwatched
+from monitor.view import Lane
+
+BUDGET_S = 0.12  # of a poll
+LOOK_S = 2.0  # how often new files are looked for
+DEAD_S = 15.0  # the service writes a line at least every ten seconds
+HISTORY_S = 12 * 3600.0  # with less in the newest part, the one before is read too
+ASK_S = 5.0
+
+
+class Followed:
+    """One probe's newest run, as its files grow."""
+
+    def __init__(self, lane: Lane, folder: Path) -> None:
+        self.lane = lane
+        self.folder = folder
+        self.follower: Follower | None = None
+        self.started: datetime | None = None
+        self.offset = 0.0
+        self.caught_up = False
+        self.heard = time.monotonic()  # when the file last grew
+        self._parts: list[Part] = []
+        self._tail: Tail | None = None
+        self._looked = 0.0
+
+    def look(self, zero: datetime) -> None:
+        """Look for a further part, or a newer run."""
+        self._looked = time.monotonic()
+        last = reader.last_part(self.folder, self.lane.probe)
+        if last is None:
+            return
+        if self.started != last.header.started:
+            self._begin(last, zero)
+        elif self._tail is not None and not self._parts and last.path != self._tail.path:
+            self._parts.append(last)
+
+    def _begin(self, last: Part, zero: datetime) -> None:
+        """Follow this run, with the part before where the newest is young."""
+        self.started = last.header.started
+        self.offset = (self.started - zero).total_seconds()
+        self._parts = [last]
+        age_s = time.time() - last.path.stat().st_ctime
+        if last.part > 1 and last.path.stat().st_size < 4_000_000 and age_s < HISTORY_S:
+            before = [p for p in reader.runs(self._paths()) if p.started == self.started]
+            self._parts = [p for run in before for p in run.parts if p.part >= last.part - 1]
+        self._tail = None
+        self.lane.begin_run(self.offset)
+        self.follower = Follower(
+            self.lane.probe, first_part=self._parts[0].part, watch=self._watch
+        )
+
+    def _paths(self) -> list[str]:
+        started = f"{self.started:%Y%m%dT%H%M%SZ}"
+        probe = self.lane.probe
+        keep = reader.in_folder(self.folder, lambda p, start, _: p == probe and start == started)
+        return [str(path) for path in keep]
+
+    def _watch(self, second: Second, judges: Judges) -> None:
+        self.lane.second(second, judges)
+
+    def read(self, until: float) -> list[Finding]:
+        """Findings of what the files grew by. Raises nothing: what is damaged is counted."""
+        if self.follower is None:
+            return []
+        found: list[Finding] = []
+        self.caught_up = False
+        while time.monotonic() < until:
+            if self._tail is None:
+                if not self._parts:
+                    break
+                self._tail = Tail(self._parts.pop(0).path)
+            data = self._tail.read()
+            if data:
+                self.heard = time.monotonic()
+                found += self.follower.feed(data)
+            elif self._parts:
+                found += self.follower.next_part()
+                self._tail = None
+            else:
+                self.caught_up = True
+                break
+        return [shifted(each, self.offset) for each in found] if self.offset else found
+
+    @property
+    def stale(self) -> bool:
+        """Whether it is time to look for new files."""
+        return time.monotonic() - self._looked > LOOK_S
+
+
+class LiveSource:
+    """Follows the logs of a bench, and orders its service."""
+
+    live = True
+
+    def __init__(self, bench: Bench, folder: Path, socket: Path, name: str = "bench") -> None:
+        """`folder` of the logs, `socket` of the service, `name` of the bench file."""
+        self.name = name
+        self.lanes = [Lane(probe, bench.for_probe(probe)) for probe in bench.probe]
+        self._folder = folder
+        self._socket = socket
+        self._followed = [Followed(lane, folder) for lane in self.lanes]
+        self._tanks: dict[str, Unwatched] = {}
+        self._asking: asyncio.Task[None] | None = None
+        self._asked = 0.0
+        self._told: dict[str, Any] = {}
+        self._service = True
+        starts = [
+            part.header.started
+            for lane in self.lanes
+            if (part := reader.last_part(folder, lane.probe)) is not None
+        ]
+        self._known = bool(starts)
+        self.started = max(starts) if starts else datetime.now().astimezone()
+
+    @property
+    def now_s(self) -> float:
+        """The newest time that a log has told, moved on by what has passed since."""
+        known = [(lane.t, each.heard) for lane, each in zip(self.lanes, self._followed)]
+        told = [t + min(time.monotonic() - heard, DEAD_S) for t, heard in known if t == t]
+        if told:
+            return max(told)
+        return 0.0
+
+    @property
+    def status(self) -> str:
+        """What hinders, in one line; "" while nothing does."""
+        if not any(each.follower for each in self._followed):
+            return f"no log of {self.name} yet: start `stillbrine run`"
+        if not all(each.caught_up for each in self._followed if each.follower):
+            return "reading the log"
+        silent = min(time.monotonic() - each.heard for each in self._followed if each.follower)
+        if silent > DEAD_S:
+            return f"NOTHING IS RECORDED for {silent:.0f} s: does `stillbrine run` still run?"
+        paused = [name for name, told in self._told.items() if told.get("paused")]
+        if paused:
+            return f"NOT RECORDED: {', '.join(paused)}: {self._told[paused[0]]['paused']}"
+        rejected = sum(int(told.get("rejected") or 0) for told in self._told.values())
+        return f"{rejected} lines of the wire were no readings" if rejected else ""
+
+    @property
+    def caught_up(self) -> bool:
+        """Whether all that is written was read."""
+        return all(each.caught_up for each in self._followed if each.follower)
+
+    def poll(self) -> None:
+        """Read what the logs grew by."""
+        until = time.monotonic() + BUDGET_S
+        found: list[Finding] = []
+        for each in self._followed:
+            if each.stale:
+                self._look(each)
+            found += each.read(until)
+        found += self._of_tanks()
+        for finding in in_order(found):
+            for lane in self.lanes:
+                named = finding.get("probe")
+                if lane.probe == named or (named is None and lane.tank == finding.get("tank")):
+                    lane.finding(finding)
+        self._ask()
+
+    def _look(self, each: Followed) -> None:
+        if not self._known:
+            part = reader.last_part(self._folder, each.lane.probe)
+            if part is None:
+                each.look(self.started)
+                return
+            self.started, self._known = part.header.started, True
+        each.look(self.started)
+
+    def _of_tanks(self) -> list[Finding]:
+        found: list[Finding] = []
+        for tank in {lane.tank for lane in self.lanes}:
+            its = [each for each in self._followed if each.lane.tank == tank and each.follower]
+            if not its or not all(each.caught_up for each in its):
+                continue
+            spans = [
+                (e.lane.probe, e.follower.chain.watched, e.offset) for e in its if e.follower
+            ]
+            upto = min(e.follower.chain.closed_t + e.offset for e in its if e.follower)
+            fold = self._tanks.setdefault(tank, Unwatched(tank))
+            found += fold.advance(upto, spans)
+        return found
+
+    def _ask(self) -> None:
+        """Ask the service how it is, now and then; never wait for it."""
+        now = time.monotonic()
+        if now - self._asked < ASK_S or (self._asking and not self._asking.done()):
+            return
+        self._asked = now
+        try:
+            loop = asyncio.get_running_loop()
+        except RuntimeError:
+            return  # a text-only watcher has no loop; its log tells
+        self._asking = loop.create_task(self._status())
+
+    async def _status(self) -> None:
+        try:
+            answer = await give(self._socket, "status", {})
+        except ControlError:
+            self._told = {}
+            return
+        probes = answer.get("probes")
+        self._told = probes if isinstance(probes, dict) else {}
+
+    async def order(self, kind: str, fields: Mapping[str, Any], probe: str) -> None:
+        """Have the service record an act. Raises ActError."""
+        try:
+            await give(self._socket, kind, fields, probe=probe)
+        except ControlError as wrong:
+            raise ActError(str(wrong)) from None
+
+    def close(self) -> None:
+        """Ask nothing any more."""
+        if self._asking is not None:
+            self._asking.cancel()

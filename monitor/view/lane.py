@@ -1,0 +1,287 @@
+"""One probe in its tank, as a screen shows it: a pure fold over judged seconds and findings.
+
+Times are seconds of the first run that is shown; a later run's are moved by `offset_s`. What the
+judges hold now is read from them when it is asked for, so that a second costs next to nothing.
+"""
+
+from __future__ import annotations
+
+from collections import deque
+from collections.abc import Mapping
+from typing import Any
+
+from monitor.bench import Bench
+from monitor.blocks import NAN, Event, Floats, Second
+from monitor.chain import Judges
+from monitor.findings import Finding, shifted
+from monitor.view.marks import Dosed, Note, Span
+from monitor.view.traces import DOUBTFUL, NOT_TANK, TANK, Raw, Trace
+
+MARKS_MOST = 2000
+EVIDENCE_BEFORE_S = 20.0
+EVIDENCE_MOST_S = 90.0
+
+
+class Lane:
+    """What one probe tells of its tank."""
+
+    def __init__(self, probe: str, bench: Bench | None = None) -> None:
+        """`bench`: the settings, where they are known before the log tells them."""
+        self.probe = probe
+        self.bench = bench
+        self.offset_s = 0.0
+        self.version = 0  # changes whenever anything shown may have changed
+        self.t = NAN  # all before this is judged
+        self.trace = Trace()
+        self.raw = Raw()
+        self.doses: deque[Dosed] = deque(maxlen=MARKS_MOST)
+        self.rests: deque[Finding] = deque(maxlen=MARKS_MOST)
+        self.outlooks: deque[Finding] = deque(maxlen=2 * MARKS_MOST)
+        self.spans: deque[Span] = deque(maxlen=MARKS_MOST)
+        self.notes: deque[Note] = deque(maxlen=MARKS_MOST)
+        self.told: deque[Finding] = deque(maxlen=MARKS_MOST)  # all but outlooks
+        self.lasting: dict[tuple[str, str], Finding] = {}  # trends, limits, unwatched, notices
+        self.link_lost: Span | None = None
+        self.out: Span | None = None
+        self.rejected = 0
+        self._judges: Judges | None = None
+        self._second: Second | None = None
+
+    # The fold
+
+    def begin_run(self, offset_s: float) -> None:
+        """Another run of the probe follows; its times count from `offset_s`."""
+        self.offset_s = offset_s
+        self.link_lost = self.out = None
+        self.lasting.clear()
+
+    def second(self, second: Second, judges: Judges) -> None:
+        """Take one judged second."""
+        self.version += 1
+        self._judges = judges
+        self._second = second
+        self.t = second.t + self.offset_s
+        if second.events:
+            self._meet(second, judges)
+        if not second.n_rows:
+            return
+        self.raw.add(second, self.offset_s)
+        value = second.salinity_pct if judges.calibration is not None else second.mean_us
+        trust = judges.trust
+        good = NOT_TANK
+        if trust.usable:
+            good = TANK if trust.belief == "believed" else DOUBTFUL
+        self.trace.add(second, self.offset_s, value, judges.settling.shown_pct, good)
+
+    def finding(self, finding: Finding) -> None:
+        """Take a finding that names this probe, or its tank; its times are the lane's."""
+        self.version += 1
+        kind = finding["finding"]
+        if kind == "outlook":
+            self.outlooks.append(finding)
+            return
+        self.told.append(finding)
+        if kind == "rest":
+            self._rest(finding)
+        elif kind == "fault":
+            self._fault(finding)
+        elif kind != "belief":
+            key = (kind, str(finding.get("which") or finding.get("what") or ""))
+            if finding.get("to_t") is None:
+                self.lasting[key] = finding
+            else:
+                self.lasting.pop(key, None)
+
+    def _rest(self, finding: Finding) -> None:
+        if finding.get("to_t") is not None and self.rests:
+            if self.rests[-1]["rested_t"] == finding["rested_t"]:
+                self.rests.pop()
+        self.rests.append(finding)
+
+    def _fault(self, finding: Finding) -> None:
+        name = finding["fault"]
+        for span in reversed(self.spans):
+            if span.what == name and span.to_t is None:
+                span.to_t, span.why = finding["to_t"], finding["evidence"]
+                return
+        span = Span(name, finding["from_t"], finding["to_t"], finding["evidence"])
+        first = max(finding["from_t"], finding["t"] - EVIDENCE_MOST_S) - EVIDENCE_BEFORE_S
+        times, periods, _ = self.raw.between(first, finding["t"])
+        span.raw = (times[-2000:], periods[-2000:])
+        self.spans.append(span)
+
+    def _meet(self, second: Second, judges: Judges) -> None:
+        for dose in judges.ledger.doses:
+            if dose.met_k == second.k:
+                when = dose.time_s + self.offset_s
+                mark = Dosed(when, dose.open_s, dose.volume_ml, dose.liquid, dose.key)
+                if all(each.key != dose.key or each.time_s != when for each in self.doses):
+                    self.doses.append(mark)
+        for event in second.events:
+            self._event(event)
+
+    def _event(self, event: Event) -> None:
+        t, fields = event.time_s + self.offset_s, event.fields
+        if event.kind == "strike":
+            self._strike(fields)
+        elif event.kind == "note":
+            self.notes.append(Note(t, str(fields.get("text", ""))))
+        elif event.kind == "water":
+            self.notes.append(Note(t, "water"))
+        elif event.kind == "rejected":
+            self.rejected += int(fields.get("n", 0))
+        elif event.kind == "gap":
+            lost = fields.get("link") == "lost"
+            self.link_lost = self._toggled(self.link_lost, "link", lost, t, fields)
+        elif event.kind in ("out", "back"):
+            self.out = self._toggled(self.out, "out", event.kind == "out", t, fields)
+
+    def _strike(self, fields: Mapping[str, Any]) -> None:
+        of = str(fields.get("of"))
+        for mark in reversed(self.doses):
+            when = f"{mark.time_s - self.offset_s:.3f}"
+            if of in (mark.key, when, when.rstrip("0").rstrip(".")):
+                mark.struck = True
+                return
+
+    def _toggled(
+        self, span: Span | None, what: str, begins: bool, t: float, fields: Mapping[str, Any]
+    ) -> Span | None:
+        if not begins:
+            if span is not None:
+                span.to_t = t
+            return None
+        if span is None:
+            span = Span(what, t, None, str(fields.get("why", "")))
+            self.spans.append(span)
+        return span
+
+    # What is so now
+
+    @property
+    def tank(self) -> str:
+        """The tank's name; the probe's own until that is known."""
+        bench = self.settings
+        return bench.probe[self.probe].tank if bench else self.probe
+
+    @property
+    def label(self) -> str:
+        """What a person calls it: as it stands in the bench file, not yet safe to print."""
+        bench = self.settings
+        return (bench and bench.tank[self.tank].label) or self.tank
+
+    @property
+    def settings(self) -> Bench | None:
+        """The settings in force."""
+        return self._judges.bench if self._judges else self.bench
+
+    @property
+    def medium(self) -> str:
+        """The salt's name."""
+        return self.settings.probe[self.probe].medium if self.settings else "NaCl"
+
+    @property
+    def aim(self) -> tuple[float, float] | None:
+        """The band that is aimed at, %."""
+        return self.settings.tank[self.tank].aim_pct if self.settings else None
+
+    @property
+    def band(self) -> float:
+        """What counts as rest, +- %."""
+        return self.settings.tank[self.tank].rest_band_pct if self.settings else NAN
+
+    @property
+    def calibrated(self) -> bool:
+        """Whether there is a salinity; if not, values are periods in us."""
+        if self._judges is None:
+            return bool(self.bench and self.bench.probe[self.probe].standards_in_force)
+        return self._judges.calibration is not None
+
+    @property
+    def begun(self) -> bool:
+        """Whether anything was judged yet."""
+        return self._judges is not None
+
+    @property
+    def belief(self) -> str:
+        """believed, doubtful or not-believed."""
+        return self._judges.trust.belief if self._judges else "believed"
+
+    @property
+    def why(self) -> str:
+        """Why it is believed so."""
+        return self._judges.trust.why if self._judges else ""
+
+    @property
+    def since_t(self) -> float:
+        """Since when it is believed so."""
+        return self._judges.trust.since + self.offset_s if self._judges else NAN
+
+    @property
+    def usable(self) -> bool:
+        """Whether the newest second gave a reading of the tank."""
+        return self._judges.trust.usable if self._judges else False
+
+    @property
+    def faults(self) -> list[Finding]:
+        """Faults in force, the oldest first."""
+        if self._judges is None:
+            return []
+        told = [shifted(f, self.offset_s) for f in self._judges.trust.faults.values()]
+        return sorted(told, key=lambda fault: float(fault["from_t"]))
+
+    @property
+    def value(self) -> float:
+        """The filtered salinity in %, or the period in us; NaN where there is none to show."""
+        if self._judges is None or self._second is None:
+            return NAN
+        if not self.calibrated:
+            return self._second.mean_us
+        return self._judges.settling.shown_pct if self.usable else NAN
+
+    @property
+    def u95(self) -> float:
+        """Doubt of the value, %."""
+        return self._judges.settling.u95_pct if self._judges and self.calibrated else NAN
+
+    @property
+    def moving(self) -> bool:
+        """Whether a change is under way."""
+        return self._judges.settling.moving if self._judges else False
+
+    @property
+    def rest(self) -> Finding | None:
+        """The rest in force."""
+        rest = self._judges.settling.at_rest if self._judges else None
+        return shifted(rest, self.offset_s) if rest else None
+
+    @property
+    def outlook(self) -> Finding | None:
+        """The newest outlook of the change under way."""
+        outlook = self._judges.settling.outlook if self._judges else None
+        return shifted(outlook, self.offset_s) if outlook else None
+
+    @property
+    def tank_ml(self) -> float:
+        """Running volume, mL; NaN where it is not known."""
+        ml = self._judges.ledger.tank_ml if self._judges else None
+        return NAN if ml is None else ml
+
+    @property
+    def tank_u_ml(self) -> float:
+        """Its standard uncertainty, mL."""
+        return self._judges.ledger.tank_u_ml if self._judges else NAN
+
+    @property
+    def last_dose(self) -> Dosed | None:
+        """The newest dose that was not struck out."""
+        return next((dose for dose in reversed(self.doses) if not dose.struck), None)
+
+    def salinity_of(self, period_us: Floats, temp_c: Floats) -> Floats:
+        """Values of raw readings, (n,): salinities, or the periods themselves."""
+        judges = self._judges
+        if judges is None or judges.calibration is None or judges.temp_c is None:
+            return period_us
+        held = temp_c.copy()
+        held[held != held] = judges.temp_c
+        return judges.calibration.salinity_pct(period_us, held)
