@@ -18,11 +18,13 @@ from monitor.blocks import Second
 from monitor.dosing.ledger import Change, Dose, Struck
 from monitor.trust.measures import hampel_bounds
 from monitor.trust.minutes import Minutes
+from monitor.water.media import medium
 
 LEAST_S = 20  # sure seconds a minute; fewer where readings come less than once a second
 FEWEST = 3
 SETTLE_S = 900  # after a dose or step nothing is called slow
 STEP = 0.015  # ln
+WARMTH_POWER = 0.98  # period above the circuit's own goes as conductivity^-0.98: polarisation
 POWER = 0.95  # period above the circuit's own goes as salinity^-0.95 (fits PSS-78 and NaCl to 2 %)
 
 
@@ -54,6 +56,7 @@ class Intake:
         self.jump: Jump | None = None  # met in this second
         self.floor_us = floor_us(settings.standards_in_force)
         self.paused_t = -math.inf  # when taking up was last put off
+        self._medium = medium(settings.medium)
         self._quiet_t = 0.0  # the first second that may be taken up again
         self._out = self._locked = False
         self._left: tuple[float, float, float] | None = None  # time, level, temperature
@@ -127,8 +130,7 @@ class Intake:
         """ln of the period above the circuit's own, at 25 C where there is a thermometer."""
         level = math.log(max(math.exp(ln_us) - self.floor_us, 1.0))
         if temp_c == temp_c:
-            off = temp_c - 25.0
-            level += 0.98 * math.log(1.0 + 0.02048 * off + 6.91e-5 * off * off)
+            level += WARMTH_POWER * math.log(self._medium.sensitivity(temp_c)[0])
         return level
 
     def _begin_minute(self) -> None:
