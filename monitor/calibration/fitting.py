@@ -50,7 +50,8 @@ def fit(
     CalibrationError
         In one line, if the standards contradict each other or allow no fit.
     """
-    rows, jitter = read_rows(standards, medium, tick_us)
+    with np.errstate(all="ignore"):  # what overflows is found by its result
+        rows, jitter = read_rows(standards, medium, tick_us)
     if older is not None and older.medium != medium:
         raise CalibrationError(f"the older calibration is of {older.medium}, not of {medium}")
     top_us = float(rows.period_us.min())
@@ -102,11 +103,9 @@ def weighed_fits(
             fits = solve(rows, k0, hypotheses.use, tau_pct, prior)
             weight = weights(fits, hypotheses)
         except np.linalg.LinAlgError:
-            raise CalibrationError(
-                "no fit: the equations of these standards are singular"
-            ) from None
+            raise CalibrationError(remarks.no_fit(rows)) from None
     if not (np.isfinite(weight).all() and np.isfinite(fits.theta[np.argmax(weight)]).all()):
-        raise CalibrationError("no fit: these standards lead a figure beyond all bounds")
+        raise CalibrationError(remarks.no_fit(rows))
     return fits, weight
 
 

@@ -20,6 +20,7 @@ if TYPE_CHECKING:
 SCATTER_PCT = 0.2  # scatter of the standards beyond which it is said
 LACK_OF_FIT_P = 0.05
 FREE = 3  # parameters that six levels really settle: lnG, p and t0
+SHORTEST_US = 2.0  # common practice, no source: such oscillators end below 500 kHz
 UNIT_STEPS = (1e-6, 1e-3, 1e3, 1e6)  # s, ms for us and the reverse
 
 
@@ -28,6 +29,10 @@ def refuse_wrong_figures(standards: Sequence[Standard]) -> None:
     for i, s in enumerate(standards, 1):
         if not (math.isfinite(s.period_us) and s.period_us > 0):
             raise CalibrationError(f"standard {i}: period {s.period_us:g} us; expected above 0")
+        if s.period_us < SHORTEST_US:
+            raise CalibrationError(
+                f"standard {i}: period {s.period_us:g} us: looks like ms or s; expected us"
+            )
         if not (math.isfinite(s.salinity_pct) and s.salinity_pct >= 0):
             raise CalibrationError(
                 f"standard {i}: salinity {s.salinity_pct:g} %; expected 0 or more"
@@ -39,15 +44,23 @@ def refuse_wrong_figures(standards: Sequence[Standard]) -> None:
 def contradiction(rows: Rows, fits: Fits, heaviest: int) -> str:
     """Why no calibration fits these standards."""
     worst = int(np.argmax(np.abs(fits.residual[heaviest])))
-    off = math.expm1(float(fits.residual[heaviest, worst]))
+    off = float(fits.residual[heaviest, worst])
+    u = math.sqrt(fits.variance[heaviest, worst])
     units = mixed_units(rows.period_us)
     hint = f"; {units}" if units else ""
     return (
         f"the standards contradict each other, by no probe's law: standard {worst + 1}"
-        f" ({rows.salinity_pct[worst]:g} %) is the worst, its period {abs(off) * 100:.2g} %"
-        f" {'longer' if off > 0 else 'shorter'} than the others let expect{hint};"
+        f" ({rows.salinity_pct[worst]:g} %) is the worst, its period"
+        f" {_apart(off, u)} than the others let expect{hint};"
         " expected the period to fall as salinity rises (two swapped?)"
     )
+
+
+def no_fit(rows: Rows) -> str:
+    """Why there is no fit at all."""
+    units = mixed_units(rows.period_us)
+    why = units or "a figure among them leads beyond all bounds"
+    return f"no fit of these standards: {why}; expected a period that falls as salinity rises"
 
 
 def mixed_units(period_us: Floats) -> str:
@@ -105,11 +118,20 @@ def wrong_standard(rows: Rows, fits: Fits, weight: Floats, hypotheses: Hypothese
     which = f"the {rows.salinity_pct[group[0]]:g} % standard"
     if len(group) == 1 and (rows.salinity_pct == rows.salinity_pct[group[0]]).sum() > 1:
         which += f" of {rows.period_us[group[0]]:g} us"
-    way = "longer" if off > 0 else "shorter"
-    said = f"period {abs(off) * 100:.2g} +- {200 * u:.2g} % {way} than the others say"
+    said = f"period {_apart(off, u)} than the others say"
+    if units := mixed_units(rows.period_us):
+        said += f" ({units})"
     if by_group[0] >= 0.5:
         return f"{which} is perhaps wrong: {said}"
     return f"{which} is wrong: {said}; left out"
+
+
+def _apart(off: float, u: float) -> str:
+    """A difference of ln period in words."""
+    way = "longer" if off > 0 else "shorter"
+    if abs(off) > 0.5:
+        return f"{math.exp(abs(off)):.3g} times {way}"
+    return f"{100 * abs(math.expm1(off)):.2g} +- {200 * u:.2g} % {way}"
 
 
 def left_out(fits: Fits, weight: Floats, hypotheses: Hypotheses, i: int) -> tuple[float, float]:

@@ -34,7 +34,7 @@ def line_of(data: Any, x: str = "x", y: str = "y") -> Line:
 
 
 def half_digit(published: float, found: float, digits: int) -> bool:
-    return abs(published - found) <= 0.5 * 10**-digits * 1.001
+    return abs(published - found) <= 0.5 * 10.0**-digits * 1.001
 
 
 def test_norris() -> None:

@@ -26,7 +26,7 @@ class Bench:
     def ideal_us(self, salinity_pct: float, temp_c: float) -> float:
         law = medium("NaCl")
         k = float(law.conductivity_25_ms(np.array([salinity_pct]))[0]) + 0.0015
-        return 12.0 + 700.0 * (k * law.sensitivity(temp_c)[0]) ** -0.98
+        return float(12.0 + 700.0 * (k * law.sensitivity(temp_c)[0]) ** -0.98)
 
     def read(
         self, salinity_pct: float, seconds: float, lift: float = 0.0, tau_s: float = 8.0

@@ -5,6 +5,7 @@ from __future__ import annotations
 import os
 import stat
 from pathlib import Path
+from typing import Any
 
 import pytest
 
@@ -27,7 +28,7 @@ period_us = 900.0
 [liquid.saline]
 salinity_pct = 0.15
 """
-NEW = [
+NEW: list[dict[str, Any]] = [
     {"salinity_pct": 0.05, "period_us": 916.2, "sd_us": 3.9, "readings": 120, "temp_c": 25.0},
     {"salinity_pct": 0.1, "period_us": 474.0, "lot": 'a "b"'},
 ]

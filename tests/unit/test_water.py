@@ -57,3 +57,14 @@ def test_what_is_beyond_the_law_is_refused_in_one_line() -> None:
         units.pct_from_ms_per_cm(np.array([-0.1]), law)
     with pytest.raises(OutOfRangeError, match="expected one of NaCl, sea salt"):
         medium("sugar")
+
+
+@pytest.mark.parametrize("name", ["NaCl", "sea salt"])
+def test_next_to_no_salt_at_all(name: str) -> None:
+    law = medium(name)
+    read = law.salinity_pct(np.array([0.0, 1e-6, 1e-3, 2e-3, 0.01, np.nan]))
+    assert read[0] == 0
+    assert (np.diff(read[:5]) >= 0).all()
+    assert read[3] > 0
+    assert np.isnan(read[5])
+    assert 0.02 < law.slope(0.0) < 0.06
