@@ -126,8 +126,11 @@ class Trust:
             found += self.creep.step(second, self.level, changes)
             return found + self._believe(second)
         found += self._pulses(second)
-        judged = []
-        if second.n_rows > second.zeros:
+        judged: list[Judged] = []
+        if "short" in self.faults:
+            self.level.forget()
+            self._jumps.forget()
+        elif second.n_rows > second.zeros:
             noisy = "bubbles" in self.faults or "loose-lead" in self.faults
             if not self.faults and self.level.calm(second):
                 self.level.learn(second)

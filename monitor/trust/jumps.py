@@ -54,14 +54,14 @@ class Jumps:
 
     def take(self, judged: Judged, least: float) -> None:
         """Find the jumps in a second's readings; `least` is the height of a full one."""
-        if judged.drifting:
-            self._open = None
-            return
         off = judged.ln_us - judged.m
         inner = INNER * judged.gate
         up, down = int((off > inner).sum()), int((off < -inner).sum())
         if up or down:
             self._edges.append((judged.k, up, down))
+        if judged.drifting:
+            self._open = None
+            return
         if self._open is None and not (abs(off) > judged.gate).any():
             return
         for t, height in zip(judged.time_s.tolist(), off.tolist()):

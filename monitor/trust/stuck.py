@@ -16,6 +16,7 @@ from monitor.trust.level import Level
 
 LEAST_N, LEAST_S = 12, 3.0
 LONGER = 2.5  # times the longest of the last 30 runs
+SURER = 1.25  # times what chance gives: the noise is known to some 10 %
 CHANCE_LN = math.log(1e-9)
 WARM_S = 40.0
 PER_C = 0.0212  # of the period, a Celsius
@@ -96,7 +97,7 @@ class Stuck:
         q = min(q, 1.0 - 1e-12)
         chance = CHANCE_LN / math.log(q) if q > 0 else 0.0
         found = Run(self._from_t, n, self._figure, max(chance, 1.0))
-        if n > chance and n > LONGER * max(self._lengths, default=0):
+        if n > SURER * chance and n > LONGER * max(self._lengths, default=0):
             return found
         warmed = abs(second.temp_used_c - self._temp_c) * PER_C * self._figure
         if second.t - self._from_t >= WARM_S and warmed > 3.0 * level.tick_us + 3.0 * sd_us:
