@@ -12,11 +12,9 @@ Rules:
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from datetime import datetime
 from typing import Any
 
 from drivers.line import Decoder
-from monitor.bench import Bench
 from monitor.clock import Clock
 from monitor.findings import Finding
 from monitor.follow import Follower
@@ -148,7 +146,7 @@ class Recorder:
         for note in self.decoder.take_notes():
             self._say(f"{self.probe}: {note}")
 
-    def next_part(self, utc: datetime) -> None:
+    def next_part(self) -> None:
         """UTC midnight: the run goes on in its next part."""
         self.flush()
         carried = self.follower.chain.carry()
@@ -160,7 +158,7 @@ class Recorder:
         self._tell(self.follower.next_part())
         self._try(self._head_lines(carried))
 
-    def change(self, bench: Bench, settings: Head) -> None:
+    def change(self, settings: Head) -> None:
         """Other settings are in force from here on."""
         self.settings = settings
         for kind, fields in settings:

@@ -11,6 +11,7 @@ import fcntl
 import os
 import secrets
 from collections.abc import Callable, Iterable, Mapping
+from datetime import datetime
 from pathlib import Path
 from typing import IO, Any
 
@@ -115,7 +116,7 @@ class Service:
         """Read the bench file again; if it does not check, say so and carry on with the old one."""
         try:
             new = bench_file.parse(self.bench_path.read_text(), self.bench_path.name)
-            calibrations = {name: _settings(new, name) for name in new.probe}
+            calibrations = {name: head_of(new, name) for name in new.probe}
         except (OSError, UnicodeDecodeError, BenchError, CalibrationError) as wrong:
             self._say(f"bench file not taken, the old one stays in force: {wrong}")
             return
@@ -163,7 +164,8 @@ class Service:
             await asyncio.sleep(every_s)
 
     def _start_probe(self, probe: str) -> None:
-        settings = _settings(self.bench, probe)
+        settings = head_of(self.bench, probe)
+        carried = carried_by_last_run(self.folder, probe, self.started)
         writer = LogWriter(self.folder, probe, self.started, self._run)
         stamp = f"{self.started:%Y%m%dT%H%M%SZ}"
         self._files[probe] = _append_only(self.folder / f"{probe}-{stamp}.findings.jsonl")
@@ -177,7 +179,7 @@ class Service:
             lambda found: self._tell(probe, found),
             self._say,
         )
-        recorder.begin(settings, self._carried(probe))
+        recorder.begin(settings, carried)
         self.recorders[probe] = recorder
         self._open_port(probe)
 
@@ -206,17 +208,6 @@ class Service:
     def _down(self, probe: str, why: str) -> None:
         self._say(f"{probe}: {why}")
         self.recorders[probe].link(False)
-
-    def _carried(self, probe: str) -> Mapping[str, Any]:
-        """What the last run of this probe would tell this one."""
-        last = reader.last_part(self.folder, probe)
-        if last is None:
-            return {}
-        follower = Follower(probe, first_part=last.header.part)
-        for chunk in reader.chunks(last.path):
-            follower.feed(chunk)
-        shift = (last.header.started - self.started).total_seconds()
-        return shifted_times(follower.chain.carry(), shift)
 
     def _tell(self, probe: str, found: Iterable[Finding]) -> None:
         for finding in found:
@@ -274,10 +265,13 @@ class Service:
 
     def _watch_clocks(self) -> None:
         """Write down where the machine slept and where the wall clock was set."""
-        before, self._seen = self._seen, (
-            self.clock.now_s(),
-            self.clock.awake_s(),
-            self.clock.utc(),
+        before, self._seen = (
+            self._seen,
+            (
+                self.clock.now_s(),
+                self.clock.awake_s(),
+                self.clock.utc(),
+            ),
         )
         passed = self._seen[0] - before[0]
         slept = passed - (self._seen[1] - before[1])
@@ -347,13 +341,28 @@ def _append_only(path: Path) -> IO[str]:
     return os.fdopen(os.open(path, mode, 0o600), "w", encoding="ascii")
 
 
-def _settings(bench: Bench, probe: str) -> Head:
+def head_of(bench: Bench, probe: str) -> Head:
     """The events at the head of a part. Raises CalibrationError."""
     head: Head = [("bench", bench.for_probe(probe).as_event())]
     calibration = calibration_of(bench, probe)
     if calibration is not None:
         head.append(("calibration", calibration.as_event()))
     return head
+
+
+def carried_by_last_run(folder: Path, probe: str, started: datetime) -> Mapping[str, Any]:
+    """What the last run of this probe would tell one that starts now.
+
+    Nothing needs to have been saved when that run ended: its last part is judged again.
+    """
+    last = reader.last_part(folder, probe)
+    if last is None:
+        return {}
+    follower = Follower(probe, first_part=last.part)
+    for chunk in last.chunks():
+        follower.feed(chunk)
+    shift = (last.header.started - started).total_seconds()
+    return dict(shifted_times(follower.chain.carry(), shift))
 
 
 def shifted_times(carried: Any, by_s: float) -> Any:
