@@ -25,6 +25,7 @@ _NAME = re.compile(r"([A-Za-z0-9][A-Za-z0-9_-]{0,31})-(\d{8}T\d{6}Z)-(\d{3,6})\.
 _EVENT = re.compile(r"#! (-?\d{1,9}(?:\.\d{1,6})?) ([a-z][a-z_-]{0,31}) (\{.*\})", re.ASCII)
 _UTC = re.compile(r"\d{4}-\d\d-\d\dT\d\d:\d\d:\d\d(\.\d{1,6})?(Z|\+00:00)", re.ASCII)
 _FIGURE_MOST = 1e12
+_WHOLE_MOST = 2**63
 
 
 class EventError(ValueError):
@@ -33,6 +34,10 @@ class EventError(ValueError):
 
 class HeaderError(ValueError):
     """A log's header is wrong; `str()` says what, and what is expected."""
+
+
+class NoLogError(HeaderError):
+    """The first line is not that of a log of any version."""
 
 
 @dataclass(frozen=True)
@@ -46,23 +51,28 @@ class Header:
 
     def text(self) -> str:
         """The header's lines, the column line included."""
+        run = f"# run: {self.run}\n" if self.run else ""
         return (
             f"{FIRST_LINE}\n# probe: {self.probe}\n# started: {utc_text(self.started)}\n"
-            f"# run: {self.run}\n# part: {self.part}\n{COLUMNS}\n"
+            f"{run}# part: {self.part}\n{COLUMNS}\n"
         )
+
+
+def check_first(line: str) -> None:
+    """Hold the first line against the form and version. Raises NoLogError, HeaderError."""
+    form = re.fullmatch(r"# stillbrine log ([0-9]{1,6})", line)
+    if form is None:
+        raise NoLogError(f"first line is no log's; expected {FIRST_LINE!r}")
+    if int(form[1]) != VERSION:
+        raise HeaderError(f"log version {int(form[1])} is not known; expected {VERSION}")
 
 
 def header_of(lines: list[str]) -> Header:
     """The header from a log's comment lines, the first of the file included.
 
-    Raises HeaderError.
+    Raises NoLogError, HeaderError.
     """
-    first = lines[0] if lines else ""
-    form = re.fullmatch(r"# stillbrine log (\d{1,6})", first)
-    if form is None:
-        raise HeaderError(f"first line is no log's; expected {FIRST_LINE!r}")
-    if int(form[1]) != VERSION:
-        raise HeaderError(f"log version {int(form[1])} is not known; expected {VERSION}")
+    check_first(lines[0] if lines else "")
     keys: dict[str, str] = {}
     for line in lines[1:]:
         found = re.fullmatch(r"# ([a-z_]{1,32}): (.{0,200})", line)
@@ -112,7 +122,12 @@ def row_line(time_s: str, period_us: str, temp_c: str) -> str:
 def event_line(time_s: float, kind: str, fields: Mapping[str, Any]) -> str:
     """One event's line. Raises EventError if it could not be read back."""
     check_fields(kind, fields)
-    line = f"#! {time_s:.3f} {kind} {json.dumps(fields, allow_nan=False)}\n"
+    try:
+        line = f"#! {time_s:.3f} {kind} {json.dumps(fields, allow_nan=False)}\n"
+    except (ValueError, TypeError):
+        raise EventError(f"{kind}: fields are no JSON; expected finite numbers and text") from None
+    if not _EVENT.fullmatch(line, 0, len(line) - 1):
+        raise EventError("time or kind is none of a log; expected '#! TIME KIND {...}'")
     if len(line) > LINE_MOST:
         raise EventError(f"{len(line)} bytes; expected a line below 1 MB")
     return line
@@ -124,7 +139,13 @@ def event_of(line: str) -> Event:
     if found is None:
         raise EventError("not of the form '#! TIME KIND {...}'")
     try:
-        fields = json.loads(found[3], parse_constant=_no_constant, object_pairs_hook=_once)
+        fields = json.loads(
+            found[3],
+            parse_constant=_no_constant,
+            parse_float=_finite,
+            parse_int=_whole,
+            object_pairs_hook=_once,
+        )
     except (ValueError, RecursionError):
         raise EventError("not one JSON object") from None
     check_fields(found[2], fields)
@@ -133,6 +154,20 @@ def event_of(line: str) -> Event:
 
 def _no_constant(name: str) -> Any:
     raise ValueError(f"{name} is no JSON")
+
+
+def _finite(text: str) -> float:
+    value = float(text)
+    if not math.isfinite(value):
+        raise ValueError("beyond any number")
+    return value
+
+
+def _whole(text: str) -> int:
+    value = int(text)
+    if abs(value) > _WHOLE_MOST:
+        raise ValueError("beyond any count")
+    return value
 
 
 def _once(pairs: list[tuple[str, Any]]) -> dict[str, Any]:
@@ -151,8 +186,7 @@ def _number(value: Any) -> bool:
     return (
         isinstance(value, int | float)
         and not isinstance(value, bool)
-        and math.isfinite(value)
-        and abs(value) <= _FIGURE_MOST
+        and abs(value) <= _FIGURE_MOST  # which no NaN is
     )
 
 

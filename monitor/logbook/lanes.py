@@ -50,8 +50,8 @@ def slow(line: bytes) -> tuple[float, float, float] | None:
     return float(time_s), float(period_us), float(temp_c) if temp_c else NAN
 
 
-def fast(text: bytes) -> Rows:
-    """Rows of whole lines (each ends with LF)."""
+def fast(text: bytes, temperature: bool = True) -> Rows:
+    """Rows of whole lines (each ends with LF); without `temperature`, of two columns only."""
     padded = np.frombuffer(b" " * _PAD + text, np.uint8)
     words = np.ndarray((len(padded) - 7,), np.uint64, padded, 0, (1,))
     edges = _edges(padded)
@@ -59,6 +59,7 @@ def fast(text: bytes) -> Rows:
     good = np.zeros(n, bool)
     values = np.full((3, n), NAN)
     left = np.arange(n)
+    slowly: list[int] = []
     for _ in range(_ROUNDS):
         edges_left = edges if len(left) == n else [edge[left] for edge in edges]
         taken, figures = _same_shape(padded, words, edges_left)
@@ -69,15 +70,20 @@ def fast(text: bytes) -> Rows:
         else:
             good[left[taken]] = True
             values[:, left[taken]] = figures[:, taken]
+            if not taken[0]:  # a spoilt line must not lead another round
+                slowly.append(int(left[0]))
+                taken[0] = True
             left = left[~taken]
         if len(left) < FEW:
             break
     starts, ends = edges[0], edges[3]
-    for i in left.tolist():
+    for i in slowly + left.tolist():
         row = slow(text[starts[i] - _PAD : ends[i] - _PAD])
         if row is not None:
             good[i] = True
             values[:, i] = row
+    if not temperature:
+        good &= edges[2] == ends
     return Rows(good, *values)
 
 

@@ -21,13 +21,16 @@ from monitor.logbook.codec import (
     EventError,
     Header,
     HeaderError,
+    check_first,
     event_of,
     header_of,
 )
 
 Item = Block | Event
 _HEADER_MOST = 200  # comment lines before the columns
-_STANDARD = (["time_s", "period_us", "temp_c"], ["time_s", "period_us"])
+_WITHOUT = ["time_s", "period_us"]
+_STANDARD = ([*_WITHOUT, "temp_c"], _WITHOUT)
+_LONG = "line over 1 MB"
 
 
 class Parser:
@@ -44,7 +47,7 @@ class Parser:
         self._head: list[str] = []
         self._columns: list[str] | None = None
         self._tail = b""
-        self._skipping = False
+        self._skipping = False  # the rest of a line that is too long
         self._last_t = -1.0
 
     def feed(self, data: bytes) -> list[Item]:
@@ -57,58 +60,60 @@ class Parser:
             self._keep(self._tail + data)
             return []
         text = self._tail + data[: cut + 1]
+        if self._skipping:
+            text = text[text.index(b"\n") + 1 :]
+            self._skipping = False
         self._tail = b""
         self._keep(data[cut + 1 :])
-        if self._skipping_at_start:
-            text = text[text.index(b"\n") + 1 :]
-            self._skipping_at_start = False
+        items: list[Item] = []
         if self._columns is None:
-            text = self._read_head(text)
-        return self._read(text) if text else []
-
-    _skipping_at_start = False
+            text = self._read_head(text, items)
+        self._read(text, items)
+        return items
 
     def finish(self) -> list[Item]:
         """The file is at its end."""
-        if self._tail or self._skipping_at_start:
+        if self._tail and not self._skipping:
             self.dropped["torn"] += 1
-            self._tail = b""
+        self._tail = b""
         if self.header is None and self._head:
             self.header = header_of(self._head)
         return []
 
     def _keep(self, tail: bytes) -> None:
         if len(tail) > LINE_MOST:
-            if not self._skipping_at_start:
-                self.dropped["line over 1 MB"] += 1
-            self._skipping_at_start = True
+            if self._columns is None and not self._head:
+                check_first("")  # no log begins with such a line
+            if not self._skipping:
+                self.dropped[_LONG] += 1
+                self.lines += 1
+            self._skipping = True
             tail = b""
         self._tail = tail
 
-    def _read_head(self, text: bytes) -> bytes:
+    def _read_head(self, text: bytes, items: list[Item]) -> bytes:
         """Take the header's lines off the text, up to the columns' names."""
         at = 0
         while at < len(text):
             end = text.index(b"\n", at)
             line = text[at:end]
-            if line.startswith(b"#!"):
-                return text[at:]
             at = end + 1
-            self.lines += 1
-            if line.startswith(b"#") or not self._head:
-                self._head.append(line[:1000].decode("utf-8", "replace"))
-                if len(self._head) == 1 or len(self._head) > _HEADER_MOST:
-                    header_of([self._head[0], "# probe: x", "# started: 2000-01-01T00:00:00Z"])
-                if len(self._head) > _HEADER_MOST:
-                    raise HeaderError("no line of column names; expected time_s,period_us,temp_c")
+            if self._head and (line.startswith(b"#!") or len(line) > LINE_MOST):
+                self._comment(line, items)
                 continue
-            self.header = header_of(self._head)
-            self._columns = _columns(line)
-            break
+            self.lines += 1
+            if self._head and not line.startswith(b"#"):
+                self.header = header_of(self._head)
+                self._columns = _columns(line)
+                break
+            self._head.append(line[:1000].decode("utf-8", "replace"))
+            if len(self._head) == 1:
+                check_first(self._head[0])
+            if len(self._head) > _HEADER_MOST:
+                raise HeaderError("no line of column names; expected time_s,period_us,temp_c")
         return text[at:]
 
-    def _read(self, text: bytes) -> list[Item]:
-        items: list[Item] = []
+    def _read(self, text: bytes, items: list[Item]) -> None:
         at = 0
         while at < len(text):
             if text.startswith(b"#", at):
@@ -120,14 +125,13 @@ class Parser:
             end = len(text) if mark < 0 else mark + 1
             self._rows(text[at:end], items)
             at = end
-        return items
 
     def _comment(self, line: bytes, items: list[Item]) -> None:
         self.lines += 1
-        if not line.startswith(b"#!"):
-            return
         if len(line) > LINE_MOST:
-            self.dropped["line over 1 MB"] += 1
+            self.dropped[_LONG] += 1
+            return
+        if not line.startswith(b"#!"):
             return
         try:
             items.append(event_of(line.decode("utf-8")))
@@ -138,10 +142,11 @@ class Parser:
         n = text.count(b"\n")
         self.lines += n
         if self._columns in _STANDARD and n >= lanes.FEW:
-            rows = lanes.fast(text)
+            rows = lanes.fast(text, self._columns != _WITHOUT)
             if not rows.good.all():
+                lines = text.split(b"\n")
                 for i in np.flatnonzero(~rows.good).tolist():
-                    self.dropped[_wrong(text.split(b"\n", i + 1)[i])] += 1
+                    self.dropped[self._wrong(lines[i])] += 1
             table = np.stack((rows.time_s, rows.period_us, rows.temp_c))[:, rows.good]
         else:
             table = self._slowly(text)
@@ -154,49 +159,57 @@ class Parser:
             table = table[:, ~back]
         self._last_t = float(newest[-1])
         if table.shape[1]:
+            table.setflags(write=False)
             items.append(Block(*table))
 
     def _slowly(self, text: bytes) -> np.ndarray:
         rows: list[tuple[float, float, float]] = []
-        standard = self._columns in _STANDARD
+        by_name = self._columns != _STANDARD[0]
         for line in text.split(b"\n")[:-1]:
-            row = lanes.slow(line) if standard else self._by_name(line)
+            row = self._by_name(line) if by_name else lanes.slow(line)
             if row is None:
-                self.dropped[_wrong(line)] += 1
+                self.dropped[self._wrong(line)] += 1
             else:
                 rows.append(row)
         return np.array(rows, np.float64).reshape(-1, 3).T
 
     def _by_name(self, line: bytes) -> tuple[float, float, float] | None:
-        """A row whose columns stand in another order, or among unknown ones."""
+        """A row whose columns are not the usual three."""
         columns = self._columns or []
         cells = line.split(b",")
         if len(cells) == len(columns) - 1 and columns[-1] == "temp_c":
             cells.append(b"")
-        if len(cells) != len(columns):
+        if len(cells) != len(columns) or len(line) > LINE_MOST or b"\0" in line:
             return None
         by_name = dict(zip(columns, cells))
         return lanes.slow(
             b",".join((by_name["time_s"], by_name["period_us"], by_name.get("temp_c", b"")))
         )
 
+    def _wrong(self, line: bytes) -> str:
+        columns = self._columns or []
+        least = len(columns) - (columns[-1] == "temp_c")
+        return _wrong(line, range(least, len(columns) + 1))
+
 
 def _columns(line: bytes) -> list[str]:
     """Names of the columns. Raises HeaderError without time_s and period_us."""
     names = [name.strip() for name in line.decode("utf-8", "replace").split(",")]
-    for name in ("time_s", "period_us"):
-        if names.count(name) != 1:
+    for name in _WITHOUT:
+        if name not in names:
             raise HeaderError(f"no column {name}; expected time_s,period_us,temp_c")
+    if len(set(names)) < len(names):
+        raise HeaderError("a column's name stands twice; expected time_s,period_us,temp_c")
     return names
 
 
-def _wrong(line: bytes) -> str:
-    """What is wrong with a line that is no row."""
+def _wrong(line: bytes, columns: range) -> str:
+    """What is wrong with a line that is no row of so many columns."""
+    if len(line) > LINE_MOST:
+        return _LONG
     if b"\0" in line:
         return "NUL in line"
-    if len(line) > LINE_MOST:
-        return "line over 1 MB"
-    return "no number" if line.count(b",") in (1, 2) else "number of columns"
+    return "no number" if line.count(b",") + 1 in columns else "number of columns"
 
 
 class BareParser:
@@ -210,20 +223,26 @@ class BareParser:
         self.lines = 0
         self._rate_hz = rate_hz
         self._tail = b""
+        self._skipping = False
         self._rows = 0
 
     def feed(self, data: bytes) -> list[Item]:
         """Rows that these further bytes complete."""
         *lines, self._tail = (self._tail + data).split(b"\n")
+        if lines and self._skipping:
+            del lines[0]
+            self._skipping = False
         if len(self._tail) > LINE_MOST:
-            self.dropped["line over 1 MB"] += 1
+            self.dropped[_LONG] += not self._skipping
+            self.lines += not self._skipping
+            self._skipping = True
             self._tail = b""
         rows: list[tuple[float, float, float]] = []
         for line in lines:
             self.lines += 1
-            found = self._ROW.fullmatch(line)
+            found = self._ROW.fullmatch(line) if len(line) <= LINE_MOST else None
             if found is None:
-                self.dropped[_wrong(line)] += 1
+                self.dropped[_wrong(line, range(1, 3))] += 1
                 continue
             time_s = round(self._rows / self._rate_hz, 6)
             self._rows += 1
@@ -232,6 +251,7 @@ class BareParser:
 
     def finish(self) -> list[Item]:
         """The capture is at its end."""
-        if self._tail:
+        if self._tail and not self._skipping:
             self.dropped["torn"] += 1
+        self._tail = b""
         return []

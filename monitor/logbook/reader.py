@@ -8,20 +8,24 @@ Rules:
 
 from __future__ import annotations
 
+import errno
 import os
 import stat
 import zlib
+from collections import Counter
 from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 from datetime import UTC, datetime
+from io import FileIO
 from pathlib import Path
 
-from monitor.logbook.codec import FIRST_LINE, Header, HeaderError, parse_name
+from monitor.logbook.codec import FIRST_LINE, Header, HeaderError, NoLogError, parse_name
 from monitor.logbook.parser import BareParser, Parser
 
 CHUNK = 262_144
+_STEP = 64  # bytes of a spoilt gzip at a time
 _GZIP = b"\x1f\x8b"
-_FORM = b"# stillbrine log "
+_READ = os.O_RDONLY | os.O_NONBLOCK | os.O_CLOEXEC  # a pipe without a writer must not hold us
 
 
 class LogError(ValueError):
@@ -40,9 +44,9 @@ class Part:
         """Its number."""
         return self.header.part
 
-    def chunks(self) -> Iterator[bytes]:
-        """Its text, at most CHUNK bytes at a time. Raises LogError."""
-        return chunks(self.path)
+    def chunks(self, damage: Counter[str] | None = None) -> Iterator[bytes]:
+        """Its text, at most CHUNK bytes at a time; see `chunks`. Raises LogError."""
+        return chunks(self.path, damage)
 
 
 @dataclass(frozen=True)
@@ -59,21 +63,34 @@ class Run:
         return Parser() if self.rate_hz is None else BareParser(self.rate_hz)
 
 
-def chunks(path: Path) -> Iterator[bytes]:
-    """The text of a file, plain or gzipped, in chunks; bounded memory. Raises LogError."""
+def chunks(path: Path, damage: Counter[str] | None = None) -> Iterator[bytes]:
+    """The text of a file, plain or gzipped, in chunks; bounded memory.
+
+    A gzip that is cut off or spoilt is counted in `damage`. Raises LogError.
+    """
+    damage = Counter() if damage is None else damage
     try:
-        descriptor = os.open(path, os.O_RDONLY | os.O_NONBLOCK | os.O_CLOEXEC)
-    except OSError as wrong:
-        raise LogError(f"{path}: {wrong.strerror}; expected a readable log") from None
-    with os.fdopen(descriptor, "rb", buffering=0) as file:
-        if not stat.S_ISREG(os.fstat(descriptor).st_mode):
-            raise LogError(f"{path}: no regular file; expected a log")
+        file = _opened(path)
+    except (OSError, ValueError) as wrong:
+        said = wrong.strerror if isinstance(wrong, OSError) else "no path"
+        raise LogError(f"{path}: {said}; expected a readable log") from None
+    with file:
         try:
             first = file.read(CHUNK)
             rest = iter(lambda: file.read(CHUNK), b"")
-            yield from _inflated(first, rest) if first.startswith(_GZIP) else _plain(first, rest)
+            data = _plain(first, rest)
+            yield from _inflated(data, damage) if first.startswith(_GZIP) else data
         except OSError as wrong:
             raise LogError(f"{path}: {wrong.strerror}; expected a readable log") from None
+
+
+def _opened(path: Path) -> FileIO:
+    """A regular file, to read from. Raises OSError, and ValueError for what is no path."""
+    file = FileIO(path, opener=lambda name, _: os.open(name, _READ))
+    if not stat.S_ISREG(os.fstat(file.fileno()).st_mode):
+        file.close()
+        raise OSError(errno.EINVAL, "no regular file")
+    return file
 
 
 def _plain(first: bytes, rest: Iterator[bytes]) -> Iterator[bytes]:
@@ -82,20 +99,37 @@ def _plain(first: bytes, rest: Iterator[bytes]) -> Iterator[bytes]:
     yield from rest
 
 
-def _inflated(first: bytes, rest: Iterator[bytes]) -> Iterator[bytes]:
-    """What a gzip holds, up to where it is cut off or damaged."""
-    unpack = zlib.decompressobj(wbits=31)
-    for data in _plain(first, rest):
-        while data:
+def _inflated(pieces: Iterator[bytes], damage: Counter[str]) -> Iterator[bytes]:
+    """What a gzip holds, up to where it is cut off or spoilt."""
+    unpack, whole = zlib.decompressobj(wbits=31), True
+    for data in pieces:
+        full = False  # then more may wait inside than was asked for
+        while data or full:
+            whole = False
+            before = unpack.copy()
             try:
                 text = unpack.decompress(data, CHUNK)
             except zlib.error:
+                damage["gzip damaged"] += 1
+                yield from _up_to_damage(before, data)
                 return
             if text:
                 yield text
-            data = unpack.unconsumed_tail
+            data, full = unpack.unconsumed_tail, len(text) == CHUNK
             if unpack.eof:  # another member may follow
-                data, unpack = unpack.unused_data, zlib.decompressobj(wbits=31)
+                data, full, whole = unpack.unused_data, False, True
+                unpack = zlib.decompressobj(wbits=31)
+    if not whole:
+        damage["gzip cut off"] += 1
+
+
+def _up_to_damage(unpack: zlib._Decompress, data: bytes) -> Iterator[bytes]:
+    """What can be read of a piece that holds the damage."""
+    try:
+        for at in range(0, len(data), _STEP):
+            yield unpack.decompress(data[at : at + _STEP])
+    except zlib.error:
+        return
 
 
 def read_header(path: Path) -> Header | None:
@@ -103,12 +137,12 @@ def read_header(path: Path) -> Header | None:
     parser = Parser()
     try:
         for chunk in chunks(path):
-            if not chunk.startswith(_FORM):
-                return None
             parser.feed(chunk)
             if parser.header is not None:
                 return parser.header
         parser.finish()
+    except NoLogError:
+        return None
     except HeaderError as wrong:
         raise LogError(f"{path}: {wrong}") from None
     return parser.header
@@ -193,9 +227,12 @@ class Tail:
         self._inode: int | None = None
 
     def read(self) -> bytes:
-        """What came since the last time, at most CHUNK bytes; b"" for nothing."""
+        """Whole lines that came since the last time, at most CHUNK bytes; b"" for nothing.
+
+        A half line waits, so that a writer may cut back to its last whole one unnoticed.
+        """
         try:
-            with self.path.open("rb") as file:
+            with _opened(self.path) as file:
                 info = os.fstat(file.fileno())
                 self.replaced = self._inode is not None and (
                     info.st_ino != self._inode or info.st_size < self._at
@@ -207,5 +244,7 @@ class Tail:
                 data = file.read(CHUNK)
         except OSError:
             return b""
+        if len(data) < CHUNK or b"\n" in data:
+            data = data[: data.rfind(b"\n") + 1]
         self._at += len(data)
         return data

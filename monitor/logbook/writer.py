@@ -28,6 +28,7 @@ class LogWriter:
         self.folder = folder
         self.header = Header(probe, started, run, 1)
         self._whole = 0  # bytes up to the last line that was written whole
+        self._spoilt = False  # a write failed or fell short after them
         self._fd = self._create()
         self.path = self.folder / file_name(self.header)
 
@@ -37,12 +38,16 @@ class LogWriter:
 
     def append(self, data: bytes) -> None:
         """Append whole lines. Raises LogWriteError; then nothing of them counts as written."""
+        if self._spoilt:
+            self._cut_back()
         view = memoryview(data)
         try:
             while view:
+                self._spoilt = True
                 view = view[os.write(self._fd, view) :]
         except OSError as wrong:
             raise LogWriteError(wrong.errno, f"{self.path.name}: {wrong.strerror}") from None
+        self._spoilt = False
         self._whole += len(data)
 
     def recover(self) -> None:
@@ -50,19 +55,15 @@ class LogWriter:
 
         Raises LogWriteError while it does not.
         """
+        self._cut_back()
+        self.append(b"#\n")
+
+    def _cut_back(self) -> None:
         try:
             os.ftruncate(self._fd, self._whole)
-            os.lseek(self._fd, 0, os.SEEK_END)
-            probe = b"#\n"
-            written = os.write(self._fd, probe)
-            if written != len(probe):
-                os.ftruncate(self._fd, self._whole)
-                raise LogWriteError(28, f"{self.path.name}: disk full")
-        except LogWriteError:
-            raise
         except OSError as wrong:
             raise LogWriteError(wrong.errno, f"{self.path.name}: {wrong.strerror}") from None
-        self._whole += len(probe)
+        self._spoilt = False
 
     def sync(self) -> None:
         """Bring what was written to the disk; may take seconds, call it from a thread."""
@@ -80,9 +81,17 @@ class LogWriter:
         except LogWriteError:
             self.header = header
             raise
+        if self._spoilt:
+            try:
+                os.ftruncate(before, self._whole)
+            except OSError:
+                pass  # the half line stays the last of that part, where a reader drops it
         self.path = self.folder / file_name(self.header)
-        self._whole = 0
-        os.fsync(before)
+        self._whole, self._spoilt = 0, False
+        try:
+            os.fsync(before)
+        except OSError:
+            pass  # a disk that fails shows at the next append
         os.close(before)
 
     def close(self) -> None:
@@ -117,6 +126,8 @@ def compress(path: Path) -> Path:
                 shutil.copyfileobj(plain, out, 1 << 18)
             raw.flush()
             os.fsync(raw.fileno())
+            written = os.fstat(plain.fileno())
+        os.utime(temporary, ns=(written.st_atime_ns, written.st_mtime_ns))
         temporary.rename(packed)
     finally:
         temporary.unlink(missing_ok=True)
