@@ -1,228 +1,247 @@
-"""Arrays into text: lines of looks, a canvas of braille dots, places on an axis.
+"""Arrays into characters: a pure canvas of braille dots, marks and words, with true gaps.
 
-Nothing here knows a terminal. A look is a word that a palette turns into colours and weights;
-`front/back` is a look over the look of what lies behind it.
+A canvas is `height` x `width` cells; a cell holds 4 x 2 dots, so a curve has 4 height rows and
+2 width columns to be drawn in. Inks and papers are small numbers; what colour they have is not
+known here.
 """
 
 from __future__ import annotations
 
-import math
-from collections.abc import Iterable
-from typing import NamedTuple
-
 import numpy as np
 from numpy.typing import NDArray
-from rich.cells import cell_len, set_cell_size
 
 from monitor.blocks import Floats
 
+Bools = NDArray[np.bool_]
+Run = tuple[str, str]  # text, style
 
-class Bit(NamedTuple):
-    """A piece of a line and its look."""
-
-    text: str
-    look: str = ""
-
-
-Line = tuple[Bit, ...]
-
-# From the bottom to the top: what is drawn over what.
-LAYERS = ("", "grid", "band", "past", "cone", "ghost", "raw", "rest", "faint", "doubtful", "trace")
-_RANK = {look: i for i, look in enumerate(LAYERS)}
-_WEIGHTS = np.array([[0x01, 0x08], [0x02, 0x10], [0x04, 0x20], [0x40, 0x80]], np.uint8)
-_BRAILLE = 0x2800
-_SPACE = ord(" ")
+_BITS = np.array([[0x01, 0x08], [0x02, 0x10], [0x04, 0x20], [0x40, 0x80]], np.uint16)
+_BLANK = 0x2800
 
 
-def fit(text: str, width: int) -> str:
-    """The text in exactly so many cells, cut with `…` or padded."""
-    if cell_len(text) <= width:
-        return set_cell_size(text, width)
-    return set_cell_size(text, width - 1) + "…" if width > 0 else ""
+class Columns:
+    """Readings gathered into columns of dots: lowest and highest of each, NaN where none.
 
+    low, high : (n,) float64
+    joined : (n,) bool, whether a column goes on from the one before it
+    """
 
-def width_of(line: Iterable[Bit]) -> int:
-    """How many cells a line takes."""
-    return sum(cell_len(bit.text) for bit in line)
+    def __init__(
+        self, t: Floats, y: Floats, from_t: float, dt: float, n: int, gap_s: float
+    ) -> None:
+        """`dt` s a column; readings further apart than `gap_s` are not joined."""
+        self.low = np.full(n, np.nan)
+        self.high = np.full(n, np.nan)
+        self.joined = np.zeros(n, bool)
+        keep = np.isfinite(y)
+        t, y = t[keep], y[keep]
+        column = np.floor((t - from_t) / dt).astype(np.int64)
+        inside = (column >= 0) & (column < n)
+        t, y, column = t[inside], y[inside], column[inside]
+        if not len(t):
+            return
+        starts = np.concatenate(([0], np.flatnonzero(np.diff(column)) + 1))
+        at = column[starts]
+        self.low[at] = np.minimum.reduceat(y, starts)
+        self.high[at] = np.maximum.reduceat(y, starts)
+        last = np.concatenate((starts[1:], [len(t)])) - 1
+        near = t[starts[1:]] - t[last[:-1]] <= max(gap_s, 1.01 * dt)
+        self.joined[at[1:]] = near
+        self._bridge(at, near, y[last[:-1]], y[starts[1:]])
 
-
-def filled(line: Iterable[Bit], width: int, look: str = "") -> Line:
-    """The line in exactly `width` cells."""
-    kept: list[Bit] = []
-    left = width
-    for bit in line:
-        wide = cell_len(bit.text)
-        if wide > left:
-            kept.append(Bit(fit(bit.text, left), bit.look))
-            left = 0
-            break
-        if wide:
-            kept.append(bit)
-            left -= wide
-    if left:
-        kept.append(Bit(" " * left, look))
-    return tuple(kept)
+    def _bridge(self, at: NDArray[np.int64], near: Bools, left: Floats, right: Floats) -> None:
+        """Fill the columns between two that belong together, on a straight line."""
+        between = np.arange(len(self.low))
+        pair = np.searchsorted(at, between, side="right") - 1
+        empty = np.isnan(self.low) & (pair >= 0) & (pair < len(at) - 1)
+        empty[empty] = near[pair[empty]]
+        if not empty.any():
+            return
+        i = pair[empty]
+        share = (between[empty] - at[i]) / (at[i + 1] - at[i])
+        line = left[i] + share * (right[i] - left[i])
+        self.low[empty] = self.high[empty] = line
+        self.joined[empty] = True
 
 
 class Canvas:
-    """Cells of 2 x 4 dots, layer over layer, and characters over them."""
+    """Cells to draw in; values lie between `low` (bottom) and `high` (top)."""
 
-    def __init__(self, width: int, height: int) -> None:
-        self.width = width
-        self.height = height
-        self._bits = np.zeros((height, width), np.uint8)
-        self._rank = np.zeros((height, width), np.uint8)
-        self._back = np.zeros((height, width), np.uint8)
-        self._chars = np.zeros((height, width), np.uint32)
-        self._looks = list(LAYERS)
+    def __init__(self, width: int, height: int, low: float, high: float) -> None:
+        self.width, self.height = width, height
+        self.low, self.high = low, high
+        self.chars = np.full((height, width), ord(" "), np.uint32)
+        self.ink = np.zeros((height, width), np.int8)
+        self.paper = np.zeros((height, width), np.int8)
+        self._dots = np.zeros((height, width), np.uint16)
 
-    def grid(self) -> NDArray[np.bool_]:
-        """An empty layer, (4 height, 2 width) dots, True where one is to be."""
-        return np.zeros((4 * self.height, 2 * self.width), np.bool_)
+    def row_of(self, value: float) -> int | None:
+        """The cell row of a value; None where it is off the scale."""
+        if not self.low <= value <= self.high:
+            return None
+        share = (self.high - value) / ((self.high - self.low) or 1.0)
+        return min(int(share * self.height), self.height - 1)
 
-    def lay(self, dots: NDArray[np.bool_], look: str) -> None:
-        """Put a layer of dots on: it hides in its cells what lies below it in LAYERS."""
-        table = dots.reshape(self.height, 4, self.width, 2)
-        weighed = table * _WEIGHTS[None, :, None, :]
-        bits = weighed.sum(axis=(1, 3)).astype(np.uint8)
-        rank = _RANK[look]
-        over = (bits > 0) & (self._rank < rank)
-        same = (bits > 0) & (self._rank == rank)
-        self._bits[over] = bits[over]
-        self._rank[over] = rank
-        self._bits[same] |= bits[same]
+    def dot_rows(self, values: Floats) -> Floats:
+        """Dot rows of values, (n,) float; beyond the scale they lie outside, NaN stays NaN."""
+        span = (self.high - self.low) or 1.0
+        rows = (self.high - values) / span * (4 * self.height) - 0.5
+        return np.clip(np.rint(rows), -2.0, 4.0 * self.height + 1.0)
 
-    def shade(self, first_row: int, last_row: int, look: str, first: int = 0, last: int = -1) -> None:
-        """Look of what lies behind these cells, rows and columns inclusive."""
-        last = self.width - 1 if last < 0 else last
-        top, bottom = max(first_row, 0), min(last_row, self.height - 1)
-        if top <= bottom and first <= last:
-            self._back[top : bottom + 1, max(first, 0) : last + 1] = self._number(look)
+    def curve(self, columns: Columns, ink: int) -> None:
+        """Draw readings: each column's span, and its join to the one before."""
+        top, bottom = self.dot_rows(columns.high), self.dot_rows(columns.low)
+        before_top = np.concatenate(([np.nan], top[:-1]))
+        before_bottom = np.concatenate(([np.nan], bottom[:-1]))
+        join = columns.joined & np.isfinite(before_top)
+        with np.errstate(invalid="ignore"):
+            down = join & (top > before_bottom)
+            up = join & (bottom < before_top)
+        top = np.where(down, before_bottom + 1.0, top)
+        bottom = np.where(up, before_top - 1.0, bottom)
+        self.fill(top, bottom, ink)
 
-    def put(self, row: int, column: int, text: str, look: str, under: bool = False) -> None:
-        """Characters (one cell each) over the dots; `under`: only where there are none."""
+    def fill(self, top: Floats, bottom: Floats, ink: int, every: int = 1) -> None:
+        """Set the dots from `top` to `bottom`, (2 width,) dot rows; `every`: only some of them."""
+        rows = np.arange(4 * self.height)[:, None]
+        with np.errstate(invalid="ignore"):
+            dots = (rows >= np.minimum(top, bottom)) & (rows <= np.maximum(top, bottom))
+        if every > 1:
+            columns = np.arange(2 * self.width)[None, :]
+            dots &= (rows + columns * 2) % every == 0
+        self.dots(dots, ink)
+
+    def points(self, t: Floats, y: Floats, from_t: float, dt: float, ink: int) -> None:
+        """Single dots, unjoined."""
+        column = np.floor((t - from_t) / dt)
+        span = (self.high - self.low) or 1.0
+        with np.errstate(invalid="ignore"):
+            row = np.rint((self.high - y) / span * 4 * self.height - 0.5)
+            inside = np.isfinite(y) & (column >= 0) & (column < 2 * self.width)
+            inside &= (row >= 0) & (row < 4 * self.height)
+        dots = np.zeros((4 * self.height, 2 * self.width), bool)
+        dots[row[inside].astype(np.int64), column[inside].astype(np.int64)] = True
+        self.dots(dots, ink)
+
+    def dots(self, dots: Bools, ink: int) -> None:
+        """Add dots, (4 height, 2 width); later inks win a shared cell."""
+        cells = dots.reshape(self.height, 4, self.width, 2)
+        bits = np.einsum("hrwc,rc->hw", cells, _BITS).astype(np.uint16)
+        there = bits > 0
+        self._dots |= bits
+        self.chars[there] = _BLANK + self._dots[there]
+        self.ink[there] = ink
+
+    def band(self, low: float, high: float, paper: int, edge_ink: int, edge: str = "") -> None:
+        """Shade the rows between two values; with `edge`, draw their bounds too."""
+        edges = np.linspace(self.high, self.low, self.height + 1)
+        middle = 0.5 * (edges[1:] + edges[:-1])
+        self.paper[(middle >= low) & (middle <= high)] = paper
+        for bound in (low, high):
+            row = self.row_of(bound)
+            if row is not None and edge:
+                blank = self.chars[row] == ord(" ")
+                self.chars[row, blank] = ord(edge)
+                self.ink[row, blank] = edge_ink
+
+    def upright(self, column: int, ink: int, char: str, over: bool = False) -> None:
+        """A vertical rule through one cell column; over what is drawn only if asked."""
+        if not 0 <= column < self.width:
+            return
+        cells = np.full(self.height, True) if over else self.chars[:, column] == ord(" ")
+        self.chars[cells, column] = ord(char)
+        self.ink[cells, column] = ink
+
+    def level(self, row: int | None, first: int, last: int, ink: int, char: str) -> None:
+        """A horizontal rule over blank cells from column `first` to `last`."""
+        if row is None:
+            return
+        first, last = max(first, 0), min(last, self.width - 1)
+        cells = np.arange(first, last + 1)
+        cells = cells[self.chars[row, first : last + 1] == ord(" ")]
+        self.chars[row, cells] = ord(char)
+        self.ink[row, cells] = ink
+
+    def put(self, row: int, column: int, text: str, ink: int) -> None:
+        """Write text of narrow characters over what is there; what does not fit is cut."""
         if not 0 <= row < self.height:
             return
-        number = self._number(look)
-        for i, char in enumerate(text, column):
-            if 0 <= i < self.width and not (under and (self._bits[row, i] or self._chars[row, i])):
-                self._chars[row, i] = ord(char)
-                self._rank[row, i] = number
+        text = text[max(-column, 0) : max(self.width - column, 0)]
+        column = max(column, 0)
+        for i, char in enumerate(text):
+            self.chars[row, column + i] = ord(char)
+            self.ink[row, column + i] = ink
 
-    def _number(self, look: str) -> int:
-        if look not in self._looks:
-            self._looks.append(look)
-        return self._looks.index(look)
+    def runs(self, row: int, names: tuple[str, ...], papers: tuple[str, ...]) -> list[Run]:
+        """One row as runs of text of one style: an ink's name followed by a paper's."""
+        key = self.ink[row].astype(np.int16) * 16 + self.paper[row]
+        cuts = [0, *(np.flatnonzero(np.diff(key)) + 1).tolist(), self.width]
+        line = self.chars[row].tobytes().decode("utf-32-le")
+        return [
+            (line[a:b], names[int(key[a]) >> 4] + papers[int(key[a]) & 15])
+            for a, b in zip(cuts, cuts[1:])
+            if b > a
+        ]
 
-    def lines(self) -> list[Line]:
-        """The rows as they are to be printed."""
-        dotted = np.where(self._bits > 0, self._bits.astype(np.uint32) + _BRAILLE, _SPACE)
-        chars = np.where(self._chars > 0, self._chars, dotted).astype("<u4")
-        looks = self._back.astype(np.int64) * 256 + self._rank
-        return [self._line(row, look) for row, look in zip(chars, looks)]
-
-    def _line(self, chars: NDArray[np.uint32], looks: NDArray[np.int64]) -> Line:
-        text = chars.tobytes().decode("utf-32-le")
-        cuts = [0, *(np.flatnonzero(np.diff(looks)) + 1).tolist(), len(text)]
-        return tuple(
-            Bit(text[a:b], self._name(int(looks[a]))) for a, b in zip(cuts, cuts[1:]) if a < b
-        )
-
-    def _name(self, look: int) -> str:
-        front, back = self._looks[look % 256], self._looks[look // 256]
-        return f"{front}/{back}" if back else front
-
-
-class Axis(NamedTuple):
-    """A straight axis: values from `low` to `high` on `n` dots."""
-
-    low: float
-    high: float
-    n: int
-
-    def place(self, values: Floats) -> NDArray[np.int64]:
-        """Dots of these values, (m,); -1 or n for what lies outside, -1 for NaN."""
-        with np.errstate(invalid="ignore", over="ignore"):
-            at = np.floor((values - self.low) / (self.high - self.low) * self.n)
-        at = np.where(np.isnan(at), -1.0, np.clip(at, -1.0, float(self.n)))
-        return at.astype(np.int64)
-
-    def upward(self, values: Floats) -> NDArray[np.int64]:
-        """The same counted from the top, for a vertical axis; clipped to the axis."""
-        with np.errstate(invalid="ignore", over="ignore"):
-            at = (self.high - values) / (self.high - self.low) * (self.n - 1)
-        return np.clip(np.nan_to_num(np.rint(at), nan=0.0), 0, self.n - 1).astype(np.int64)
-
-    def holds(self, values: Floats) -> NDArray[np.bool_]:
-        """Whether these values lie on it."""
-        return np.asarray((values >= self.low) & (values <= self.high))
-
-
-class Columns(NamedTuple):
-    """Lowest and highest value in each dot column, (n,) each; NaN where there is none."""
-
-    low: Floats
-    high: Floats
-
-
-def binned(time_s: Floats, low: Floats, high: Floats, axis: Axis, join_s: float) -> Columns:
-    """What falls into each dot column, in order of time.
-
-    A column between two readings at most `join_s` apart is filled; a longer silence stays a gap.
-    """
-    lows, highs = np.full(axis.n, np.nan), np.full(axis.n, np.nan)
-    fine = ~(np.isnan(low) | np.isnan(high)) & (time_s >= axis.low) & (time_s < axis.high)
-    time_s, low, high = time_s[fine], low[fine], high[fine]
-    if not len(time_s):
-        return Columns(lows, highs)
-    at = axis.place(time_s)
-    starts = np.concatenate(([0], np.flatnonzero(np.diff(at)) + 1))
-    lows[at[starts]] = np.minimum.reduceat(low, starts)
-    highs[at[starts]] = np.maximum.reduceat(high, starts)
-    width_s = (axis.high - axis.low) / axis.n
-    if width_s < join_s and len(time_s) > 1:
-        _fill(lows, highs, time_s, 0.5 * (low + high), axis, join_s)
-    return Columns(lows, highs)
-
-
-def _fill(
-    lows: Floats, highs: Floats, time_s: Floats, middle: Floats, axis: Axis, join_s: float
-) -> None:
-    centre = axis.low + (np.arange(axis.n) + 0.5) * (axis.high - axis.low) / axis.n
-    after = np.clip(np.searchsorted(time_s, centre), 1, len(time_s) - 1)
-    between = (centre > time_s[after - 1]) & (centre < time_s[after])
-    near = between & (time_s[after] - time_s[after - 1] <= join_s) & np.isnan(lows)
-    values = np.interp(centre[near], time_s, middle)
-    lows[near] = values
-    highs[near] = values
-
-
-def line_dots(columns: Columns, vertical: Axis, dots: NDArray[np.bool_]) -> None:
-    """Draw columns as one line: neighbours are joined, gaps are not."""
-    there = ~np.isnan(columns.low)
-    low, high = columns.low.copy(), columns.high.copy()
-    both = there[1:] & there[:-1]
-    low[1:] = np.where(both & (low[1:] > columns.high[:-1]), columns.high[:-1], low[1:])
-    high[1:] = np.where(both & (high[1:] < columns.low[:-1]), columns.low[:-1], high[1:])
-    there &= (high >= vertical.low) & (low <= vertical.high)
-    top, bottom = vertical.upward(high), vertical.upward(low)
-    rows = np.arange(vertical.n)[:, None]
-    dots |= (rows >= top) & (rows <= bottom) & there
+    def text(self) -> str:
+        """The whole canvas without styles."""
+        return "\n".join(row.tobytes().decode("utf-32-le") for row in self.chars)
 
 
 def nice_step(span: float, most: int) -> float:
-    """A step of 1, 2 or 5 times a power of ten that divides `span` into at most `most`."""
+    """The smallest 1, 2 or 5 times a power of ten that cuts `span` into at most `most` steps."""
     raw = span / max(most, 1)
-    if not (raw > 0 and math.isfinite(raw)):
-        return 1.0
-    power = 10.0 ** math.floor(math.log10(raw))
-    return next(power * m for m in (1.0, 2.0, 5.0, 10.0) if power * m >= raw * (1 - 1e-9))
+    power = 10.0 ** np.floor(np.log10(raw))
+    for factor in (1.0, 2.0, 5.0):
+        if factor * power >= raw * (1.0 - 1e-9):
+            return float(factor * power)
+    return float(10.0 * power)
 
 
-TIME_STEPS = (1, 2, 5, 10, 15, 30, 60, 120, 300, 600, 900, 1800, 3600, 7200, 10800, 21600, 43200)
+def nice_bounds(low: float, high: float, least: float) -> tuple[float, float]:
+    """Bounds that hold [low, high], at least `least` apart, on round figures so that they keep."""
+    middle, span = 0.5 * (low + high), max(high - low, least, 1e-12)
+    step = nice_step(span, 6)
+    low, high = middle - 0.52 * span, middle + 0.52 * span
+    return float(np.floor(low / step) * step), float(np.ceil(high / step) * step)
 
 
-def time_step(span_s: float, most: int) -> float:
-    """A step of whole seconds, minutes or hours that divides `span_s` into at most `most`."""
-    raw = span_s / max(most, 1)
-    return float(next((s for s in TIME_STEPS if s >= raw), 86400 * max(1, math.ceil(raw / 86400))))
+def strip(
+    width: int,
+    scale: tuple[float, float],
+    aim: tuple[float, float],
+    value: float,
+    u95: float,
+    landing: float = float("nan"),
+    hollow: bool = False,
+) -> str:
+    """A value with its doubt on a line that shows the aim to scale.
+
+    `├` and `┤` bound the aim; the doubt is a bar, drawn through a bound as `┿` where it reaches
+    across it: inside surely, inside barely and cannot say differ in shape.
+    """
+    low, high = scale
+
+    def at(x: float) -> float:
+        return (x - low) / (high - low) * width
+
+    bounds = [min(max(int(at(bound)), 0), width - 1) for bound in aim]
+    cells = ["·" if bounds[0] < i < bounds[1] else " " for i in range(width)]
+    cells[bounds[0]], cells[bounds[1]] = "├", "┤"
+    if np.isfinite(landing) and 0 <= at(landing) < width and int(at(landing)) not in bounds:
+        cells[int(at(landing))] = "┊"
+    if not np.isfinite(value):
+        return "".join(cells)
+    half = u95 if np.isfinite(u95) else 0.0
+    left, right = at(value - half), at(value + half)
+    for i in range(max(int(left), 0), min(int(right) + 1, width)):
+        covers_left, covers_right = left <= i + 0.25, right >= i + 0.75
+        if covers_left or covers_right:
+            bar = "━" if covers_left and covers_right else "╸" if covers_left else "╺"
+            cells[i] = "┿" if i in bounds else bar
+    mark = "◇" if hollow else "◆"
+    place = at(value)
+    cells[int(min(max(place, 0), width - 1))] = (
+        "◀" if place < 0 else "▶" if place >= width else mark
+    )
+    return "".join(cells)
