@@ -34,6 +34,7 @@ class Asked:
     slope: float  # ln period an hour
     slope_u: float
     t: float  # when it was read
+    reading_u: float = 0.0  # relative, common to before and after: no thermometer
 
 
 def favours_fouling(asked: Asked, after_pct: float, t: float) -> float:
@@ -57,7 +58,11 @@ def favours_fouling(asked: Asked, after_pct: float, t: float) -> float:
     diluted = fuller.landing(read, 0.0)[0] * (1.0 - creep / POWER)
     step = abs(landed - read * math.exp(lost))
     creep_u = math.hypot(asked.slope_u * hours, CREEP_U * creep)
-    u = WIDEN * math.hypot(step * math.hypot(*STEP_U), READING_U * read, creep_u * read)
+    here, more = (dose.landing(scale * read, 0.0)[0] for scale in (1.0, 1.01))
+    added = here - (more - here) / 0.01  # the liquid's own part, which no reading's error scales
+    common_u = asked.reading_u * added
+    noise_u = READING_U * read
+    u = WIDEN * math.hypot(step * math.hypot(*STEP_U), noise_u, creep_u * read, common_u)
     u_diluted = math.hypot(u, 0.3 * lost * step)
     z_fouled, z_diluted = (after_pct - fouled) / u, (after_pct - diluted) / u_diluted
     if min(abs(z_fouled), abs(z_diluted)) > OFF:

@@ -247,8 +247,8 @@ class Creep:
         salinity = float(self.minutes.column(3, kept)[before - 3 : before].mean())
         if salinity == salinity:
             read_t = float(times[before - 2]) - 30.0
-            slope, u = self._now()
-            self._asked = Asked(dose, salinity, self.cost, slope, u, read_t)
+            unseen = self.unseen if self._blind else 0.0
+            self._asked = Asked(dose, salinity, self.cost, *self._now(), read_t, unseen)
 
     def _now(self) -> tuple[float, float]:
         """The creep's slope of late and its u: a film may slow down as it grows."""

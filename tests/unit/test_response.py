@@ -54,3 +54,9 @@ def test_a_dose_of_unknown_volume_or_liquid_says_nothing(unknown: str) -> None:
 def test_a_small_film_is_not_decided_by_one_dose() -> None:
     slight = Asked(GIVEN, READ, 0.004, 0.0, 0.0005, 7200.0)
     assert abs(favours_fouling(slight, GIVEN.landing(READ, 0.0)[0], AFTER_T)) < 1.0
+
+
+def test_without_a_thermometer_an_answer_tells_less() -> None:
+    blind = Asked(GIVEN, READ, COST, SLOPE, 0.0005, 7200.0, 0.02)
+    seen = favours_fouling(ASKED, seen_through_a_film(), AFTER_T)
+    assert 0.0 < favours_fouling(blind, seen_through_a_film(), AFTER_T) < 0.5 * seen
