@@ -23,6 +23,7 @@ if TYPE_CHECKING:
 
 SHOW_S = 0.25
 SILENT_S = 3.0
+TYPED = 16  # columns left for what is typed
 ESCAPES = str.maketrans(dict.fromkeys([*range(32), *range(127, 160)], "?"))
 
 
@@ -169,12 +170,14 @@ class Guide:
             text = f"no reading for {silent:.0f} s: is it the right port and baud rate?"
         else:
             text = self.run.say()
-        if sys.stdout.isatty():
-            width = os.get_terminal_size().columns - 1
-            print(f"\r\x1b[K{text[:width]}", end="", flush=True)
-        elif _words(text) != self._shown:
-            self._shown = _words(text)
-            print(text, flush=True)
+        if not sys.stdout.isatty():
+            if _words(text) != self._shown:
+                self._shown = _words(text)
+                print(text, flush=True)
+        elif text != self._shown:  # left alone while nothing changes: somebody may be typing
+            self._shown = text
+            width = os.get_terminal_size().columns - TYPED
+            print(f"\r\x1b[K{text[:width]} > ", end="", flush=True)
 
     def _save(self) -> None:
         """Keep what was taken, whole or not at all."""

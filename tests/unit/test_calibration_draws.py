@@ -21,8 +21,11 @@ def test_the_doubt_holds_and_is_not_wide(result: Result) -> None:
     assert np.median(result.u95) < 4 * np.quantile(error, 0.95)
 
 
-def test_the_straight_line_is_far_worse(result: Result) -> None:
-    assert np.median(np.abs(result.line_error)) > 50 * np.median(np.abs(result.error))
+def test_what_is_common_practice_is_worse(result: Result) -> None:
+    error = np.median(np.abs(result.error))
+    assert np.median(np.abs(result.common["line, S on P"])) > 50 * error
+    assert np.median(np.abs(result.common["line, P on S"])) > 50 * error
+    assert all(np.median(np.abs(other)) > 2 * error for other in result.common.values())
 
 
 def test_what_is_outside_is_always_flagged(result: Result) -> None:
@@ -32,5 +35,5 @@ def test_what_is_outside_is_always_flagged(result: Result) -> None:
 
 def test_the_report_tells_all_of_it(result: Result) -> None:
     said = report(result)
-    for word in ("inside u95", "median", "95 %", "straight line", "flagged"):
+    for word in ("inside u95", "median", "95 %", "line, S on P", "flagged"):
         assert word in said
