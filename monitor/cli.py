@@ -10,7 +10,19 @@ import sys
 
 import typer
 
-from monitor.commands import Refusal, Wrong, check, ports, replay, report, run, salinity, standards
+from monitor.commands import (
+    Refusal,
+    Wrong,
+    check,
+    demo,
+    ports,
+    replay,
+    report,
+    run,
+    salinity,
+    standards,
+    watch,
+)
 
 app = typer.Typer(
     name="stillbrine",
@@ -21,6 +33,8 @@ app = typer.Typer(
     context_settings={"help_option_names": ["-h", "--help"]},
 )
 for name, module in {
+    "demo": demo,
+    "watch": watch,
     "run": run,
     "replay": replay,
     "report": report,

@@ -1,0 +1,185 @@
+"""`stillbrine watch`: the screen on a bench that is recorded; and the screen on recorded logs."""
+
+from __future__ import annotations
+
+import os
+import subprocess
+import sys
+import tempfile
+import time
+from collections.abc import Iterator, Sequence
+from contextlib import contextmanager
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated, Any
+
+import typer
+
+from monitor.commands import Refusal, Wrong, load_bench
+
+if TYPE_CHECKING:
+    from monitor.bench import Bench
+    from monitor.screen.source import Source
+
+START_S = 15.0  # until a service that was started must answer
+END_S = 10.0  # until one that was told to end must have ended
+
+
+def command(
+    bench: Annotated[Path, typer.Option(help="The bench file (TOML).")],
+    logs: Annotated[Path | None, typer.Option(help="Folder of the logs.")] = None,
+    plain: Annotated[
+        bool, typer.Option("--plain", help="Steady text instead of a screen.")
+    ] = False,
+    light: Annotated[
+        bool | None, typer.Option("--light/--dark", help="For a light or a dark terminal.")
+    ] = None,
+) -> None:
+    """Watch a bench: attach to the service that records it, or start one while this is open.
+
+    Example: stillbrine watch --bench bench.toml
+    """
+    from monitor.places import PlaceError, logs_folder, socket_path
+
+    settings = load_bench(bench)
+    try:
+        folder, socket = logs_folder(settings, bench, logs), socket_path(bench)
+        with recording(settings, bench, folder, socket) as where:
+            from monitor.screen.followed import LiveSource
+
+            show(LiveSource(settings, where, socket, bench.name), plain=plain, light=light)
+    except PlaceError as wrong:
+        raise Wrong(str(wrong)) from None
+
+
+def play(
+    log: Sequence[str],
+    bench: Path | None,
+    speed: float,
+    probe: str | None = None,
+    rate_hz: float | None = None,
+    *,
+    plain: bool = False,
+) -> None:
+    """Play recorded logs on the screen. Raises Wrong, Refusal."""
+    from monitor.calibration import CalibrationError
+    from monitor.logbook.reader import LogError
+    from monitor.screen.replayed import SPEED_MOST, ReplaySource
+
+    if not 0 < speed <= SPEED_MOST:
+        raise Wrong(f"--speed: {speed:g} is not accepted; expected above 0, at most {SPEED_MOST:g}")
+    given = load_bench(bench) if bench else None
+    try:
+        source = ReplaySource(log, given, speed, probe, rate_hz)
+        show(source, note="a recording is played", plain=plain)
+    except LogError as wrong:
+        raise Wrong(str(wrong)) from None
+    except CalibrationError as wrong:
+        raise Refusal(str(wrong)) from None
+
+
+def show(source: Source, note: str = "", plain: bool = False, light: bool | None = None) -> None:
+    """The source on the screen; as text where it is asked for or nothing else is possible."""
+    if plain or not sys.stdout.isatty() or os.environ.get("TERM", "dumb") in ("dumb", ""):
+        from monitor.screen import plain as text
+
+        text.run(source, _print, note)
+        return
+    from monitor.screen.app import run_app
+
+    run_app(source, note=note, light=light)
+
+
+def _print(text: str) -> None:
+    sys.stdout.write(text)
+    sys.stdout.flush()
+
+
+@contextmanager
+def recording(settings: Bench, bench: Path, folder: Path, socket: Path) -> Iterator[Path]:
+    """A service that records this bench, while the block lasts; gives the folder of its logs.
+
+    One that runs already is left alone. Raises Refusal or Wrong if none can be started.
+    """
+    answer = status(socket)
+    if answer is not None:
+        yield _folder_of(answer) or folder
+        return
+    for name, probe in settings.probe.items():
+        if probe.port is None:
+            raise Wrong(f"{bench.name}: probe.{name}.port: missing; expected a port to read")
+    line = ["run", "--bench", str(bench), "--logs", str(folder)]
+    with child([sys.executable, "-c", "from monitor.cli import main; main()", *line], socket):
+        yield folder
+
+
+@contextmanager
+def child(command_line: Sequence[str], socket: Path) -> Iterator[subprocess.Popen[bytes]]:
+    """A service in a process of its own, ended with the block; its standard input is a pipe.
+
+    Raises Refusal or Wrong if it ends before it answers at this socket.
+    """
+    with tempfile.TemporaryFile() as said:
+        process = subprocess.Popen(
+            command_line,
+            stdin=subprocess.PIPE,
+            stdout=subprocess.DEVNULL,
+            stderr=said,
+            start_new_session=True,  # the terminal's Ctrl-C is for the screen
+        )
+        try:
+            _await(process, socket)
+            yield process
+        finally:
+            _end(process)
+            if process.returncode not in (0, -15):
+                said.seek(0)
+                _tell(process.returncode, said.read()[-4000:].decode(errors="replace"))
+
+
+def _await(process: subprocess.Popen[bytes], socket: Path) -> None:
+    until = time.monotonic() + START_S
+    while process.poll() is None and time.monotonic() < until:
+        if socket.exists() and status(socket) is not None:
+            return
+        time.sleep(0.03)
+
+
+def _end(process: subprocess.Popen[bytes]) -> None:
+    process.terminate()
+    if process.stdin is not None:
+        process.stdin.close()
+    try:
+        process.wait(END_S)
+    except subprocess.TimeoutExpired:
+        process.kill()
+        process.wait()
+
+
+def _tell(code: int, said: str) -> None:
+    """Raise what a service that failed said last."""
+    from monitor.printable import printable
+
+    lines = [line for line in said.splitlines() if line.strip()]
+    last = printable(lines[-1].removeprefix("stillbrine: "), 400) if lines else f"exit code {code}"
+    if code == 2:
+        raise Wrong(last)
+    raise Refusal(f"the service ended: {last}")
+
+
+def status(socket: Path) -> dict[str, Any] | None:
+    """What the service at this socket says of its probes; None if there is none."""
+    from monitor.control import ControlError, give_now
+
+    if not socket.exists():
+        return None
+    try:
+        return give_now(socket, "status", {})
+    except ControlError:
+        return None
+
+
+def _folder_of(answer: dict[str, Any]) -> Path | None:
+    """Where a running service writes its logs."""
+    probes = answer.get("probes") or {}
+    paths = [Path(str(probe["path"])) for probe in probes.values() if probe.get("path")]
+    return paths[0].parent if paths else None
