@@ -8,6 +8,8 @@ Rules:
 - A dose struck out counts as not given from there on. Nothing is erased.
 - An order's id acts once, however often it is met.
 - A dose without volume_u_ml is taken as known to 1 % (common practice, no source).
+- Of a liquid or valve that is not on the bench no landing can be said (NaN); a dose whose volume
+  cannot be said either leaves the tank's volume as it was.
 """
 
 from __future__ import annotations
@@ -20,11 +22,12 @@ from typing import Any
 from monitor.bench import Bench
 from monitor.blocks import NAN, Event, Second
 from monitor.dosing.balance import Known, landing
-from monitor.dosing.valve import flow
+from monitor.dosing.valve import FlowError, flow
 
 LATE_S = 900.0
 DOSE_U = 0.01  # of the volume, where no doubt is stated
-KEPT_S = 900.0  # doses this young are carried
+IDS_KEPT = 64
+CARRIED = 8  # newest doses that a later run may have to strike out, or see answered
 
 
 @dataclass(frozen=True)
@@ -93,34 +96,29 @@ class Ledger:
         self._settings = bench.tank[tank]
         start = NAN if self._settings.volume_ml is None else self._settings.volume_ml
         carried = carried or {}
-        same = carried.get("volume_ml") == self._settings.volume_ml
-        self.tank_ml = start + (carried.get("added_ml", 0.0) if same else 0.0)
-        self.tank_u_ml = self._settings.volume_u_ml
-        if same and carried.get("volume_u_ml") is not None:
-            self.tank_u_ml = carried["volume_u_ml"]
+        self.tank_ml, self.tank_u_ml = start, self._settings.volume_u_ml
+        if "tank_ml" in carried and carried.get("volume_ml") == self._settings.volume_ml:
+            self.tank_ml = NAN if carried["tank_ml"] is None else carried["tank_ml"]
+            self.tank_u_ml = carried.get("tank_u_ml", self.tank_u_ml)
         self.doses = [carried_dose(each) for each in carried.get("doses", ())]
         self._newest_t = max((dose.time_s for dose in self.doses), default=-math.inf)
-        self._met = {str(key) for key in carried.get("met", ())}
-        self._last_t = 0.0
+        self._met = dict.fromkeys(carried.get("met", ()))  # a set that keeps its order
 
     def step(self, second: Second) -> tuple[Change, ...]:
         """What this second's events changed in this tank, in their order."""
         if not second.events:
             return ()
-        self._last_t = second.t
         changes = (self._meet(event, second) for event in second.events)
         return tuple(change for change in changes if change is not None)
 
     def carry(self) -> dict[str, Any]:
-        """Volume added, doses under 15 min old or not yet answered, ids already met."""
-        start = self._settings.volume_ml
-        kept = [dose for dose in self.doses if dose.end_s > self._last_t - KEPT_S][-8:]
+        """The running volume and the bench's it began with, the newest doses, ids already met."""
         return {
-            "volume_ml": start,
-            "added_ml": 0.0 if start is None else self.tank_ml - start,
-            "volume_u_ml": self.tank_u_ml,
-            "doses": [plain_dose(dose) for dose in kept],
-            "met": sorted(self._met)[-64:],
+            "volume_ml": self._settings.volume_ml,
+            "tank_ml": None if math.isnan(self.tank_ml) else self.tank_ml,
+            "tank_u_ml": self.tank_u_ml,
+            "doses": [plain_dose(dose) for dose in self.doses[-CARRIED:]],
+            "met": list(self._met),
         }
 
     def _meet(self, event: Event, second: Second) -> Change | None:
@@ -142,14 +140,16 @@ class Ledger:
         key = event.fields.get("id")
         if key is None:
             return True
-        if str(key) in self._met:
+        if key in self._met:
             return False
-        self._met.add(str(key))
+        self._met[key] = None
+        if len(self._met) > IDS_KEPT:
+            del self._met[next(iter(self._met))]
         return True
 
     def _dose(self, event: Event, second: Second) -> Dose | None:
         volume, u, open_s, liquid = self._amount(event.fields)
-        if not volume > 0:
+        if volume <= 0.0:
             return None
         known = self._bench.liquid.get(liquid)
         late = second.t - event.time_s > LATE_S or event.time_s < self._newest_t
@@ -182,10 +182,11 @@ class Ledger:
             liquid = liquid or valve.liquid
         volume, u = fields.get("volume_ml"), fields.get("volume_u_ml")
         if volume is None:
-            if valve is None or not valve.runs:
+            try:
+                volume, valve_u = flow(valve.runs if valve else ()).dose(open_s)
+            except FlowError:
                 return NAN, NAN, open_s, liquid
-            volume, run_u = flow(valve.runs).volume(open_s)
-            u = run_u if u is None else u
+            u = valve_u if u is None else u
         return float(volume), float(DOSE_U * volume if u is None else u), open_s, liquid
 
     def _strike(self, of: str, k: int) -> Struck | None:
@@ -205,14 +206,16 @@ class Ledger:
             self.tank_ml = float(fields["volume_ml"])
             self.tank_u_ml = float(u) if u is not None else self._settings.volume_u_ml
         else:
-            change = float(fields.get("in_ml") or 0.0) - float(fields.get("out_ml") or 0.0)
-            self.tank_ml += change
-            self.tank_u_ml = math.hypot(self.tank_u_ml, abs(change) * DOSE_U if u is None else u)
+            into, out = float(fields.get("in_ml") or 0.0), float(fields.get("out_ml") or 0.0)
+            full = self.tank_ml if self._settings.mode == "overflows" else math.inf
+            left = max(self.tank_ml - out, 0.0)
+            self.tank_ml = min(left + into, max(full, self._settings.volume_ml or 0.0))
+            self.tank_u_ml = math.hypot(self.tank_u_ml, DOSE_U * (into + out) if u is None else u)
         key = str(fields.get("id") or f"{event.time_s:.3f}")
         return Water(event.time_s, self.tank_ml, key, k)
 
     def _add(self, volume_ml: float, u_ml: float) -> None:
-        if self._settings.mode != "grows":
+        if self._settings.mode != "grows" or math.isnan(volume_ml):
             return
         self.tank_ml += volume_ml
         variance = self.tank_u_ml**2 + math.copysign(u_ml**2, u_ml)
@@ -233,4 +236,5 @@ def plain_dose(dose: Dose) -> dict[str, Any]:
 
 def carried_dose(fields: Mapping[str, Any]) -> Dose:
     """The dose back from its fields."""
-    return Dose(**{k: NAN if v is None else v for k, v in fields.items()})
+    known: dict[str, Any] = {k: NAN if v is None else v for k, v in fields.items()}
+    return Dose(**known)

@@ -16,6 +16,9 @@ from monitor.calibration.student import f_tail, t_quantile
 Runs = Sequence[tuple[float, float]]
 
 TWO_RUNS_U = 0.02  # of the volume: the scatter assumed where runs are too few to show any
+READ_U = 0.001  # of the volume: no cylinder is read better, though runs lie on a line exactly
+EXACT = 1e-6  # of the volume: scatter below it is none
+OPENING_S = 0.1  # of flow pass or are missing at opening and closing, where no run tells
 SHORT_S = 1.0
 OUTLIER_P = 0.01
 
@@ -42,7 +45,7 @@ class Flow:
     @property
     def k(self) -> float:
         """Coverage factor for 95 %."""
-        return t_quantile(0.975, self.dof) if math.isfinite(self.dof) else 1.96
+        return t_quantile(0.975, self.dof)
 
     def volume(self, open_s: float) -> tuple[float, float]:
         """mL that pass in so many seconds, and the standard uncertainty of one such dose."""
@@ -54,11 +57,24 @@ class Flow:
         )
         return max(self.ml_per_s * open_s + self.offset_ml, 0.0), math.sqrt(max(variance, 0.0))
 
-    def open_s(self, volume_ml: float) -> float:
-        """Seconds to open for this volume. Infinite where the valve gives nothing."""
-        if self.ml_per_s <= 0:
-            return math.inf
-        return max((volume_ml - self.offset_ml) / self.ml_per_s, 0.0)
+    def dose(self, open_s: float) -> tuple[float, float]:
+        """mL of a dose of so many seconds, and half of its u95.
+
+        Few runs tell their own scatter badly: half of the expanded uncertainty is what a
+        coverage factor of 2 makes right again (JCGM 100:2008, G.3).
+        """
+        volume, u = self.volume(open_s)
+        return volume, u * max(self.k, 2.0) / 2.0
+
+    def open_s(self, volume_ml: float) -> tuple[float, float]:
+        """Seconds to open for this volume, and their standard uncertainty.
+
+        Infinite where the valve gives nothing, or cannot give so little.
+        """
+        if self.ml_per_s <= 0 or volume_ml <= self.offset_ml:
+            return math.inf, math.inf
+        open_s = (volume_ml - self.offset_ml) / self.ml_per_s
+        return open_s, self.volume(open_s)[1] / self.ml_per_s
 
 
 def flow(runs: Runs) -> Flow:
@@ -77,10 +93,12 @@ def flow(runs: Runs) -> Flow:
     n, dof = len(runs), len(runs) - 2
     mean_t = sum(times) / n
     sxx = sum((t - mean_t) ** 2 for t in times)
+    most = max(ml for _, ml in runs)
     if dof > 0:
         sd = math.sqrt(sum(r * r for r in residuals) / dof)
+        sd = sd if sd > EXACT * most else READ_U * most
     else:
-        sd, dof = TWO_RUNS_U * max(ml for _, ml in runs), 2
+        sd, dof = TWO_RUNS_U * most, 2
     u_slope = sd / math.sqrt(sxx)
     u_offset = sd * math.sqrt(1.0 / n + mean_t**2 / sxx)
     cov = -mean_t * sd**2 / sxx
@@ -100,16 +118,22 @@ def _line(runs: Runs) -> tuple[float, float, list[float]]:
 
 
 def _through_zero(runs: Runs) -> Flow:
-    """One open time only: the offset cannot be told from the flow, and is taken as none."""
-    n = len(runs)
+    """One open time only: the offset cannot be told from the flow.
+
+    It is taken as none, within what flows in OPENING_S; at the runs' own length that cancels.
+    """
+    n, open_s = len(runs), runs[0][0]
     mean = sum(ml for _, ml in runs) / n
-    open_s = runs[0][0]
     sd = TWO_RUNS_U * mean
     if n > 1:
-        sd = max(math.sqrt(sum((ml - mean) ** 2 for _, ml in runs) / (n - 1)), 1e-3 * mean)
-    said = ("all runs of one length: what passes at opening and closing is unknown, taken as none",)
-    u = math.hypot(sd / math.sqrt(n), TWO_RUNS_U * mean) / open_s
-    return Flow(mean / open_s, u, 0.0, 0.0, 0.0, sd, max(n - 1, 2), n, None, said + _short(runs))
+        scatter = math.sqrt(sum((ml - mean) ** 2 for _, ml in runs) / (n - 1))
+        sd = scatter if scatter > EXACT * mean else READ_U * mean
+    u_offset = OPENING_S * mean / open_s
+    u_slope = math.hypot(sd / math.sqrt(n), u_offset) / open_s
+    said = ("all runs of one length: what passes at opening and closing is taken as none",)
+    cov = -(u_offset**2) / open_s
+    dof = max(n - 1, 2)
+    return Flow(mean / open_s, u_slope, 0.0, u_offset, cov, sd, dof, n, None, said + _short(runs))
 
 
 def _lack_of_fit(runs: Runs) -> float | None:
@@ -131,6 +155,9 @@ def _lack_of_fit(runs: Runs) -> float | None:
 
 def _remarks(runs: Runs) -> tuple[str, ...]:
     said = list(_short(runs))
+    lack = _lack_of_fit(runs)
+    if lack is not None and lack < OUTLIER_P:
+        said.append(f"the line does not fit (p = {lack:.2g}): the flow changes with open time")
     if len(runs) < 3:
         said.append("two runs draw a line through anything: the doubt is a guess; time more runs")
     for i in range(len(runs)):

@@ -9,13 +9,12 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping
-from dataclasses import asdict
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from monitor.blocks import NAN
-from monitor.dosing.ledger import Dose
+from monitor.dosing.ledger import carried_dose, plain_dose
 from monitor.settling.doubt import Doubt
 from monitor.settling.history import Still
 from monitor.settling.mixing import Change
@@ -84,7 +83,7 @@ def _change(change: Change, settling: Settling) -> dict[str, Any]:
         "extra": change.extra_pct / still.level_pct if still.level_pct else 0.0,
         "size": change.size_pct / still.level_pct if still.level_pct else 0.0,
         "common": change.common,
-        "dose": asdict(change.dose) if change.dose is not None else None,
+        "dose": plain_dose(change.dose) if change.dose is not None else None,
         "us": _or_none(still.period_us),
         "c": _or_none(still.temp_c),
         "factor": _or_none(factor),
@@ -98,7 +97,7 @@ def _changed(told: Mapping[str, Any], doubt: Doubt) -> Change:
     level = _number(told["factor"]) * _salinity(doubt, us, temp_c)
     noise, u = _number(told["noise"]) * level, _number(told["u"]) * level
     still = Still(level, noise, u, us, temp_c)
-    dose = Dose(**told["dose"]) if told["dose"] else None
+    dose = carried_dose(told["dose"]) if told["dose"] else None
     known = told["ledger"] and math.isfinite(level)
     extra, size = told["extra"] * level, told["size"] * level
     return Change(told["from_t"], told["open_s"], still, dose, known, extra, size, told["common"])
