@@ -21,6 +21,7 @@ from monitor.blocks import Block, Event, Second
 from monitor.calibration import Calibration, CalibrationError, fit
 from monitor.dosing.ledger import Ledger
 from monitor.findings import Finding, in_order
+from monitor.notices import Notices
 from monitor.settling import Settling
 from monitor.signal.seconds import Gatherer
 from monitor.tanks import Watched
@@ -66,6 +67,7 @@ class Judges:
         )
         self.trends = Trends(probe, settings.tank, carried.get("trends"))
         self.limits = Limits(probe, settings.tank, tank, carried.get("limits"))
+        self.notices = Notices(probe, bench, settings.tank, carried.get("notices"))
 
     def step(self, second: Second) -> list[Finding]:
         """What this second's closing leads to, in the order in which it is told."""
@@ -74,6 +76,7 @@ class Judges:
         found += self.settling.step(second, changes, self.trust)
         found += self.trends.step(second, changes, self.trust)
         found += self.limits.step(second, self.settling.u95_pct, self.trust, self.settling)
+        found += self.notices.step(second, changes, self.trust, self.settling, self.ledger)
         return in_order(found) if len(found) > 1 else found
 
     def convert(self, seconds: list[Second]) -> None:
@@ -89,7 +92,7 @@ class Judges:
 
     def carry(self) -> dict[str, Any]:
         """All that the next run needs and its own log cannot tell, JSON-able."""
-        rooms = ("ledger", "trust", "settling", "trends", "limits")
+        rooms = ("ledger", "trust", "settling", "trends", "limits", "notices")
         return {room: getattr(self, room).carry() for room in rooms}
 
 
