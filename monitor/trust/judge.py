@@ -269,12 +269,12 @@ class Trust:
         if second.n_rows == second.zeros:
             return []
         if self._lodged is not None:
-            k = lodged.fallen(self.level, self._lodged.height)
+            k = lodged.fallen(self.level, second.t, self._lodged.height)
             if k is None:
                 return []
             self._lodged = None
             return [self._end("lodged-bubble", second.t, float(k))]
-        step = lodged.step_up(self.level, second.t, "bubbles" in self.faults)
+        step = lodged.step_up(self.level, second.t)
         if step is None or self.faults.keys() & {"short", "loose-lead"}:
             return []
         self._lodged = step
