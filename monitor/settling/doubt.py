@@ -10,6 +10,7 @@ from monitor.blocks import Floats
 from monitor.calibration import Calibration
 from monitor.settling.history import Bin, Still
 
+THERMOMETER_U_C = 0.1  # a doubt of no more than this is a thermometer's
 NO_THERMOMETER_U_C = 1.0  # of the water's temperature, where nothing measures it
 
 
@@ -21,7 +22,7 @@ class Doubt:
         self.calibration = calibration
         self.temp_u_c = temp_u_c
         self.temp_c = calibration.temp_c if temp_c is None else temp_c
-        self.unknown_c = max(temp_u_c, NO_THERMOMETER_U_C)
+        self.unknown_c = temp_u_c if temp_u_c > THERMOMETER_U_C else NO_THERMOMETER_U_C
 
     def salinity_pct(self, period_us: Floats, temp_c: Floats) -> Floats:
         """Salinities of readings, (n,)."""

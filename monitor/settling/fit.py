@@ -26,7 +26,7 @@ from monitor.settling.models import SETTLE_S, TERMS, Bank, bank
 
 FEWEST = 3  # readings before the first judgement
 SWITCH = 0.01  # chance a second that the tank goes on as another of the models
-LIGHT = 1e-4  # models of less weight than this, against the best, are left out of a judgement
+LIGHT = 1e-3  # models of less weight than this, against the best, are left out of a judgement
 EDDIES = 0.375  # what a second's mean leaves of the variance of turbulence
 STRAY_SD, STRAY_N = 6.0, 6  # off by so many standard deviations, after so many readings
 STRAYS = 5  # in a row are believed again
@@ -50,7 +50,6 @@ class Models:
     c: Floats  # (5, H)
     cov: Floats  # (5, 5, H)
     s2: float  # how much more scatter there is than was foreseen, at least 1
-    ln_evidence: float  # of what was observed beyond the fit
 
     def landing(self) -> tuple[float, float]:
         """Mean and standard deviation of c0."""
@@ -69,15 +68,14 @@ class Models:
         total = var + (row * gain).sum(axis=0)
         off = value - (row * self.c).sum(axis=0)
         ln_weight = np.log(self.weight) - 0.5 * (off * off / total + np.log(total))
-        weight, ln_sum = _normalised(ln_weight)
+        weight = np.exp(ln_weight - ln_weight.max())
         return Models(
             self.bank,
             self.x,
-            weight,
+            weight / weight.sum(),
             self.c + gain * (off / total),
             self.cov - gain[:, None] * (gain / total)[None],
             self.s2,
-            self.ln_evidence + ln_sum - 0.5 * math.log(2 * math.pi),
         )
 
 
@@ -161,7 +159,7 @@ class Fit:
         self.floor_var = floor_var
         turbulence = EDDIES * (self.bank.level * (scale + extra)) ** 2
         self.whitening = Whitening(turbulence, self.bank.tau, floor_var)
-        prior: Floats = np.linalg.inv(self.bank.prior(open_s, scale, extra))
+        prior = np.linalg.inv(self.bank.prior(open_s, scale, extra)).astype(np.float64)
         self.squares = LeastSquares(np.moveaxis(prior, 0, -1))
         self.weight = self.bank.weight
         self.n = 0
@@ -191,7 +189,7 @@ class Fit:
         which = np.flatnonzero(self.weight > self.weight.max() * LIGHT)
         weight = self.weight[which] / self.weight[which].sum()
         c, cov = self.squares.c[:, which], self.squares.cov[..., which] * self.s2
-        return Models(self.bank.take(which), self.x, weight, c, cov, self.s2, 0.0)
+        return Models(self.bank.take(which), self.x, weight, c, cov, self.s2)
 
     def _weigh(self, ln_chance: Floats) -> None:
         weight = self.weight * np.exp(ln_chance - ln_chance.max())
@@ -211,11 +209,3 @@ class Fit:
                 return self.strays <= STRAYS
         self.strays = 0
         return False
-
-
-def _normalised(ln_weight: Floats) -> tuple[Floats, float]:
-    """Weights that sum to 1, and the ln of what they summed to."""
-    top = float(ln_weight.max())
-    weight = np.exp(ln_weight - top)
-    total = float(weight.sum())
-    return weight / total, top + math.log(total)

@@ -19,6 +19,7 @@ LEDGER_ERROR = 5e-4  # of the step: what the mass balance leaves out
 SOONEST = 6  # readings before rest may be called
 NEAR_BANDS = 1.2  # the filtered value has to stay this near to the landing
 NEAR_S, NEAR_ALONE_S = 8, 30  # for so long, with the ledger and without it
+PASSING_BANDS = 0.7  # it may not have moved by more meanwhile
 FLAT_SURE, FLAT_BANDS, FLAT_S = 0.95, 0.5, 60  # standing still elsewhere than the ledger says
 UNLIKELY = 0.3  # below this chance of rest every third reading is judged
 SHORTEST_S = 0.5  # a dose poured at once
@@ -156,11 +157,16 @@ class Mixing:
             return False
         if said.p_told > 0.5:
             sure = said.p_rest > 0.93 and said.p_rest_free > 0.15
-            if sure and self._stayed(said.landing[0], k, NEAR_S):
+            if sure and self._stayed(said.landing[0], k, NEAR_S) and self._slow(k):
                 return True
             flat = said.p_rest_free > FLAT_SURE
             return flat and self._stayed(said.landing_free[0], k, FLAT_S, FLAT_BANDS)
         return said.p_rest_free > 0.8 and self._stayed(said.landing_free[0], k, NEAR_ALONE_S)
+
+    def _slow(self, k: int) -> bool:
+        """Whether the filtered value is not just passing by."""
+        before = next(f for at, f in self.filtered if at > k - NEAR_S)
+        return abs(self.filtered[-1][1] - before) <= PASSING_BANDS * self.band
 
     def _stayed(self, step_pct: float, k: int, for_s: int, bands: float = NEAR_BANDS) -> bool:
         """Whether the filtered value was near the landing for so long."""

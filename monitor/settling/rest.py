@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -33,7 +32,8 @@ class Judgement:
     """What one fit says after one reading."""
 
     free: Models  # the readings alone
-    told: tuple[tuple[float, Models], ...]  # with each expected step: its probability, the models
+    expected: tuple[Expected, ...]
+    p_expected: tuple[float, ...]  # that each expected step is the true one
     p_rest: float  # that it is at rest
     p_rest_free: float  # the same by the readings alone
     landing: tuple[float, float]  # mean and sd of the step, all together
@@ -42,16 +42,19 @@ class Judgement:
     @property
     def p_told(self) -> float:
         """Probability that one of the expected steps is the true one."""
-        return sum(p for p, _ in self.told)
+        return sum(self.p_expected)
 
     @property
     def likeliest(self) -> Models:
         """The models with the likeliest expected step, or without if that is likelier."""
-        p, models = max(self.told, key=lambda pair: pair[0], default=(0.0, self.free))
-        return models if p >= 0.5 else self.free
+        p = max(self.p_expected, default=0.0)
+        if p < 0.5:
+            return self.free
+        step = self.expected[self.p_expected.index(p)]
+        return self.free.observed(_LANDING, step.step_pct, step.sd_pct**2)
 
 
-def judge(free: Models, expected: Sequence[Expected], scale: float, band: float) -> Judgement:
+def judge(free: Models, expected: tuple[Expected, ...], scale: float, band: float) -> Judgement:
     """Put the models and the expected steps together.
 
     Parameters
@@ -60,20 +63,36 @@ def judge(free: Models, expected: Sequence[Expected], scale: float, band: float)
     expected : the steps that were foretold
     scale : % size of the step, for the spread of a step that nothing foretells
     band : % that counts as rest, either side
+
+    Notes
+    -----
+    An expected step is one more observation of c0; for J of them and H models everything is a
+    rank-1 update of (J, H) figures.
     """
-    told = [free.observed(_LANDING, e.step_pct, e.sd_pct**2) for e in expected]
-    odds = [
-        e.odds * math.exp(min(with_.ln_evidence - free.ln_evidence - _ln_any(e, scale), 500.0))
-        for e, with_ in zip(expected, told)
-    ]
-    total = 1.0 + sum(odds)
-    shapes = free.bank.shapes(free.x + free.bank.ahead)
-    p_free = _p_rest(free, shapes, band)
-    parts = [(o / total, models) for o, models in zip(odds, told)]
-    p = p_free / total + sum(part * _p_rest(models, shapes, band) for part, models in parts)
-    landing_free = free.landing()
-    landings = [(1.0 / total, landing_free), *((part, m.landing()) for part, m in parts)]
-    return Judgement(free, tuple(parts), p, p_free, _mixed(landings), landing_free)
+    step = np.array([[e.step_pct] for e in expected]).reshape(-1, 1)
+    sd = np.array([[e.sd_pct] for e in expected]).reshape(-1, 1)
+    off, total = step - free.c[0], free.cov[0, 0] + sd**2
+    fits = free.weight * np.exp(-0.5 * off**2 / total) / np.sqrt(total)
+    any_var = (3.0 * scale) ** 2 + sd[:, 0] ** 2
+    any_step = np.exp(-0.5 * step[:, 0] ** 2 / any_var) / np.sqrt(any_var)
+    odds = np.array([e.odds for e in expected]) * fits.sum(axis=1) / any_step
+    share = np.append(odds, 1.0) / (odds.sum() + 1.0)  # the last: none of them
+
+    gain = off / total
+    told = fits / np.maximum(fits.sum(axis=1, keepdims=True), 1e-300)
+    weight = np.vstack([told, free.weight])
+    p_rest = (_chances(free, gain, total, band) * weight).sum(axis=1)
+    mean = np.vstack([free.c[0] + free.cov[0, 0] * gain, free.c[0]])
+    var = np.vstack([free.cov[0, 0] * sd**2 / total, free.cov[0, 0]])
+    return Judgement(
+        free,
+        expected,
+        tuple(share[:-1].tolist()),
+        float(share @ p_rest),
+        float(p_rest[-1]),
+        _moments(share[:, None] * weight, mean, var),
+        _moments(weight[-1], mean[-1], var[-1]),
+    )
 
 
 def plateau(models: Models, band: float) -> tuple[float, float]:
@@ -103,6 +122,7 @@ def chance_within(mean: Floats, sd: Floats, bound: float) -> Floats:
     Abramowitz and Stegun, Handbook of Mathematical Functions (1964), 7.1.26.
     """
     z = np.stack([bound - mean, bound + mean]) / (math.sqrt(2.0) * sd)
+    np.clip(z, -5.0, 5.0, out=z)
     u = 1.0 / (1.0 + 0.3275911 * np.abs(z))
     poly = 1.061405429 * u - 1.453152027
     poly = (((poly * u + 1.421413741) * u - 0.284496736) * u + 0.254829592) * u
@@ -111,21 +131,24 @@ def chance_within(mean: Floats, sd: Floats, bound: float) -> Floats:
     return chance
 
 
-def _p_rest(models: Models, shapes: Floats, band: float) -> float:
-    """Weighted chance that what is still to come stays inside the band from now on."""
-    mean = np.einsum("ikh,ih->kh", shapes, models.c[1:])
-    spread = np.einsum("ijh,jkh->ikh", models.cov[1:, 1:], shapes)
+def _chances(free: Models, gain: Floats, total: Floats, band: float) -> Floats:
+    """Chance that what is still to come stays inside the band, (J + 1, H); the last without any.
+
+    `gain` and `total` (J, H): of the update of c0 by each expected step.
+    """
+    shapes = free.bank.shapes(free.x + free.bank.ahead)  # (4, K, H)
+    mean = (shapes * free.c[1:, None]).sum(axis=0)
+    spread = (free.cov[1:, 1:, None] * shapes).sum(axis=1)
     var = (spread * shapes).sum(axis=0)
-    chance = chance_within(mean, np.sqrt(np.maximum(var, 1e-30)), INSIDE * band)
-    return float(models.weight @ chance.min(axis=0))
+    with_c0 = (shapes * free.cov[1:, 0, None]).sum(axis=0)  # covariance with the landing
+    means = np.concatenate([mean + with_c0 * gain[:, None], mean[None]])
+    variances = np.concatenate([var - with_c0**2 / total[:, None], var[None]])
+    sd = np.sqrt(np.maximum(variances, 1e-30))
+    chances: Floats = chance_within(means, sd, INSIDE * band).min(axis=1)
+    return chances
 
 
-def _ln_any(expected: Expected, scale: float) -> float:
-    """ln density of the expected step where any step would do."""
-    var = 9.0 * scale * scale + expected.sd_pct**2
-    return -0.5 * (expected.step_pct**2 / var + math.log(2 * math.pi * var))
-
-
-def _mixed(parts: Sequence[tuple[float, tuple[float, float]]]) -> tuple[float, float]:
-    mean = sum(p * m for p, (m, _) in parts)
-    return mean, math.sqrt(sum(p * (sd * sd + (m - mean) ** 2) for p, (m, sd) in parts))
+def _moments(weight: Floats, mean: Floats, var: Floats) -> tuple[float, float]:
+    """Mean and standard deviation of a mixture of normals."""
+    middle = float((weight * mean).sum())
+    return middle, math.sqrt(max(float((weight * (var + (mean - middle) ** 2)).sum()), 0.0))

@@ -35,7 +35,7 @@ FILTER = 0.3  # share of a second's reading in the filtered value
 HELD_S = 10  # without a reading the filtered value is shown this long
 GAP_S = 60  # without a reading: the quiet readings begin anew
 OUTLOOK_S = 5.0
-REFRESH_S = 60  # noise and doubt are looked at this often
+REFRESH_S = 300  # noise and doubt are looked at this often, and after each rest
 ONSET_S = 5.0  # a disturbance is followed no sooner after its onset
 ONSET_MOST_S = 300
 UNFORESEEN, UNFORESEEN_N = 4.0, 10  # times the expected scatter: the disturbance went on
@@ -309,6 +309,7 @@ class Settling:
         self.answered.append((mixing, t))
         self.mixing = None
         self.outlook = None
+        self._refresh_k = -math.inf
         self.level.stands_at(self.at_rest["salinity_pct"])
         self.history.quiet_from(t, t - SETTLED_S)
         return self.at_rest
