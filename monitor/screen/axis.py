@@ -107,7 +107,7 @@ def labels(on: Axis, clock: Clock, margin: int, future: bool = True) -> list[Run
             text = f"{clock.at(t):%d %b}"
         at = on.cell(t)
         clear = abs(at - now) > len(text) and (future or at < now)
-        if clear and 0 <= at and at + len(text) + 1 <= on.width:
+        if clear and at >= 0 and at + len(text) + 1 <= on.width:
             cells[at : at + len(text) + 1] = "╵" + text
         t += step
     if 0 <= now <= on.width - 4:

@@ -7,6 +7,8 @@ known here.
 
 from __future__ import annotations
 
+from itertools import pairwise
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -179,7 +181,7 @@ class Canvas:
         line = self.chars[row].tobytes().decode("utf-32-le")
         return [
             (line[a:b], names[int(key[a]) >> 4] + papers[int(key[a]) & 15])
-            for a, b in zip(cuts, cuts[1:])
+            for a, b in pairwise(cuts)
             if b > a
         ]
 

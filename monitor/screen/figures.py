@@ -1,4 +1,4 @@
-"""Numbers and times as the screen writes them: digits that follow the doubt, widths that keep still."""
+"""Numbers and times as the screen writes them: digits follow the doubt, widths keep still."""
 
 from __future__ import annotations
 
@@ -12,8 +12,10 @@ from monitor.water import units
 from monitor.water.media import OutOfRangeError, medium
 
 UNITS = ("%", "g/kg", "mS/cm")
-WHOLE = 3  # places before the point
+WHOLE = 2  # places before the point, at least
 PLACES = 5  # and behind it
+DOUBT_CELLS = 9
+VALUE_CELLS = WHOLE + 1 + PLACES + DOUBT_CELLS
 
 
 @dataclass(frozen=True)
@@ -63,15 +65,15 @@ def value_text(value: float, u95: float, scale: Scale) -> str:
     """A value with its doubt, always of the same width; dashes where there is none."""
     shown = scale.of(value)
     if not math.isfinite(shown):
-        return pointed("--") + " " * 10
+        return f"{pointed('--')}{'':{DOUBT_CELLS}}"
     doubt = scale.width(value, u95) if math.isfinite(u95) else math.nan
     behind = places(doubt) if math.isfinite(doubt) else (1 if scale.name == "us" else 4)
     text = pointed(f"{shown:.{behind}f}")
     if len(text) > WHOLE + 1 + PLACES:
         text = f"{shown:{WHOLE + 1 + PLACES}.3g}"
     if not math.isfinite(doubt):
-        return text + " " * 10
-    return text + f" ±{doubt:<8.{behind}f}"[:10]
+        return f"{text}{'':{DOUBT_CELLS}}"
+    return text + f"±{doubt:<{DOUBT_CELLS}.{behind}f}"[:DOUBT_CELLS]
 
 
 def short_text(value: float, u95: float, scale: Scale) -> str:

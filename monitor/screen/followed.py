@@ -68,9 +68,7 @@ class Followed:
             self._parts = [p for run in before for p in run.parts if p.part >= last.part - 1]
         self._tail = None
         self.lane.begin_run(self.offset)
-        self.follower = Follower(
-            self.lane.probe, first_part=self._parts[0].part, watch=self._watch
-        )
+        self.follower = Follower(self.lane.probe, first_part=self._parts[0].part, watch=self._watch)
 
     def _paths(self) -> list[str]:
         started = f"{self.started:%Y%m%dT%H%M%SZ}"
@@ -115,9 +113,20 @@ class LiveSource:
 
     live = True
 
-    def __init__(self, bench: Bench, folder: Path, socket: Path, name: str = "bench") -> None:
-        """`folder` of the logs, `socket` of the service, `name` of the bench file."""
+    def __init__(
+        self,
+        bench: Bench,
+        folder: Path,
+        socket: Path,
+        name: str = "bench",
+        orders: bool = True,
+    ) -> None:
+        """`folder` of the logs, `socket` of the service, `name` of the bench file.
+
+        `orders`: whether acts may be recorded, or this one only watches.
+        """
         self.name = name
+        self._orders = orders
         self.lanes = [Lane(probe, bench.for_probe(probe)) for probe in bench.probe]
         self._folder = folder
         self._socket = socket
@@ -196,9 +205,7 @@ class LiveSource:
             its = [each for each in self._followed if each.lane.tank == tank and each.follower]
             if not its or not all(each.caught_up for each in its):
                 continue
-            spans = [
-                (e.lane.probe, e.follower.chain.watched, e.offset) for e in its if e.follower
-            ]
+            spans = [(e.lane.probe, e.follower.chain.watched, e.offset) for e in its if e.follower]
             upto = min(e.follower.chain.closed_t + e.offset for e in its if e.follower)
             fold = self._tanks.setdefault(tank, Unwatched(tank))
             found += fold.advance(upto, spans)
@@ -225,10 +232,14 @@ class LiveSource:
         probes = answer.get("probes")
         self._told = probes if isinstance(probes, dict) else {}
 
-    async def order(self, kind: str, fields: Mapping[str, Any], probe: str) -> None:
+    async def order(
+        self, kind: str, fields: Mapping[str, Any], probe: str, ago_s: float = 0.0
+    ) -> None:
         """Have the service record an act. Raises ActError."""
+        if not self._orders:
+            raise ActError("this screen only watches: it was started without --orders")
         try:
-            await give(self._socket, kind, fields, probe=probe)
+            await give(self._socket, kind, fields, probe=probe, ago_s=ago_s)
         except ControlError as wrong:
             raise ActError(str(wrong)) from None
 

@@ -1,4 +1,4 @@
-"""The landing view: the chosen tank's past on two thirds of the width, what is expected on the last.
+"""The landing view: a tank's past on two thirds of the width, what is expected on the last.
 
 Painted in this order: aim band, readings that are not the tank's, raw readings, what was expected
 before, the trace, the cone, marks and words.
@@ -91,7 +91,7 @@ def _raw(canvas: Canvas, lane: Lane, on: Axis) -> None:
 
 
 def _expected_before(canvas: Canvas, lane: Lane, on: Axis) -> None:
-    """Where it was said to land, while it moved: whether the forecast was right stays to be seen."""
+    """Where it was said to land, while it moved: was the forecast right?"""
     said = [f for f in lane.outlooks if on.from_t <= f["t"] < on.to_t]
     if not said:
         return
@@ -146,7 +146,10 @@ def _landing(
     share = np.clip(ahead / rest_s, 0.0, 1.0)
     centre = salinity + (value - salinity) * left
     half = u_now + (u95 - u_now) * share
-    low, high = np.where(ahead > 0, centre - half, np.nan), np.where(ahead > 0, centre + half, np.nan)
+    low, high = (
+        np.where(ahead > 0, centre - half, np.nan),
+        np.where(ahead > 0, centre + half, np.nan),
+    )
     canvas.fill(canvas.dot_rows(high), canvas.dot_rows(low), ink, every=4)
     line = canvas.dot_rows(np.where(ahead > 0, centre, np.nan))
     canvas.fill(line, line, ink)
@@ -223,7 +226,9 @@ def happenings(lane: Lane, on: Axis) -> list[Run]:
     return [(f"{'':{MARGIN}}", ""), *canvas.runs(0, inks.INKS, inks.PAPERS)]
 
 
-def heading(lane: Lane, name: str, now_s: float, clock: Clock, scale: Scale, width: int) -> list[Run]:
+def heading(
+    lane: Lane, name: str, now_s: float, clock: Clock, scale: Scale, width: int
+) -> list[Run]:
     """Whose view it is, and the last dose."""
     runs: list[Run] = [(f"{name} ", "strong")]
     dose = lane.last_dose
@@ -291,10 +296,17 @@ def noise(lane: Lane, on: Axis, height: int) -> list[list[Run]]:
     held = Columns(t, np.minimum(shown, top), on.from_t, on.dot_s, 2 * on.width, 2.6)
     floor = np.where(np.isfinite(held.high), 4.0 * height - 1.0, np.nan)
     canvas.fill(canvas.dot_rows(held.high), floor, inks.FAINT)
-    loud = Columns(t, np.where(good >= 1.0, np.nan, np.minimum(shown, top)), on.from_t, on.dot_s,
-                   2 * on.width, 0.0)
-    canvas.fill(canvas.dot_rows(loud.high), np.where(np.isfinite(loud.high), floor, np.nan),
-                inks.DOUBT)
+    loud = Columns(
+        t,
+        np.where(good >= 1.0, np.nan, np.minimum(shown, top)),
+        on.from_t,
+        on.dot_s,
+        2 * on.width,
+        0.0,
+    )
+    canvas.fill(
+        canvas.dot_rows(loud.high), np.where(np.isfinite(loud.high), floor, np.nan), inks.DOUBT
+    )
     names = ["noise %", f"{top:.2g}"] if height > 1 else ["noise"]
     return [
         [(f"{names[i] if i < len(names) else '':>{MARGIN - 2}} ▏", "faint")]

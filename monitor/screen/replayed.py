@@ -121,6 +121,9 @@ class ReplaySource:
                 raise LogError(
                     f"{name}: probe {run.probe} is not in the bench; expected one of {known}"
                 )
+            if given is None and not _has_settings(run):
+                name = Path(run.parts[0].path).name
+                raise LogError(f"{name}: no bench event in it; expected --bench BENCH beside it")
         self.started = min(run.started for run in self._runs)
         self._given = given
         self.speed = speed
@@ -223,12 +226,24 @@ class ReplaySource:
         self._hunting = True
         self._left = self._done_s
 
-    async def order(self, kind: str, fields: Mapping[str, Any], probe: str) -> None:
+    async def order(
+        self, kind: str, fields: Mapping[str, Any], probe: str, ago_s: float = 0.0
+    ) -> None:
         """A log that is over takes no acts. Raises ActError."""
         raise ActError("this is a recording: what is planned here is not recorded")
 
     def close(self) -> None:
         """Nothing is held."""
+
+
+def _has_settings(run: Run) -> bool:
+    """Whether a bench stands before the run's first row."""
+    for item in _items(run):
+        if isinstance(item, Block):
+            return False
+        if item.kind == "bench":
+            return True
+    return False
 
 
 def _last_t(run: Run, zero: datetime) -> float:

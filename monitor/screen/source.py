@@ -31,7 +31,9 @@ class Source(Protocol):
     def poll(self) -> None:
         """Bring the lanes up to date; takes a few hundredths of a second at most."""
 
-    async def order(self, kind: str, fields: Mapping[str, Any], probe: str) -> None:
+    async def order(
+        self, kind: str, fields: Mapping[str, Any], probe: str, ago_s: float = 0.0
+    ) -> None:
         """Have an act recorded. Raises ActError."""
 
     def close(self) -> None:

@@ -93,9 +93,9 @@ class Lane:
                 self.lasting.pop(key, None)
 
     def _rest(self, finding: Finding) -> None:
-        if finding.get("to_t") is not None and self.rests:
-            if self.rests[-1]["rested_t"] == finding["rested_t"]:
-                self.rests.pop()
+        said = self.rests[-1]["rested_t"] if self.rests else None
+        if finding.get("to_t") is not None and said == finding["rested_t"]:
+            self.rests.pop()
         self.rests.append(finding)
 
     def _fault(self, finding: Finding) -> None:

@@ -1,0 +1,312 @@
+"""Acts as forms: what is typed, what it would do, and the order that it becomes. Pure.
+
+An act shows its effect before it is done: every form has a preview, and a dose a `Plan` that the
+landing view draws. Nothing is ordered before Enter is pressed on a form without a fault.
+"""
+
+from __future__ import annotations
+
+import math
+import re
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
+from typing import Any
+
+from monitor import cautions
+from monitor.dosing.balance import Known, landing, volume_for
+from monitor.dosing.valve import FlowError, flow
+from monitor.printable import printable
+from monitor.screen.figures import Clock, Scale, length, short_text
+from monitor.screen.landing import Plan
+from monitor.view import Lane
+
+TEXT_MOST = 200
+DOSE_U = 0.01  # of a volume whose doubt is not stated; common practice, no source
+_NUMBER = re.compile(r"\d{1,7}([.,]\d{1,6})?")
+
+
+@dataclass
+class Field:
+    """One line of a form: free text, or one of `choices`."""
+
+    name: str
+    label: str
+    value: str = ""
+    choices: tuple[str, ...] = ()
+
+    def turn(self, by: int) -> None:
+        """The next or previous choice."""
+        if self.choices:
+            at = self.choices.index(self.value) if self.value in self.choices else 0
+            self.value = self.choices[(at + by) % len(self.choices)]
+
+
+@dataclass
+class Preview:
+    """What the act would do: lines to show, a fault that hinders it, the order."""
+
+    lines: list[str] = field(default_factory=list)
+    cautions: list[str] = field(default_factory=list)
+    wrong: str = ""
+    plan: Plan | None = None
+    order: tuple[str, dict[str, Any]] | None = None
+    ago_s: float = 0.0
+
+
+@dataclass
+class Form:
+    """An act being filled in."""
+
+    title: str
+    fields: list[Field]
+    preview_of: Callable[[Form, Lane], Preview]
+    at: int = 0
+
+    def __getitem__(self, name: str) -> str:
+        return next((each.value for each in self.fields if each.name == name), "").strip()
+
+    def move(self, by: int) -> None:
+        """To the next or previous field."""
+        if self.fields:
+            self.at = (self.at + by) % len(self.fields)
+
+    def turn(self, by: int) -> None:
+        """Change a choice."""
+        if self.fields:
+            self.fields[self.at].turn(by)
+
+    def type(self, char: str) -> None:
+        """A character for the field at hand."""
+        if not self.fields:
+            return
+        here = self.fields[self.at]
+        if not here.choices and char.isprintable() and len(here.value) < TEXT_MOST:
+            here.value += char
+
+    def rub(self) -> None:
+        """Take the last character back."""
+        if self.fields and not self.fields[self.at].choices:
+            here = self.fields[self.at]
+            here.value = here.value[:-1]
+
+    def preview(self, lane: Lane) -> Preview:
+        """What it would do as it stands."""
+        return self.preview_of(self, lane)
+
+
+def number(text: str) -> float | None:
+    """A number as typed, comma or point; None if it is none."""
+    return float(text.replace(",", ".")) if _NUMBER.fullmatch(text) else None
+
+
+def dose(lane: Lane) -> Form | None:
+    """Plan and record a dose; None on a bench without liquids."""
+    bench = lane.settings
+    if bench is None or not bench.liquid:
+        return None
+    names = tuple(bench.liquid)
+    return Form(
+        "a dose",
+        [
+            Field("liquid", "liquid", names[0], names),
+            Field("volume_ml", "volume, mL"),
+            Field("to", "or to reach, %"),
+            Field("open_s", "ran in for, s"),
+            Field("ago_s", "began s ago", "0"),
+        ],
+        _dose,
+    )
+
+
+def _dose(form: Form, lane: Lane) -> Preview:
+    told = Preview(cautions=list(cautions.DOSE))
+    figures = _figures(form, ("volume_ml", "to", "open_s", "ago_s"), told)
+    if told.wrong:
+        return told
+    liquid = form["liquid"]
+    bench = lane.settings
+    assert bench is not None
+    sd = bench.liquid[liquid]
+    before = lane.value if lane.calibrated else math.nan
+    volume, mode = figures["volume_ml"], bench.tank[lane.tank].mode
+    if volume is None and figures["to"] is not None:
+        volume = volume_for(mode, before, figures["to"], lane.tank_ml, sd.salinity_pct)
+        if not math.isfinite(volume):
+            told.wrong = f"{liquid} ({sd.salinity_pct:g} %) cannot take it there"
+            return told
+    if not volume:
+        told.lines.append("type a volume, or the salinity that it shall reach")
+        return told
+    _foretell(told, lane, mode, before, volume, (sd.salinity_pct, sd.salinity_u_pct))
+    told.lines += _by_valve(bench.valve, liquid, volume)
+    fields = {"tank": lane.tank, "liquid": liquid, "volume_ml": round(volume, 3)}
+    if figures["open_s"]:
+        fields["open_s"] = figures["open_s"]
+    told.order = ("dose", fields)
+    told.ago_s = figures["ago_s"] or 0.0
+    return told
+
+
+def _figures(form: Form, names: tuple[str, ...], told: Preview) -> dict[str, float | None]:
+    """The numbers of these fields; what is no number stands in `told.wrong`."""
+    figures: dict[str, float | None] = {}
+    for name in names:
+        figures[name] = number(form[name]) if form[name] else None
+        if form[name] and figures[name] is None:
+            label = next(each.label for each in form.fields if each.name == name)
+            told.wrong = f"{label}: {printable(form[name], 20)!r} is no number; expected 12.5"
+    return figures
+
+
+def _foretell(
+    told: Preview,
+    lane: Lane,
+    mode: str,
+    before: float,
+    volume: float,
+    liquid: tuple[float, float],
+) -> None:
+    """Where it lands by the mass balance, and what speaks against it."""
+    if not (math.isfinite(before) and math.isfinite(lane.tank_ml)):
+        told.lines.append(f"{volume:.4g} mL; where it lands cannot be told: no salinity or volume")
+        return
+    u_before = lane.u95 / 2.0 if math.isfinite(lane.u95) else 0.0
+    tank = Known(lane.tank_ml, lane.tank_u_ml if math.isfinite(lane.tank_u_ml) else 0.0)
+    found = landing(
+        mode, Known(before, u_before), tank, Known(*liquid), Known(volume, DOSE_U * volume)
+    )
+    told.plan = Plan(found.value, 2.0 * found.u)
+    scale = Scale("%")
+    after = lane.tank_ml + volume if mode == "grows" else lane.tank_ml
+    told.lines.append(
+        f"{volume:.4g} mL takes it from {short_text(before, lane.u95, scale)} to"
+        f" {short_text(found.value, 2 * found.u, scale)} ±{2 * found.u:.1g} %;"
+        f" then {after:.0f} mL in the tank"
+    )
+    told.cautions = _against(lane, before, found.value) + told.cautions
+
+
+def _against(lane: Lane, before: float, after: float) -> list[str]:
+    """What in this tank speaks against the dose."""
+    said: list[str] = []
+    bench, aim = lane.settings, lane.aim
+    assert bench is not None
+    fastest = bench.tank[lane.tank].fastest_pct_per_h
+    if lane.belief != "believed":
+        said.append(f"THE PROBE IS {lane.belief.upper()}: where it starts is not sure.")
+    if lane.moving:
+        said.append("STILL MOVING: the last dose has not come to rest.")
+    if aim is not None and not aim[0] <= after <= aim[1]:
+        said.append(f"LANDS OUTSIDE THE AIM of {aim[0]:g} to {aim[1]:g} %.")
+    if fastest is not None and abs(after - before) > fastest:
+        n = math.ceil(abs(after - before) / fastest)
+        said.append(f"TOO FAST: {fastest:g} % an hour at most; give it in {n} parts, 1 h apart.")
+    return said
+
+
+def _by_valve(valves: Mapping[str, Any], liquid: str, volume: float) -> list[str]:
+    for name, valve in valves.items():
+        if valve.liquid == liquid and valve.runs:
+            try:
+                open_s = flow(valve.runs).open_s(volume)
+            except FlowError as wrong:
+                return [f"valve {name}: {wrong}"]
+            return [f"valve {name}: open for {open_s:.1f} s"]
+    return []
+
+
+def strike(lane: Lane, clock: Clock) -> Form | None:
+    """Strike a dose out; None where there is none."""
+    last = [each for each in reversed(lane.doses) if not each.struck][:9]
+    if not last:
+        return None
+    names = tuple(f"{clock.second(d.time_s)} {d.volume_ml:.4g} mL {d.liquid}" for d in last)
+    keys = dict(zip(names, (d.key for d in last)))
+
+    def preview(form: Form, lane: Lane) -> Preview:
+        return Preview(
+            [f"{form['dose']} counts as not given from here on; the record keeps it"],
+            order=("strike", {"of": keys[form["dose"]], "why": form["why"], "tank": lane.tank}),
+        )
+
+    fields = [Field("dose", "dose", names[0], names), Field("why", "why")]
+    return Form("strike out", fields, preview)
+
+
+def note(lane: Lane) -> Form:
+    """Leave a word in the log."""
+
+    def preview(form: Form, lane: Lane) -> Preview:
+        if not form["text"]:
+            return Preview(["type a word; it stands in the log with its time"])
+        return Preview(
+            ["it stands in the log with its time"], order=("note", {"text": form["text"]})
+        )
+
+    return Form("a note", [Field("text", "note")], preview)
+
+
+def lift(lane: Lane) -> Form:
+    """The probe goes out of the tank, or is back in it."""
+    whys = ("wipe", "standard", "check", "move", "other")
+    kind = "out" if lane.out is None else "back"
+    said = {
+        "out": "its readings are kept but not judged until you say that it is back",
+        "back": "its readings are the tank's again from here on",
+    }
+
+    def preview(form: Form, lane: Lane) -> Preview:
+        fields = {"why": form["why"]} if kind == "out" else {}
+        return Preview([said[kind]], order=(kind, fields))
+
+    title = "probe out of the tank" if kind == "out" else "probe back in the tank"
+    return Form(title, [Field("why", "why", whys[0], whys)] if kind == "out" else [], preview)
+
+
+def water(lane: Lane) -> Form:
+    """Water that is no dose: taken out, topped up, or the volume as it is now."""
+    bench = lane.settings
+    liquids = tuple(bench.liquid) if bench is not None else ()
+    fields = [Field("out_ml", "taken out, mL"), Field("in_ml", "put in, mL")]
+    if liquids:
+        fields.append(Field("liquid", "of", liquids[0], liquids))
+    fields.append(Field("volume_ml", "or now, mL"))
+
+    def preview(form: Form, lane: Lane) -> Preview:
+        told = Preview()
+        figures = _figures(form, ("out_ml", "in_ml", "volume_ml"), told)
+        if told.wrong or not any(figures.values()):
+            told.lines = told.lines or ["type what went out or in, or the volume as it is now"]
+            return told
+        now = figures["volume_ml"]
+        if now is None:
+            now = lane.tank_ml - (figures["out_ml"] or 0.0) + (figures["in_ml"] or 0.0)
+        if now <= 0:
+            told.wrong = f"that leaves {now:.0f} mL in the tank; expected more than none"
+            return told
+        told.lines.append(f"the tank then holds {now:.0f} mL" if math.isfinite(now) else "recorded")
+        kept: dict[str, Any] = {k: v for k, v in figures.items() if v is not None}
+        if figures["in_ml"] and form["liquid"]:
+            kept["liquid"] = form["liquid"]
+        told.order = ("water", {"tank": lane.tank, **kept})
+        return told
+
+    return Form("water that is no dose", fields, preview)
+
+
+def silence(lane: Lane, until: Callable[[float], str]) -> Form:
+    """Quiet an alarm for a while; `until` gives the UTC text of so many seconds ahead."""
+    named = [str(f.get("fault") or f.get("which") or f["finding"]) for f in lane.faults]
+    named += [which or kind for kind, which in lane.lasting]
+    whats = tuple(dict.fromkeys([*named, lane.tank, "all"]))
+
+    def preview(form: Form, lane: Lane) -> Preview:
+        minutes = number(form["minutes"])
+        if minutes is None or not 0 < minutes <= 1440:
+            return Preview(wrong=f"minutes: {printable(form['minutes'], 12)!r}; expected 1 to 1440")
+        said = f"no alarm of {form['what']} for {length(60 * minutes)}; the screen says it still"
+        fields = {"what": form["what"], "until_utc": until(60.0 * minutes)}
+        return Preview([said], order=("silence", fields))
+
+    fields = [Field("what", "alarm", whats[0], whats), Field("minutes", "minutes", "30")]
+    return Form("silence an alarm", fields, preview)

@@ -1,0 +1,138 @@
+"""The lanes: one tank, one line, one sentence; its trace below on the axis that all share."""
+
+from __future__ import annotations
+
+import math
+from typing import NamedTuple
+
+import numpy as np
+
+from monitor.screen import axis, draw, figures, inks, text
+from monitor.screen.axis import Axis
+from monitor.screen.draw import Canvas, Run
+from monitor.screen.figures import Scale
+from monitor.screen.landing import LEAST_BANDS, MARGIN
+from monitor.screen.words import Said
+from monitor.view import Lane
+
+AROUND_AIM = 0.75  # of the aim's width, shown on either side of it
+TRACE_LEAST = 16  # cells
+
+
+class Widths(NamedTuple):
+    """Cells of a lane's columns; `sentence` 0: it has a row of its own."""
+
+    name: int
+    strip: int
+    sentence: int
+    trace: int  # beside the sentence, in lanes of one row
+
+
+def widths(width: int, any_aim: bool, rows: int) -> Widths:
+    """How a row of so many cells is shared out."""
+    name = 16 if width >= 110 else 10 if width >= 60 else 9
+    around = 1 + name + 1 + figures.VALUE_CELLS + 1
+    strip = 0 if not any_aim else 24 if width >= 140 else 17 if width >= 100 else 11
+    left = width - around - (strip + 1 if strip else 0)
+    if width < 60:
+        return Widths(name, max(width - around, 0) if any_aim else 0, 0, 0)
+    if rows == 1 and left >= 42 + TRACE_LEAST + 1:
+        return Widths(name, strip, 42, left - 43)
+    return Widths(name, strip, left, 0)
+
+
+def line(lane: Lane, name: str, said: Said, scale: Scale, wide: Widths, chosen: bool) -> list[Run]:
+    """Name, value with its doubt, its place on the aim, the sentence."""
+    tone = inks.TONES[said.tone]
+    doubtful = lane.belief != "believed"
+    value = figures.value_text(lane.value, lane.u95, scale)
+    runs: list[Run] = [
+        ("▶" if chosen else " ", "strong"),
+        (text.fit(name, wide.name) + " ", "strong" if chosen else ""),
+        (value + " ", "faint" if doubtful else ""),
+    ]
+    if wide.strip:
+        runs.append((_strip(lane, wide.strip), tone or "faint"))
+        runs.append((" ", ""))
+    if wide.sentence:
+        runs.append((text.fit(said.text, wide.sentence), tone))
+    return runs
+
+
+def _strip(lane: Lane, width: int) -> str:
+    aim = lane.aim
+    if aim is None:
+        return " " * width
+    around = AROUND_AIM * (aim[1] - aim[0])
+    outlook = lane.outlook if lane.moving else None
+    return draw.strip(
+        width,
+        (aim[0] - around, aim[1] + around),
+        aim,
+        lane.value,
+        lane.u95,
+        outlook["salinity_pct"] if outlook else math.nan,
+        hollow=lane.belief != "believed",
+    )
+
+
+def trace(lane: Lane, on: Axis) -> list[Run]:
+    """The lane's trace in one row, faults in its ink, doses and the expected rest marked."""
+    held = axis.columns(lane, on)
+    seen = np.concatenate((held.low, held.high))
+    seen = seen[np.isfinite(seen)]
+    low, high = 0.0, 1.0
+    if len(seen):
+        least = LEAST_BANDS * lane.band if lane.calibrated else 1e-3 * abs(float(seen[0]))
+        low, high = draw.nice_bounds(float(seen.min()), float(seen.max()), max(least, 1e-9))
+    canvas = Canvas(on.width, 1, low, high)
+    canvas.curve(axis.columns(lane, on, usable=False), inks.FAINT)
+    canvas.curve(held, inks.TRACE)
+    _faults(canvas, lane, on)
+    outlook = lane.outlook if lane.moving else None
+    if outlook is not None:
+        rest_t = outlook["t"] + outlook["rest_in_s"]
+        canvas.level(0, on.now_cell + 1, on.cell(rest_t), inks.EXPECT, "╌")
+        canvas.upright(on.cell(rest_t), inks.EXPECT, "┊", over=True)
+    for dose in lane.doses:
+        if not dose.struck and on.from_t <= dose.time_s < on.to_t:
+            canvas.put(0, on.cell(dose.time_s), "▲", inks.MARK)
+    canvas.upright(on.now_cell, inks.FAINT, "│")
+    return canvas.runs(0, inks.INKS, inks.PAPERS)
+
+
+def _faults(canvas: Canvas, lane: Lane, on: Axis) -> None:
+    for span in lane.spans:
+        if span.what in ("out", "link"):
+            continue
+        to_t = on.now_t if span.to_t is None else span.to_t
+        first, last = max(on.cell(span.from_t), 0), min(on.cell(to_t), on.width - 1)
+        if first <= last:
+            canvas.ink[0, first : last + 1] = inks.DOUBT
+            canvas.level(0, first, last, inks.DOUBT, "~")
+
+
+def rows(
+    lane: Lane,
+    name: str,
+    said: Said,
+    scale: Scale,
+    width: int,
+    any_aim: bool,
+    per_lane: int,
+    on: Axis,
+    chosen: bool,
+) -> list[list[Run]]:
+    """The one or two rows of a lane."""
+    wide = widths(width, any_aim, per_lane)
+    first = line(lane, name, said, scale, wide, chosen)
+    if wide.trace:
+        first = [*first, (" ", ""), *trace(lane, on)]
+    told = [text.row(first, width)]
+    if per_lane == 1 or wide.trace:
+        return told
+    if not wide.sentence:
+        second: list[Run] = [("  ", ""), (text.fit(said.text, width - 2), inks.TONES[said.tone])]
+    else:
+        second = [(" " * MARGIN, ""), *trace(lane, on)]
+    return [*told, text.row(second, width)]
