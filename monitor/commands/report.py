@@ -12,6 +12,7 @@ from typing import Annotated
 import typer
 
 from monitor.commands import Refusal, Wrong, load_bench
+from monitor.commands.times import local_time
 
 EVENING_H = 18
 
@@ -41,13 +42,13 @@ def command(
     from monitor.report.night import gather
     from monitor.report.pages import page, table, text
 
-    first = _time(since, "--since")
-    last = _time(until, "--until")
+    first = local_time(since, "--since")
+    last = local_time(until, "--until")
     if log:
         paths, given = list(log), load_bench(bench) if bench else None
     else:
         first = first or _last_evening(datetime.now().astimezone())
-        paths, given = _of_bench(bench, logs, first), None
+        paths, given = logs_of_bench(bench, logs, first), None
     try:
         night = gather(paths, given, first, last)
     except LogError as wrong:
@@ -65,16 +66,7 @@ def _last_evening(now: datetime) -> datetime:
     return evening - timedelta(days=1)
 
 
-def _time(text: str | None, option: str) -> datetime | None:
-    if text is None:
-        return None
-    try:
-        return datetime.fromisoformat(text).astimezone()
-    except ValueError:
-        raise Wrong(f"{option}: {text[:40]!r} is no time; expected 2026-03-14T18:00") from None
-
-
-def _of_bench(bench: Path | None, logs: Path | None, first: datetime) -> list[str]:
+def logs_of_bench(bench: Path | None, logs: Path | None, first: datetime) -> list[str]:
     """The logs of this bench that reach past `first`. Raises Wrong, Refusal."""
     from monitor.logbook.reader import logs_since
     from monitor.places import logs_folder

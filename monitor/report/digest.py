@@ -6,7 +6,9 @@ import math
 from collections.abc import Iterable
 from typing import Any, NamedTuple
 
+from monitor.blocks import Event
 from monitor.findings import Finding
+from monitor.logbook.codec import utc_of
 from monitor.report.night import Lane, Night
 
 
@@ -193,10 +195,45 @@ def _gaps(night: Night) -> Iterable[str]:
         yield from lane.messages
 
 
+def handover(night: Night) -> list[Section]:
+    """What is open, for whoever comes next."""
+    silences = [
+        f"{e.fields['what']} until {utc_of(e.fields['until_utc']).astimezone():%d %b %H:%M}"
+        for lane in night.lanes
+        for e in lane.events
+        if e.kind == "silence" and utc_of(e.fields["until_utc"]) > night.when(night.to_t)
+    ]
+    told = [
+        Section("Open now", list(_open(night)) or ["nothing: all that began is over"], urgent=True),
+        Section("Silenced", sorted(set(silences))),
+        Section("Doses", list(_doses(night))),
+        Section("Checks, notes, orders", list(_notes(night))),
+        Section("How sure", [_how_sure(lane) for lane in night.lanes]),
+    ]
+    return [section for section in told if section.lines]
+
+
+def _compared(lane: Lane, event: Event) -> str:
+    """Another reading of the same water against ours: both, and E_n."""
+    at = [m for m in lane.minutes if event.time_s - 120 < m.t <= event.time_s + 60]
+    ours = next((m for m in reversed(at) if math.isfinite(m.mean_pct)), None)
+    theirs = event.fields["salinity_pct"]
+    u95 = 2.0 * (event.fields.get("u_pct") or 0.0)
+    what = event.fields.get("what") or "another instrument"
+    if ours is None:
+        return f"{what} reads {pct(theirs, u95)}; ours gave none then"
+    score = (ours.mean_pct - theirs) / max(math.hypot(ours.u95_pct, u95), 1e-9)
+    our_pct = pct(ours.mean_pct, ours.u95_pct)
+    return f"{what} reads {pct(theirs, u95)}, ours {our_pct}: E_n {score:+.1f}"
+
+
 def _notes(night: Night) -> Iterable[str]:
     for lane in night.lanes:
         for event in lane.events:
             if event.kind in ("dose", "gap"):
+                continue
+            if event.kind == "compare":
+                yield f"{lane.tank}: {clock(night, event.time_s)} {_compared(lane, event)}"
                 continue
             by = f", by {event.fields['by']}" if event.fields.get("by") else ""
             shown = {

@@ -21,10 +21,10 @@ WIDE, HIGH = 720, 120  # px of a tank's picture
 TEXT_MOST = 400
 
 
-def text(night: Night, columns: int = 80) -> str:
-    """The page for a terminal."""
+def text(night: Night, columns: int = 80, told: Sequence[Section] | None = None) -> str:
+    """The page for a terminal; `told` instead of the whole report's sections."""
     lines = [*_head(night), ""]
-    for section in sections(night):
+    for section in told or sections(night):
         lines.append(section.title)
         for said in section.lines:
             lines += textwrap.wrap(
