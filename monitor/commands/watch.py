@@ -20,6 +20,7 @@ if TYPE_CHECKING:
     from monitor.bench import Bench
     from monitor.screen.source import Source
 
+MAIN = "from monitor.cli import main; main()"
 START_S = 15.0  # until a service that was started must answer
 END_S = 10.0  # until one that was told to end must have ended
 
@@ -33,6 +34,13 @@ def command(
     light: Annotated[
         bool | None, typer.Option("--light/--dark", help="For a light or a dark terminal.")
     ] = None,
+    orders: Annotated[
+        bool | None, typer.Option("--orders/--no-orders", help="Whether doses can be recorded.")
+    ] = None,
+    web: Annotated[
+        bool, typer.Option("--web", help="In a browser of this machine; no orders by default.")
+    ] = False,
+    port: Annotated[int, typer.Option(min=1024, max=65535, help="Of --web, on loopback.")] = 8420,
 ) -> None:
     """Watch a bench: attach to the service that records it, or start one while this is open.
 
@@ -44,11 +52,29 @@ def command(
     try:
         folder, socket = logs_folder(settings, bench, logs), socket_path(bench)
         with recording(settings, bench, folder, socket) as where:
+            if web:
+                _serve(bench.resolve(), where.resolve(), bool(orders), port)
+                return
             from monitor.screen.followed import LiveSource
 
-            show(LiveSource(settings, where, socket, bench.name), plain=plain, light=light)
+            source = LiveSource(settings, where, socket, bench.name, orders is not False)
+            show(source, plain=plain, light=light)
     except PlaceError as wrong:
         raise Wrong(str(wrong)) from None
+
+
+def _serve(bench: Path, folder: Path, orders: bool, port: int) -> None:
+    """The screen in a browser: every visitor runs this very command. Raises Refusal."""
+    try:
+        from monitor.web import Door
+    except ImportError:
+        raise Refusal("--web needs textual-serve; expected pip install 'stillbrine[web]'") from None
+    line = [sys.executable, "-c", MAIN, "watch", "--bench", str(bench), "--logs", str(folder)]
+    line.append("--orders" if orders else "--no-orders")
+    try:
+        Door(line, port, bench.name, lambda said: print(said, file=sys.stderr, flush=True)).open()
+    except OSError as wrong:
+        raise Refusal(f"--port {port}: {wrong.strerror}; expected one that is free") from None
 
 
 def play(
@@ -79,7 +105,7 @@ def play(
 
 def show(source: Source, note: str = "", plain: bool = False, light: bool | None = None) -> None:
     """The source on the screen; as text where it is asked for or nothing else is possible."""
-    if plain or not sys.stdout.isatty() or os.environ.get("TERM", "dumb") in ("dumb", ""):
+    if plain or not _can_show():
         from monitor.screen import plain as text
 
         text.run(source, _print, note)
@@ -87,6 +113,13 @@ def show(source: Source, note: str = "", plain: bool = False, light: bool | None
     from monitor.screen.app import run_app
 
     run_app(source, note=note, light=light)
+
+
+def _can_show() -> bool:
+    """Whether standard output is a terminal with a screen, or a browser's socket."""
+    if os.environ.get("TEXTUAL_DRIVER"):
+        return True
+    return sys.stdout.isatty() and os.environ.get("TERM", "dumb") not in ("dumb", "")
 
 
 def _print(text: str) -> None:
@@ -108,7 +141,7 @@ def recording(settings: Bench, bench: Path, folder: Path, socket: Path) -> Itera
         if probe.port is None:
             raise Wrong(f"{bench.name}: probe.{name}.port: missing; expected a port to read")
     line = ["run", "--bench", str(bench), "--logs", str(folder)]
-    with child([sys.executable, "-c", "from monitor.cli import main; main()", *line], socket):
+    with child([sys.executable, "-c", MAIN, *line], socket):
         yield folder
 
 
