@@ -77,7 +77,12 @@ class Door(Server):
     async def _make_app(self) -> web.Application:
         app: web.Application = await super()._make_app()
         app.router.add_get("/page.css", self._css)
-        app.middlewares.append(web.middleware(self._guard))
+
+        @web.middleware
+        async def guard(request: web.Request, handler: Handler) -> web.StreamResponse:
+            return await self._guard(request, handler)
+
+        app.middlewares.append(guard)
         return app
 
     async def _guard(self, request: web.Request, handler: Handler) -> web.StreamResponse:
