@@ -205,11 +205,15 @@ def score(tally: Tally, scene: Scene, command: str, cuts: random.Random | None) 
         score_broken(tally, scene, why)
         return f"{scene.name:24s} BROKEN {why}"
     tally.seconds += took
+    return f"{scene.name:24s} {took:5.2f}s  " + "; ".join(score_found(tally, scene, found))
+
+
+def score_found(tally: Tally, scene: Scene, found: list[Record]) -> list[str]:
+    """Hold what was said against the scene's truth."""
     found = well_formed(found, tally, scene.name)
     notes = [score_dose(tally, dose, next_t, found) for dose, next_t in scene.doses]
     score_bad_rests(tally, scene, found)
-    notes += score_faults(tally, scene, found) + score_trend(tally, scene, found)
-    return f"{scene.name:24s} {took:5.2f}s  " + "; ".join(notes)
+    return notes + score_faults(tally, scene, found) + score_trend(tally, scene, found)
 
 
 def main(argv: list[str] | None = None) -> int:
