@@ -11,7 +11,7 @@ from monitor.dosing.ledger import Dose
 from monitor.settling.fit import FEWEST, Fit
 from monitor.settling.history import Bin, Still
 from monitor.settling.models import SETTLE_S
-from monitor.settling.rest import NEEDED, Expected, Judgement, judge
+from monitor.settling.rest import NEEDED, Expected, Foretold, Judgement, judge
 
 LEDGER_ODDS = 20.0  # for the recorded dose, against anything else having gone in
 OTHER_ODDS = 1.0  # for the same volume of another liquid
@@ -73,6 +73,7 @@ class Mixing:
             self.scale = UNKNOWN_BANDS * band_pct
         if self.level_pct != self.level_pct:
             self.extra = self.scale
+        self.foretold = Foretold(self.expected, self.scale)
         self.fit: Fit | None = None
         self.judgement: Judgement | None = None
         self.filtered: deque[tuple[int, float]] = deque(maxlen=FLAT_S + 1)
@@ -148,7 +149,7 @@ class Mixing:
 
     def _judge(self, k: int) -> None:
         assert self.fit is not None
-        self.judgement = judge(self.fit.models(), self.expected, self.scale, self.band)
+        self.judgement = judge(self.fit.models(), self.foretold, self.band)
         self.ready = self.ready + 1 if self._says_rest(self.judgement, k) else 0
 
     def _says_rest(self, said: Judgement, k: int) -> bool:

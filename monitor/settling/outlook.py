@@ -9,7 +9,8 @@ import numpy as np
 from monitor.settling.models import DELAY_S
 from monitor.settling.rest import Judgement
 
-HEAVIEST = 12
+HEAVIEST = 10
+LOOKS = 61  # moments ahead
 SHORTEST_S, LONGEST_S = 60.0, 900.0  # how far ahead to look
 _SPREAD = np.array([-1.4, 0.0, 1.4])  # sds of what is still to come
 _SHARE = np.array([0.25, 0.5, 0.25])
@@ -35,7 +36,7 @@ def rest_in(judgement: Judgement, band: float) -> tuple[float, float]:
     weight = models.weight[heavy] / models.weight[heavy].sum()
     tau = models.bank.tau[heavy]
     horizon = min(max(5.0 * float(tau[weight > 0.02].max()), SHORTEST_S), LONGEST_S)
-    ahead = np.linspace(0.0, horizon, 121)
+    ahead = np.linspace(0.0, horizon, LOOKS)
     shapes = models.bank.take(heavy).shapes(models.x + ahead[:, None])
     left = np.einsum("ikh,ih->kh", shapes, models.c[1:, heavy])
     spread = np.einsum("ijh,jkh->ikh", models.cov[1:, 1:, heavy], shapes)

@@ -13,6 +13,8 @@ from monitor.settling.models import TERMS
 
 INSIDE = 0.95  # of the band: what is still to come has to stay inside this
 NEEDED = 4  # judgements in a row
+ANYTHING = 1e6  # %^2, variance of a step that nothing foretells
+TINY = 1e-30  # %^2, least variance
 _LANDING = np.zeros((TERMS, 1))
 _LANDING[0] = 1.0
 
@@ -27,12 +29,26 @@ class Expected:
     odds: float
 
 
+class Foretold:
+    """The expected steps as columns of figures, one row each, and a last row for none of them."""
+
+    def __init__(self, expected: tuple[Expected, ...], scale_pct: float) -> None:
+        """`scale_pct`: size of the step, for the spread of a step that nothing foretells."""
+        self.expected = expected
+        self.step = np.array([[e.step_pct] for e in expected] + [[0.0]])
+        self.var = np.array([[e.sd_pct**2] for e in expected] + [[ANYTHING]])
+        any_var = 9.0 * scale_pct**2 + self.var
+        any_step = np.exp(-0.5 * self.step**2 / any_var) / np.sqrt(any_var)
+        self.odds = np.array([[e.odds] for e in expected] + [[1.0]]) / any_step
+        self.odds[-1] = 1.0
+
+
 @dataclass(frozen=True)
 class Judgement:
     """What one fit says after one reading."""
 
     free: Models  # the readings alone
-    expected: tuple[Expected, ...]
+    foretold: Foretold
     p_expected: tuple[float, ...]  # that each expected step is the true one
     p_rest: float  # that it is at rest
     p_rest_free: float  # the same by the readings alone
@@ -50,48 +66,37 @@ class Judgement:
         p = max(self.p_expected, default=0.0)
         if p < 0.5:
             return self.free
-        step = self.expected[self.p_expected.index(p)]
+        step = self.foretold.expected[self.p_expected.index(p)]
         return self.free.observed(_LANDING, step.step_pct, step.sd_pct**2)
 
 
-def judge(free: Models, expected: tuple[Expected, ...], scale: float, band: float) -> Judgement:
-    """Put the models and the expected steps together.
+def judge(free: Models, foretold: Foretold, band: float) -> Judgement:
+    """Put the models and the expected steps together. `band`: % that counts as rest, either side.
 
-    Parameters
-    ----------
-    free : the fit's models
-    expected : the steps that were foretold
-    scale : % size of the step, for the spread of a step that nothing foretells
-    band : % that counts as rest, either side
-
-    Notes
-    -----
-    An expected step is one more observation of c0; for J of them and H models everything is a
-    rank-1 update of (J, H) figures.
+    An expected step is one more observation of c0: for J of them and H models everything is a
+    rank-1 update of (J, H) figures. The last row is the readings alone.
     """
-    step = np.array([[e.step_pct] for e in expected]).reshape(-1, 1)
-    sd = np.array([[e.sd_pct] for e in expected]).reshape(-1, 1)
-    off, total = step - free.c[0], free.cov[0, 0] + sd**2
-    fits = free.weight * np.exp(-0.5 * off**2 / total) / np.sqrt(total)
-    any_var = (3.0 * scale) ** 2 + sd[:, 0] ** 2
-    any_step = np.exp(-0.5 * step[:, 0] ** 2 / any_var) / np.sqrt(any_var)
-    odds = np.array([e.odds for e in expected]) * fits.sum(axis=1) / any_step
-    share = np.append(odds, 1.0) / (odds.sum() + 1.0)  # the last: none of them
+    c0, var0 = free.c[0], free.cov[0, 0]
+    total = var0 + foretold.var
+    gain = (foretold.step - c0) / total
+    weight = free.weight * np.exp(-0.5 * gain * gain * total) / np.sqrt(total)
+    weight[-1] = free.weight
+    sums = weight.sum(axis=1, keepdims=True)
+    weight /= np.maximum(sums, 1e-300)
+    share = foretold.odds * sums
+    share /= share.sum()
 
-    gain = off / total
-    told = fits / np.maximum(fits.sum(axis=1, keepdims=True), 1e-300)
-    weight = np.vstack([told, free.weight])
-    p_rest = (_chances(free, gain, total, band) * weight).sum(axis=1)
-    mean = np.vstack([free.c[0] + free.cov[0, 0] * gain, free.c[0]])
-    var = np.vstack([free.cov[0, 0] * sd**2 / total, free.cov[0, 0]])
+    p_rest = (_chances(free, gain, total, band) * weight).sum(axis=1, keepdims=True)
+    mean = c0 + var0 * gain
+    var = var0 * foretold.var / total
     return Judgement(
         free,
-        expected,
-        tuple(share[:-1].tolist()),
-        float(share @ p_rest),
-        float(p_rest[-1]),
-        _moments(share[:, None] * weight, mean, var),
-        _moments(weight[-1], mean[-1], var[-1]),
+        foretold,
+        tuple(share[:-1, 0].tolist()),
+        float((share * p_rest).sum()),
+        float(p_rest[-1, 0]),
+        _moments(share * weight, mean, var),
+        _moments(free.weight, c0, var0),
     )
 
 
@@ -114,37 +119,43 @@ def rested_x(judgement: Judgement, band: float) -> float:
     return float(x[outside[-1]]) + 1.0 if outside.size else -2.0
 
 
-def chance_within(mean: Floats, sd: Floats, bound: float) -> Floats:
+def chance_within(mean: Floats, var: Floats, bound: float) -> Floats:
     """P(|r| < bound) of normals, within 2e-7.
 
     References
     ----------
     Abramowitz and Stegun, Handbook of Mathematical Functions (1964), 7.1.26.
     """
-    z = np.stack([bound - mean, bound + mean]) / (math.sqrt(2.0) * sd)
-    np.clip(z, -5.0, 5.0, out=z)
+    z = np.empty((2, *mean.shape))
+    scale = np.sqrt(0.5 / var)
+    np.multiply(bound - mean, scale, out=z[0])
+    np.multiply(bound + mean, scale, out=z[1])
     u = 1.0 / (1.0 + 0.3275911 * np.abs(z))
     poly = 1.061405429 * u - 1.453152027
-    poly = (((poly * u + 1.421413741) * u - 0.284496736) * u + 0.254829592) * u
+    poly *= u
+    poly += 1.421413741
+    poly *= u
+    poly -= 0.284496736
+    poly *= u
+    poly += 0.254829592
+    poly *= u
     erf = np.copysign(1.0 - poly * np.exp(-z * z), z)
     chance: Floats = 0.5 * (erf[0] + erf[1])
     return chance
 
 
 def _chances(free: Models, gain: Floats, total: Floats, band: float) -> Floats:
-    """Chance that what is still to come stays inside the band, (J + 1, H); the last without any.
+    """Chance that what is still to come stays inside the band, (J, H).
 
     `gain` and `total` (J, H): of the update of c0 by each expected step.
     """
     shapes = free.bank.shapes(free.x + free.bank.ahead)  # (4, K, H)
     mean = (shapes * free.c[1:, None]).sum(axis=0)
-    spread = (free.cov[1:, 1:, None] * shapes).sum(axis=1)
-    var = (spread * shapes).sum(axis=0)
-    with_c0 = (shapes * free.cov[1:, 0, None]).sum(axis=0)  # covariance with the landing
-    means = np.concatenate([mean + with_c0 * gain[:, None], mean[None]])
-    variances = np.concatenate([var - with_c0**2 / total[:, None], var[None]])
-    sd = np.sqrt(np.maximum(variances, 1e-30))
-    chances: Floats = chance_within(means, sd, INSIDE * band).min(axis=1)
+    spread = (free.cov[:, 1:, None] * shapes).sum(axis=1)  # (5, K, H), with every coefficient
+    var = (spread[1:] * shapes).sum(axis=0)
+    means = mean + spread[0] * gain[:, None]
+    variances = np.maximum(var - spread[0] ** 2 / total[:, None], TINY)
+    chances: Floats = chance_within(means, variances, INSIDE * band).min(axis=1)
     return chances
 
 
