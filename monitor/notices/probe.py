@@ -33,18 +33,23 @@ class Lift:
         self._left: tuple[float, float] | None = None  # t, level
         self._stood: float | None = None  # the level while locked
         self._away = False
+        self._silences: dict[float, Finding] = {}  # no-pulses said meanwhile, by from_t
 
     def step(self, second: Second, trust: Trust, explained: bool) -> list[Finding]:
         """One closed second that is not a quiet one."""
         hidden = trust.faults.keys() & {"lodged-bubble", "stuck", "hum", "loose-lead", "short"}
         if explained or hidden:
             self._left = self._stood = None
+            self._silences.clear()
             return []
         if not trust.locked:
             if self._left is None and self._stood is not None:
                 self._left, self._away = (second.t, self._stood), False
             if self._left is not None and second.n_rows == second.zeros:
                 self._away = True
+            if "no-pulses" in trust.faults:
+                fault = trust.faults["no-pulses"]
+                self._silences[fault["from_t"]] = {**fault, "to_t": second.t}
             return []
         self._stood = trust.level_ln
         if self._left is None:
@@ -56,6 +61,7 @@ class Lift:
         if gone_s > LIFT_S[1] or off > SAME_LN:
             if gone_s > LIFT_S[1] or off <= AWAY_LN:
                 self._left = None
+                self._silences.clear()
             else:
                 self._stood = None  # rinse water: the tank's level is still to come back
             return []
@@ -68,7 +74,12 @@ class Lift:
         )
         said = self._open.say(second.t, "lift", from_t - LOST_S, gone_s, text)
         self._open.close(second.t, "lift", from_t - LOST_S)
-        return [{**each, "to_t": second.t} for each in said]
+        faults = [
+            {**fault, "t": second.t, "withdrawn": "the probe was lifted"}
+            for fault in self._silences.values()
+        ]
+        self._silences.clear()
+        return faults + [{**each, "to_t": second.t} for each in said]
 
 
 class OtherProbe:
