@@ -32,7 +32,8 @@ class Lift:
         self._open = open_
         self._left: tuple[float, float] | None = None  # t, level
         self._stood: float | None = None  # the level while locked
-        self._away = False
+        self._away = False  # silent, or other water
+        self._rinsed = False  # other water: silence alone may have been a lead's
         self._silences: dict[float, Finding] = {}  # no-pulses said meanwhile, by from_t
 
     def step(self, second: Second, trust: Trust, explained: bool) -> list[Finding]:
@@ -44,7 +45,8 @@ class Lift:
             return []
         if not trust.locked:
             if self._left is None and self._stood is not None:
-                self._left, self._away = (second.t, self._stood), False
+                self._left = (second.t, self._stood)
+                self._away = self._rinsed = False
             if self._left is not None and second.n_rows == second.zeros:
                 self._away = True
             if "no-pulses" in trust.faults:
@@ -58,6 +60,7 @@ class Lift:
         gone_s = second.t - from_t
         off = abs(trust.level_ln - level)
         self._away |= off > AWAY_LN
+        self._rinsed |= off > AWAY_LN
         if gone_s > LIFT_S[1] or off > SAME_LN:
             if gone_s > LIFT_S[1] or off <= AWAY_LN:
                 self._left = None
@@ -77,6 +80,7 @@ class Lift:
         faults = [
             {**fault, "t": second.t, "withdrawn": "the probe was lifted"}
             for fault in self._silences.values()
+            if self._rinsed
         ]
         self._silences.clear()
         return faults + [{**each, "to_t": second.t} for each in said]
