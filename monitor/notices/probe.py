@@ -47,8 +47,7 @@ class Lift:
             if self._left is None and self._stood is not None:
                 self._left = (second.t, self._stood)
                 self._away = self._rinsed = False
-            if self._left is not None and second.n_rows == second.zeros:
-                self._away = True
+            self._look(second)
             if "no-pulses" in trust.faults:
                 fault = trust.faults["no-pulses"]
                 self._silences[fault["from_t"]] = {**fault, "to_t": second.t}
@@ -84,6 +83,15 @@ class Lift:
         ]
         self._silences.clear()
         return faults + [{**each, "to_t": second.t} for each in said]
+
+    def _look(self, second: Second) -> None:
+        """Silence, or other water?"""
+        if self._left is None:
+            return
+        if second.n_rows == second.zeros:
+            self._away = True
+        elif abs(math.log(second.median_us) - self._left[1]) > AWAY_LN:
+            self._away = self._rinsed = True
 
 
 class OtherProbe:
