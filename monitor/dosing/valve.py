@@ -47,15 +47,16 @@ class Flow:
         """Coverage factor for 95 %."""
         return t_quantile(0.975, self.dof)
 
-    def volume(self, open_s: float) -> tuple[float, float]:
-        """mL that pass in so many seconds, and the standard uncertainty of one such dose."""
+    def volume(self, open_s: float, times: int = 1) -> tuple[float, float]:
+        """mL that pass in so many seconds in so many openings, and their standard uncertainty."""
         variance = (
             (open_s * self.u_ml_per_s) ** 2
-            + self.u_offset_ml**2
-            + 2.0 * open_s * self.cov
-            + self.sd_ml**2
+            + (times * self.u_offset_ml) ** 2
+            + 2.0 * open_s * times * self.cov
+            + times * self.sd_ml**2
         )
-        return max(self.ml_per_s * open_s + self.offset_ml, 0.0), math.sqrt(max(variance, 0.0))
+        volume = self.ml_per_s * open_s + times * self.offset_ml
+        return max(volume, 0.0), math.sqrt(max(variance, 0.0))
 
     def dose(self, open_s: float) -> tuple[float, float]:
         """mL of a dose of so many seconds, and half of its u95.

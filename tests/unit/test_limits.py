@@ -2,10 +2,8 @@
 
 from __future__ import annotations
 
-import csv
 import json
 from collections.abc import Callable
-from pathlib import Path
 from types import SimpleNamespace
 from typing import Any
 
@@ -15,12 +13,11 @@ import pytest
 from monitor import bench
 from monitor.blocks import Second
 from monitor.findings import Finding
-from monitor.trust.limits import SUGGESTIONS, Limits
+from monitor.trust.limits import Limits
 
 TANK = bench.Tank(rest_band_pct=0.001, aim_pct=(0.09, 0.11), fastest_pct_per_h=0.02)
 AIM = bench.Tank(rest_band_pct=0.001, aim_pct=(0.09, 0.11))
 FAST = bench.Tank(rest_band_pct=0.001, fastest_pct_per_h=0.02)
-DATA = Path(__file__).parents[1] / "reference" / "data"
 
 
 def watch(
@@ -164,22 +161,3 @@ def test_a_restart_keeps_what_is_in_force() -> None:
     carried = json.loads(json.dumps(limits.carry()))
     (ended,), _ = watch(lambda k: 0.10, 100, carried=carried)
     assert (ended["from_t"], ended["which"]) == (said["from_t"], "high")
-
-
-def test_suggestions_agree_with_the_rules_they_quote() -> None:
-    """The figures of husbandry_salinity_rules.csv; ppt of water near 1 kg/L are tenths of a %."""
-    with (DATA / "husbandry_salinity_rules.csv").open(encoding="utf-8") as file:
-        rules = list(csv.DictReader(line for line in file if not line.startswith("#")))
-    quoted = {
-        round(float(rule[end]) / 10.0, 6)
-        for rule in rules
-        for end in ("low", "high")
-        if rule[end] and rule["unit"] in ("ppt", "ppt/h", "g/L")
-    }
-    derived = json.loads((DATA / "suggested_alarm_defaults.json").read_text(encoding="utf-8"))
-    quoted.add(derived["rate_of_change"]["warn_ppt_per_h"] / 10.0)
-    for suggestion in SUGGESTIONS:
-        assert suggestion.value in quoted
-        assert suggestion.which in ("high", "low", "fast")
-        assert suggestion.source
-        assert suggestion.confidence
