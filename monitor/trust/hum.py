@@ -1,12 +1,15 @@
 """`hum`: a steady oscillation of the period, from 0.04 Hz to 1 Hz or half the reading rate.
 
-Means of up to half a second, 80 s of them, transformed every five seconds. A thermostat is slower,
+Means of up to half a second, 80 s of them, heard every five seconds. A thermostat is slower,
 ringing after a dose fades (the quarters differ), mixing has no phase. In white noise a line 40
 times its neighbours comes about once in 10,000 h.
+
+Most of the time the means scatter less than the least hum would make them: then that is all.
 """
 
 from __future__ import annotations
 
+import functools
 import math
 from typing import NamedTuple
 
@@ -15,6 +18,7 @@ import numpy as np
 from monitor.blocks import Floats, Second
 
 SPAN_S, EVERY_S = 80.0, 5
+GROUP_S = 0.45  # of readings in one mean, at most
 BAND_HZ = (0.04, 0.97)
 LEAST = 0.0033  # amplitude, ln
 PEAK = 40.0  # the line's three bins over the mean of twenty neighbours
@@ -23,6 +27,9 @@ SLOW_HZ, AFTER_DOSE_HZ = 0.06, 0.046
 CLIP = 0.08
 GONE = 0.45
 LEAD_S, TAIL_S = 74.0, 18.0
+# variance of the means that the least hum makes: half a second takes a third off 0.97 Hz
+LEAST_VARIANCE = 0.8 * 0.5 * (0.65 * LEAST) ** 2
+_NONE = np.empty(0)
 
 
 class Tone(NamedTuple):
@@ -37,84 +44,89 @@ class Hum:
     """The means of the last 80 s."""
 
     def __init__(self) -> None:
-        self._group = 0
-        self._left = np.empty(0)
-        self._means = np.empty(0)
-        self._every_s = 0.0  # between two means
-        self._waiting: list[Second] = []
-        self._last_k: int | None = None
+        self.forget()
 
     def forget(self) -> None:
         """Begin anew."""
-        self.__init__()  # type: ignore[misc]
+        self._group = 0  # readings in a mean
+        self._left = _NONE  # readings that make no whole group yet
+        self._means = _NONE  # us
+        self._every_s = 0.0  # between two means
+        self._waiting: list[Second] = []
+        self._last_k = -1
 
     def take(self, second: Second, rate_hz: float) -> bool:
         """Take a second; True when it is time to listen."""
+        k = second.k
         if second.n_rows == second.zeros:
-            if self._last_k is not None and second.k - self._last_k > 2:
+            if self._last_k >= 0 and k - self._last_k > 2:
                 self.forget()
             return False
-        if self._last_k is not None and second.k - self._last_k > 3:
+        if self._last_k >= 0 and k - self._last_k > 3:
             self.forget()
-        self._last_k = second.k
+        self._last_k = k
         self._waiting.append(second)
-        if second.k % EVERY_S != EVERY_S - 1:
+        if k % EVERY_S != EVERY_S - 1:
             return False
         self._gather(rate_hz)
-        return self._every_s > 0 and len(self._means) * self._every_s >= SPAN_S
+        return len(self._means) * self._every_s >= SPAN_S
+
+    @property
+    def loud(self) -> bool:
+        """Whether the means scatter as much as the least hum makes them."""
+        means = self._means
+        mean = float(np.add.reduce(means)) / len(means)
+        square = float(np.add.reduce(means * means)) / len(means)
+        return square - mean * mean >= LEAST_VARIANCE * mean * mean
 
     def _gather(self, rate_hz: float) -> None:
-        group = max(int(0.45 * rate_hz + 1e-9), 1)
+        group = max(int(GROUP_S * rate_hz + 1e-9), 1)
         if self._group == 0 or abs(group - self._group) > 1 + 0.2 * self._group:
-            self._group, self._left, self._means = group, np.empty(0), np.empty(0)
-        rows = [second.period_us for second in self._waiting]
-        spent_s = len(rows)
+            self._group, self._left, self._means = group, _NONE, _NONE
+        group = self._group
+        period_us = _pulses(self._waiting)
+        every_s = group * len(self._waiting) / len(period_us)
         self._waiting = []
-        period = np.concatenate(rows)
-        ln_us = np.concatenate((self._left, np.log(period[period > 0])))
-        whole = len(ln_us) // self._group * self._group
-        self._left = ln_us[whole:]
-        table = ln_us[:whole].reshape(-1, self._group)
-        means = (
-            table.mean(axis=1)
-            if self._group < 3
-            else np.sort(table, axis=1)[:, self._group // 4 : self._group - self._group // 4].mean(
-                axis=1
-            )
-        )
-        every_s = self._group / (len(period) / spent_s)
         self._every_s += (0.1 if self._every_s else 1.0) * (every_s - self._every_s)
+        if len(self._left):
+            period_us = np.concatenate((self._left, period_us))
+        whole = len(period_us) // group * group
+        self._left = period_us[whole:]
+        table = period_us[:whole].reshape(-1, group)
+        means = np.add.reduce(table, axis=1) / group if group > 1 else table[:, 0]
         keep = int(SPAN_S / self._every_s) + 1
         self._means = np.concatenate((self._means, means))[-keep:]
 
-    def listen(self, after_dose: bool, said: Tone | None) -> Tone | None:
+    def listen(self, after_dose: bool) -> Tone | None:
         """The steady line in the last 80 s, if there is one loud enough."""
         flat = _flat(self._means)
-        if said is None and float(flat @ flat) / len(flat) < 0.3 * 0.5 * LEAST**2:
-            return None
         n = len(flat)
-        power = np.abs(np.fft.rfft(flat * np.hanning(n))) ** 2
-        hz = np.fft.rfftfreq(n, self._every_s)
-        inside = np.flatnonzero((hz >= BAND_HZ[0]) & (hz <= min(BAND_HZ[1], 0.48 / self._every_s)))
-        if len(inside) < 8:
+        if float(np.add.reduce(flat * flat)) < LEAST_VARIANCE * n:
             return None
-        at = int(inside[power[inside].argmax()])
-        around = np.r_[max(at - 12, 1) : max(at - 2, 1), at + 3 : min(at + 13, len(power))]
-        if power[max(at - 1, 0) : at + 2].sum() < PEAK * power[around].mean():
+        line = np.fft.rfft(flat * _shapes(n)[2])
+        power = line.real**2 + line.imag**2
+        step_hz = 1.0 / (n * self._every_s)
+        low = math.ceil(BAND_HZ[0] / step_hz)
+        high = int(min(BAND_HZ[1], 0.48 / self._every_s) / step_hz)
+        if high - low < 7:
             return None
-        return self._tone(flat, _refined(power, at) * float(hz[1]), after_dose)
+        at = low + int(power[low : high + 1].argmax())
+        below, above = power[max(at - 12, 1) : at - 2], power[at + 3 : at + 13]
+        around = float(np.add.reduce(below) + np.add.reduce(above)) / (len(below) + len(above))
+        if power[at - 1] + power[at] + power[at + 1] < PEAK * around:
+            return None
+        return self._tone(flat, _refined(power, at) * step_hz, after_dose)
 
     def _tone(self, flat: Floats, hz: float, after_dose: bool) -> Tone | None:
-        n = len(flat)
-        turn = np.exp(-2j * math.pi * hz * self._every_s * np.arange(n))
-        blur = np.sinc(hz * self._every_s)  # what the means take off the amplitude
+        turn = np.exp(-2j * math.pi * hz * self._every_s * np.arange(len(flat)))
+        blur = self._blur(hz)
         quarters = [2.0 * part.mean() / blur for part in np.array_split(flat * turn, 4)]
-        sizes = [abs(quarter) for quarter in quarters]
-        amplitude = abs(sum(quarters)) / 4.0
+        sizes = [float(abs(quarter)) for quarter in quarters]
+        amplitude = float(abs(sum(quarters))) / 4.0
         even = EVEN_HARD if hz < SLOW_HZ or after_dose else EVEN
         if amplitude < LEAST or (after_dose and hz < AFTER_DOSE_HZ):
             return None
-        if abs(sum(quarters)) < ALONG * sum(sizes) or min(sizes) < even * max(sizes):
+        if 4.0 * amplitude < ALONG * sum(sizes) or min(sizes) < even * max(sizes):
             return None
         if sizes[-1] < LAST * amplitude:
             return None
@@ -124,8 +136,13 @@ class Hum:
         """Whether the last third holds less than half of the tone."""
         last = _flat(self._means)[-len(self._means) // 3 :]
         turn = np.exp(-2j * math.pi * tone.hz * self._every_s * np.arange(len(last)))
-        blur = np.sinc(tone.hz * self._every_s)
-        return bool(abs(2.0 * (last * turn).mean() / blur) < GONE * tone.amplitude)
+        size = abs(2.0 * (last * turn).mean() / self._blur(tone.hz))
+        return bool(size < GONE * tone.amplitude)
+
+    def _blur(self, hz: float) -> float:
+        """What a mean of `group` readings leaves of an amplitude."""
+        angle = math.pi * hz * self._every_s
+        return math.sin(angle) / (self._group * math.sin(angle / self._group))
 
     def tonal(self) -> bool:
         """Whether three lines hold most of the power of the last 32 s: jumps of an oscillation."""
@@ -137,17 +154,42 @@ class Hum:
         return bool(power[at - 1 : at + 2].sum() > 0.6 * power[1:].sum())
 
 
-def _flat(values: Floats) -> Floats:
-    """The values without their quadratic, clipped."""
-    n = len(values)
+def _pulses(seconds: list[Second]) -> Floats:
+    """The pulses of consecutive seconds; at least one."""
+    first, last = seconds[0], seconds[-1]
+    block = first.block
+    if block is not None and block is last.block:
+        period_us = block.period_us[first.start : last.stop]
+    else:
+        period_us = np.concatenate([second.period_us for second in seconds])
+    if any(second.zeros for second in seconds):
+        period_us = period_us[period_us > 0]
+    return period_us
+
+
+@functools.lru_cache(maxsize=16)
+def _shapes(n: int) -> tuple[Floats, Floats, Floats]:
+    """A line and a parabola of unit length, and the window, (n,) each."""
     x = np.linspace(-1.0, 1.0, n)
-    rest = values - np.median(values)
-    rest = np.clip(rest, -2.0 * CLIP, 2.0 * CLIP)
-    rest = rest - rest.mean()
-    rest = rest - x * (float(x @ rest) / float(x @ x))
-    curve = x * x - float(x @ x) / n
-    rest = rest - curve * (float(curve @ rest) / float(curve @ curve))
-    return np.clip(rest, -CLIP, CLIP)
+    curve = x * x - np.add.reduce(x * x) / n
+    unit = [shape / math.sqrt(np.add.reduce(shape * shape)) for shape in (x, curve)]
+    return unit[0], unit[1], np.hanning(n)
+
+
+def _flat(means_us: Floats) -> Floats:
+    """ln of the means without their quadratic, clipped."""
+    n = len(means_us)
+    straight, curve, _ = _shapes(n)
+    values = np.log(means_us)
+    rest = _clipped(values - np.partition(values, n // 2)[n // 2], 2.0 * CLIP)
+    rest -= np.add.reduce(rest) / n
+    rest -= straight * np.add.reduce(straight * rest)
+    rest -= curve * np.add.reduce(curve * rest)
+    return _clipped(rest, CLIP)
+
+
+def _clipped(values: Floats, most: float) -> Floats:
+    return np.minimum(np.maximum(values, -most), most)
 
 
 def _refined(power: Floats, at: int) -> float:

@@ -35,6 +35,7 @@ ADVICE = {
     "stuck": "restart the microcontroller",
     "hum": "look for a pump or heater near the lead; earth it",
 }
+DEAFENING = {"stuck", "short", "no-pulses", "loose-lead"}
 LEAST_UPS, LEAST_UPS_DOSE, LEAST_UPS_MIXING = 2.0, 3.0, 4.0
 BUBBLES_WIDEN = 0.25  # of the gate: what bubbles in the gate may hide
 
@@ -293,9 +294,9 @@ class Trust:
             if "hum" not in self.faults:
                 return []
             return [self._end("hum", second.t, second.t - TAIL_S)]
-        if self.faults.keys() & {"stuck", "short", "no-pulses", "loose-lead"}:
+        if not self._hum.loud or self.faults.keys() & DEAFENING:
             return []
-        tone = self._hum.listen(self.level.after_dose(second.t), None)
+        tone = self._hum.listen(self.level.after_dose(second.t))
         if tone is None:
             return []
         self._tone = tone
