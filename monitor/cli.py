@@ -16,6 +16,7 @@ from monitor.commands import (
     calibrate,
     check,
     demo,
+    dose,
     export,
     handover,
     ports,
@@ -24,6 +25,7 @@ from monitor.commands import (
     run,
     salinity,
     standards,
+    valve,
     verify,
     watch,
 )
@@ -48,6 +50,8 @@ for name, module in {
     "verify": verify,
     "salinity": salinity,
     "standards": standards,
+    "dose": dose,
+    "valve": valve,
     "ports": ports,
     "check": check,
 }.items():
