@@ -1,0 +1,1 @@
+"""How fast, how lean: `python -m tests.speed` measures and prints one table."""
