@@ -68,7 +68,7 @@ def is_trouble(finding: Finding) -> bool:
     """Whether this finding is one that a person may have to act on."""
     kind = finding["finding"]
     if kind == "belief":
-        return finding["belief"] == "not-believed"
+        return str(finding["belief"]) == "not-believed"
     if kind == "rest":
         return finding.get("verdict") == "disagrees" and finding.get("to_t") is None
     return True

@@ -11,7 +11,7 @@ from collections import Counter
 from monitor.bench import Bench
 from monitor.chain import Chain, Watch
 from monitor.findings import Finding
-from monitor.logbook.parser import Parser
+from monitor.logbook.parser import BareParser, Parser
 
 
 class Follower:
@@ -23,14 +23,14 @@ class Follower:
         given: Bench | None = None,
         first_part: int = 1,
         watch: Watch | None = None,
-        parser: Parser | None = None,
+        parser: Parser | BareParser | None = None,
     ) -> None:
         """`given`: judge by this bench, not by the log's; `parser`: for what is no log of ours.
 
         Raises CalibrationError if the given bench's standards allow no fit.
         """
         self.chain = Chain(probe, given, 0 if first_part == 1 else None, watch)
-        self._parser = parser or Parser()
+        self._parser: Parser | BareParser = parser or Parser()
         self._dropped: Counter[str] = Counter()
 
     def feed(self, data: bytes) -> list[Finding]:

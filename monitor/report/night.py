@@ -146,4 +146,4 @@ def gather(
 
 
 def _touches(finding: Finding, night: Night) -> bool:
-    return night.from_t <= finding["t"] <= night.to_t
+    return night.from_t <= float(finding["t"]) <= night.to_t

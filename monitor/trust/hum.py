@@ -197,4 +197,4 @@ def _refined(power: Floats, at: int) -> float:
     if not 0 < at < len(power) - 1:
         return float(at)
     a, b, c = np.log(power[at - 1 : at + 2] + 1e-300).tolist()
-    return at + 0.5 * (a - c) / (a - 2.0 * b + c)
+    return float(at + 0.5 * (a - c) / (a - 2.0 * b + c))

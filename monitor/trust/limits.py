@@ -43,7 +43,8 @@ class Trust(Protocol):
 class Settling(Protocol):
     """What is asked of the rest's judge."""
 
-    heading: float
+    @property
+    def heading(self) -> float: ...
 
 
 class Limits:
