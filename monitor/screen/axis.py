@@ -5,6 +5,8 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 
+import numpy as np
+
 from monitor.screen.draw import Columns, Run
 from monitor.screen.figures import Clock
 from monitor.view import Lane
@@ -63,21 +65,20 @@ def axis(width: int, span_s: float, now_t: float, end_t: float | None) -> Axis:
     return Axis((last + 1 - past) * cell_s, cell_s, width, now_t)
 
 
-def columns(lane: Lane, on: Axis, filtered: bool = True, usable: bool = True) -> Columns:
-    """A lane's trace on the axis: its own seconds, minutes where those are too many or too old.
+def columns(lane: Lane, on: Axis) -> tuple[Columns, Columns | None]:
+    """A lane's trace on the axis: its seconds, or minutes where those are too many or too old.
 
-    `usable` : the readings of the tank; False: those that are not, for the faint trace.
+    Returns the tank's readings, filtered; and those that are not the tank's, None without any.
     """
-    import numpy as np
-
     n = 2 * on.width
     times, values = [np.empty(0)], [np.empty(0)]
     gap_s = 2.6
+    faint: Columns | None = None
     seconds_t = lane.trace.seconds.first_t
     coarse = on.dot_s >= COARSE_S
     if coarse or (seconds_t == seconds_t and on.from_t < seconds_t):
         t, low, _, high, _, _ = lane.trace.minutes.between(on.from_t, on.to_t)
-        if usable and len(t):
+        if len(t):
             old = np.ones(len(t), bool) if coarse else t + 30.0 <= seconds_t
             times.append(np.repeat(t[old], 2))
             values.append(np.stack((low[old], high[old]), axis=1).ravel())
@@ -85,11 +86,16 @@ def columns(lane: Lane, on: Axis, filtered: bool = True, usable: bool = True) ->
     if not coarse:
         t, value, smooth, good, _, _, _ = lane.trace.seconds.between(on.from_t, on.to_t)
         if len(t) > 2:
-            gap_s = max(2.6, 2.6 * float(np.median(np.diff(t[-400:]))))
-        shown = np.where(np.isfinite(smooth), smooth, value) if filtered else value
+            gap_s = max(2.6, 2.6 * float(np.diff(t[-64:]).min()))
+        shown = np.where(np.isfinite(smooth), smooth, value)
+        not_tank = good == 0
+        if not_tank.any():
+            faint = Columns(t, np.where(not_tank, value, np.nan), on.from_t, on.dot_s, n, gap_s)
+            shown[not_tank] = np.nan
         times.append(t)
-        values.append(np.where((good > 0) == usable, shown, np.nan))
-    return Columns(np.concatenate(times), np.concatenate(values), on.from_t, on.dot_s, n, gap_s)
+        values.append(shown)
+    y = np.concatenate(values)
+    return Columns(np.concatenate(times), y, on.from_t, on.dot_s, n, gap_s), faint
 
 
 def labels(on: Axis, clock: Clock, margin: int, future: bool = True) -> list[Run]:

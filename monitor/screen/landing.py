@@ -44,12 +44,13 @@ def picture(
     mono: bool = False,
 ) -> list[list[Run]]:
     """`height` rows: the plot, what happened beneath it, the axis of time."""
-    past, faint = axis.columns(lane, on), axis.columns(lane, on, usable=False)
+    past, faint = axis.columns(lane, on)
     low, high = bounds(lane, on, past, plan)
     canvas = Canvas(on.width, max(height - 2, 1), low, high)
     if lane.aim is not None:
         canvas.band(*lane.aim, inks.AIM, inks.FAINT, "┄" if mono else "")
-    canvas.curve(faint, inks.FAINT)
+    if faint is not None:
+        canvas.curve(faint, inks.FAINT)
     _raw(canvas, lane, on)
     _expected_before(canvas, lane, on)
     canvas.curve(past, inks.TRACE)

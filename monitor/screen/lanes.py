@@ -78,7 +78,7 @@ def _strip(lane: Lane, width: int) -> str:
 
 def trace(lane: Lane, on: Axis) -> list[Run]:
     """The lane's trace in one row, faults in its ink, doses and the expected rest marked."""
-    held = axis.columns(lane, on)
+    held, faint = axis.columns(lane, on)
     seen = np.concatenate((held.low, held.high))
     seen = seen[np.isfinite(seen)]
     low, high = 0.0, 1.0
@@ -86,7 +86,8 @@ def trace(lane: Lane, on: Axis) -> list[Run]:
         least = LEAST_BANDS * lane.band if lane.calibrated else 1e-3 * abs(float(seen[0]))
         low, high = draw.nice_bounds(float(seen.min()), float(seen.max()), max(least, 1e-9))
     canvas = Canvas(on.width, 1, low, high)
-    canvas.curve(axis.columns(lane, on, usable=False), inks.FAINT)
+    if faint is not None:
+        canvas.curve(faint, inks.FAINT)
     canvas.curve(held, inks.TRACE)
     _faults(canvas, lane, on)
     outlook = lane.outlook if lane.moving else None
@@ -112,27 +113,65 @@ def _faults(canvas: Canvas, lane: Lane, on: Axis) -> None:
             canvas.level(0, first, last, inks.DOUBT, "~")
 
 
-def rows(
-    lane: Lane,
-    name: str,
-    said: Said,
-    scale: Scale,
-    width: int,
-    any_aim: bool,
-    per_lane: int,
-    on: Axis,
-    chosen: bool,
-) -> list[list[Run]]:
-    """The one or two rows of a lane."""
-    wide = widths(width, any_aim, per_lane)
-    first = line(lane, name, said, scale, wide, chosen)
-    if wide.trace:
-        first = [*first, (" ", ""), *trace(lane, on)]
-    told = [text.row(first, width)]
-    if per_lane == 1 or wide.trace:
-        return told
-    if not wide.sentence:
-        second: list[Run] = [("  ", ""), (text.fit(said.text, width - 2), inks.TONES[said.tone])]
-    else:
-        second = [(" " * MARGIN, ""), *trace(lane, on)]
-    return [*told, text.row(second, width)]
+class Drawn:
+    """Rows as they were drawn last, for as long as nothing in them has changed."""
+
+    def __init__(self) -> None:
+        self._rows: dict[Lane, tuple[object, list[list[Run]]]] = {}
+        self._traces: dict[Lane, tuple[object, list[Run]]] = {}
+
+    def rows(
+        self,
+        lane: Lane,
+        name: str,
+        said: Said,
+        scale: Scale,
+        width: int,
+        any_aim: bool,
+        per_lane: int,
+        on: Axis,
+        chosen: bool,
+    ) -> list[list[Run]]:
+        """The one or two rows of a lane."""
+        place = (on.from_t, on.cell_s, on.width, on.now_cell)
+        key = (lane.version, said, scale, width, any_aim, per_lane, chosen, place)
+        held = self._rows.get(lane)
+        if held is None or held[0] != key:
+            wide = widths(width, any_aim, per_lane)
+            drawn = self._drawn(lane, name, said, scale, width, wide, per_lane, on, chosen)
+            held = self._rows[lane] = (key, drawn)
+        return held[1]
+
+    def _drawn(
+        self,
+        lane: Lane,
+        name: str,
+        said: Said,
+        scale: Scale,
+        width: int,
+        wide: Widths,
+        per_lane: int,
+        on: Axis,
+        chosen: bool,
+    ) -> list[list[Run]]:
+        first = line(lane, name, said, scale, wide, chosen)
+        if wide.trace:
+            first = [*first, (" ", ""), *self._trace(lane, on)]
+        told = [text.row(first, width)]
+        if per_lane == 1:
+            return told
+        if not wide.sentence:
+            tone = inks.TONES[said.tone]
+            second: list[Run] = [("  ", ""), (text.fit(said.text, width - 2), tone)]
+        else:
+            second = [(" " * MARGIN, ""), *self._trace(lane, on)]
+        return [*told, text.row(second, width)]
+
+    def _trace(self, lane: Lane, on: Axis) -> list[Run]:
+        """The trace, drawn again once there is another dot to it."""
+        beat = lane.t // on.dot_s if lane.t == lane.t else None
+        key = (lane.marked, beat, on.from_t, on.cell_s, on.width)
+        held = self._traces.get(lane)
+        if held is None or held[0] != key:
+            held = self._traces[lane] = (key, trace(lane, on))
+        return held[1]

@@ -23,6 +23,7 @@ from monitor.tanks import Unwatched
 from monitor.view import Lane
 
 SLICE_S = 120.0  # judged at a time, at most
+HUNT_S = 1.0  # and while it runs on to a finding: it stops no farther behind
 BUDGET_S = 0.06  # of a poll
 WORTH_A_LOOK = ("fault", "belief", "rest", "limit", "unwatched", "notice", "trend")
 SPEED_MOST = 3600.0
@@ -181,11 +182,11 @@ class ReplaySource:
         """Judge on to where play was sent, at most until this monotonic time."""
         while not self.caught_up and time.monotonic() < until:
             aim = self.end_s if self._hunting else self._target
-            upto = min(self._done_s + SLICE_S, aim)
+            upto = min(self._done_s + (HUNT_S if self._hunting else SLICE_S), aim)
             worth = self._slice(upto)
             self._done_s = upto
             if self._hunting and (worth or upto >= self.end_s):
-                self.seek(worth[0]["t"] if worth else upto)
+                self.seek(upto)
 
     def _slice(self, upto: float) -> list[Finding]:
         """Judge up to this time; what was found that is worth a look."""

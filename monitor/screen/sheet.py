@@ -42,6 +42,7 @@ class Look:
     message: Said | None = None
     note: str = ""
     mono: bool = False
+    drawn: lanes.Drawn = field(default_factory=lanes.Drawn)
 
 
 class Hit(NamedTuple):
@@ -260,7 +261,7 @@ def _lanes(
     look.first = min(max(look.first, place - visible + 1), place, max(len(known) - visible, 0))
     for tank in known[look.first : look.first + visible]:
         chosen = tank.place == look.chosen
-        told = lanes.rows(
+        told = look.drawn.rows(
             tank.lane, tank.name, tank.said, tank.scale, width, any_aim, per, on, chosen
         )
         for runs in told:

@@ -31,6 +31,7 @@ class Lane:
         self.bench = bench
         self.offset_s = 0.0
         self.version = 0  # changes whenever anything shown may have changed
+        self.marked = 0  # changes with findings and events
         self.t = NAN  # all before this is judged
         self.trace = Trace()
         self.raw = Raw()
@@ -76,6 +77,7 @@ class Lane:
     def finding(self, finding: Finding) -> None:
         """Take a finding that names this probe, or its tank; its times are the lane's."""
         self.version += 1
+        self.marked += 1
         kind = finding["finding"]
         if kind == "outlook":
             self.outlooks.append(finding)
@@ -111,6 +113,7 @@ class Lane:
         self.spans.append(span)
 
     def _meet(self, second: Second, judges: Judges) -> None:
+        self.marked += 1
         for dose in judges.ledger.doses:
             if dose.met_k == second.k:
                 when = dose.time_s + self.offset_s
