@@ -175,7 +175,7 @@ class Chain:
         watch, watched = self.watch, self.watched
         for second in seconds:
             found += judges.step(second)
-            watched.step(second, judges.trust)
+            watched.step(second, judges.trust, judges.settling)
             if watch is not None:
                 watch(second, judges)
         return found

@@ -8,7 +8,7 @@ order in which the files were read.
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Callable, Iterable, Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, field
 from datetime import datetime
 from functools import partial
@@ -16,11 +16,11 @@ from functools import partial
 from monitor.bench import Bench
 from monitor.blocks import Second
 from monitor.chain import Judges
-from monitor.findings import Finding, in_order, shifted
+from monitor.findings import Finding, shifted
 from monitor.follow import Follower
 from monitor.logbook import reader
 from monitor.logbook.reader import LogError, Run
-from monitor.tanks import Unwatched, Watched
+from monitor.tanks import Seen, Together, Watched
 
 Witness = Callable[[str, float, Second, Judges], None]  # probe, offset of its run, ...
 
@@ -52,7 +52,7 @@ class ProbeReplay:
         self._runs = list(runs)
         self._given = given
         self._witness = witness
-        self._past: list[tuple[str, Watched, float]] = []
+        self._past: list[tuple[Watched, float]] = []
         self.follower: Follower
         self.offset = 0.0
         self._chunks: Iterator[bytes | None]
@@ -60,7 +60,7 @@ class ProbeReplay:
 
     def _next_run(self) -> None:
         if hasattr(self, "follower"):
-            self._past.append((self.probe, self.follower.chain.watched, self.offset))
+            self._past.append((self.follower.chain.watched, self.offset))
         run = self._runs.pop(0)
         self.offset = (run.started - self.zero).total_seconds()
         watch = None
@@ -81,9 +81,10 @@ class ProbeReplay:
         return self.follower.chain.closed_t + self.offset
 
     @property
-    def watched(self) -> list[tuple[str, Watched, float]]:
-        """For the fold over a tank's probes: the spans of this run and of those before."""
-        return [*self._past, (self.probe, self.follower.chain.watched, self.offset)]
+    def seen(self) -> Seen:
+        """For the fold over all probes: this run's and those before."""
+        runs = [*self._past, (self.follower.chain.watched, self.offset)]
+        return Seen(self.probe, self.tank, self.closed_t, runs, self.done)
 
     def advance(self) -> list[Finding]:
         """Judge the next chunk. Raises LogError, CalibrationError."""
@@ -119,31 +120,12 @@ def replay(probes: Sequence[ProbeReplay]) -> Iterator[list[Finding]]:
 
     Raises LogError, CalibrationError.
     """
-    tanks: dict[str, Unwatched] = {}
-    waiting: list[Finding] = []
+    together = Together()
     while running := [probe for probe in probes if not probe.done]:
-        waiting += min(running, key=lambda probe: probe.closed_t).advance()
-        waiting += _of_tanks(probes, tanks)
-        sure_t = min((probe.closed_t for probe in probes if not probe.done), default=float("inf"))
-        waiting = in_order(waiting)
-        ready = [finding for finding in waiting if finding["t"] <= sure_t]
-        waiting = waiting[len(ready) :]
+        together.take(min(running, key=lambda probe: probe.closed_t).advance())
+        ready, _ = together.advance([probe.seen for probe in probes])
         if ready:
             yield ready
-
-
-def _of_tanks(probes: Iterable[ProbeReplay], tanks: dict[str, Unwatched]) -> list[Finding]:
-    together: dict[str, list[ProbeReplay]] = {}
-    for probe in probes:
-        together.setdefault(probe.tank, []).append(probe)
-    found: list[Finding] = []
-    for tank, its in together.items():
-        upto_t = min(probe.closed_t for probe in its)
-        fold = tanks.setdefault(tank, Unwatched(tank))
-        found += fold.advance(upto_t, [each for probe in its for each in probe.watched])
-        for probe in its:
-            probe.follower.chain.watched.forget(upto_t - probe.offset - 1300.0)
-    return found
 
 
 def open_logs(

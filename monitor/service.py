@@ -10,7 +10,7 @@ import asyncio
 import fcntl
 import os
 import secrets
-from collections.abc import Callable, Iterable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from datetime import datetime
 from pathlib import Path
 from typing import IO, Any
@@ -33,7 +33,7 @@ from monitor.orders import Order, OrderError, parse
 from monitor.places import private_folder, socket_path
 from monitor.recorder import Head, Recorder
 from monitor.supervisor import notify, watchdog_s
-from monitor.tanks import UNWATCHED_S, Unwatched
+from monitor.tanks import Seen, Together
 
 FLUSH_S = 0.03
 SYNC_S = 1.5
@@ -72,7 +72,7 @@ class Service:
         self._say = say
         self._run = secrets.token_hex(8)
         self._ports: dict[str, asyncio.Task[None]] = {}
-        self._tanks: dict[str, Unwatched] = {}
+        self._together = Together()
         self._files: dict[str, IO[str]] = {}
         self._lock: int | None = None
         self.alarms: list[AlarmLine] = []
@@ -209,29 +209,28 @@ class Service:
         self._say(f"{probe}: {why}")
         self.recorders[probe].link(False)
 
-    def _tell(self, probe: str, found: Iterable[Finding]) -> None:
+    def _tell(self, probe: str, found: Sequence[Finding]) -> None:
+        self._together.take(found)
         for finding in found:
             self._files[probe].write(line(finding) + "\n")
             for hook in self.hooks:
                 hook(finding)
 
-    def _tell_of_tanks(self) -> None:
-        """What takes all the probes of a tank, up to the second that all their logs have closed."""
-        for tank in self.bench.tank:
-            probes = [name for name, each in self.bench.probe.items() if each.tank == tank]
-            chains = {name: self.recorders[name].follower.chain for name in probes}
-            if not chains:
-                continue
-            upto_t = min(chain.closed_t for chain in chains.values())
-            fold = self._tanks.setdefault(tank, Unwatched(tank))
-            watched = [(name, chain.watched, 0.0) for name, chain in chains.items()]
-            for finding in fold.advance(upto_t, watched):
-                for probe in probes:
-                    self._files[probe].write(line(finding) + "\n")
-                for hook in self.hooks:
-                    hook(finding)
-            for chain in chains.values():
-                chain.watched.forget(upto_t - 2 * UNWATCHED_S)
+    def _tell_of_all(self) -> None:
+        """What takes all the probes, up to the second that all their logs have closed."""
+        seen = []
+        for name, recorder in self.recorders.items():
+            chain = recorder.follower.chain
+            tank = self.bench.probe[name].tank
+            seen.append(Seen(name, tank, chain.closed_t, [(chain.watched, 0.0)]))
+        if not seen:
+            return
+        for finding in self._together.advance(seen)[1]:
+            for each in seen:
+                if each.tank == finding["tank"]:
+                    self._files[each.probe].write(line(finding) + "\n")
+            for hook in self.hooks:
+                hook(finding)
 
     async def _flushes(self) -> None:
         while True:
@@ -257,7 +256,7 @@ class Service:
                     recorder.next_part()
             for recorder in self.recorders.values():
                 recorder.tick()
-            self._tell_of_tanks()
+            self._tell_of_all()
             for alarm in self.alarms:
                 alarm.tick()
             for file in self._files.values():

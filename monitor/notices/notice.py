@@ -18,8 +18,10 @@ class Open:
         self.tank = tank
         self.last: list[Finding] = [dict(each) for each in (carried or {}).get("open", ())]
 
-    def say(self, t: float, what: str, from_t: float, value: float, text: str) -> list[Finding]:
-        """Say a notice that lasts, unless the same is in force."""
+    def say(
+        self, t: float, what: str, from_t: float, value: float, text: str, **more: float
+    ) -> list[Finding]:
+        """Say a notice that lasts, unless the same is in force; `more`: further fields."""
         if any(
             each["what"] == what and abs(each["from_t"] - from_t) < NEAR_S for each in self.last
         ):
@@ -34,6 +36,7 @@ class Open:
             "what": what,
             "value": value,
             "text": text,
+            **more,
         }
         self.last.append(said)
         return [dict(said)]

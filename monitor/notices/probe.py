@@ -138,4 +138,12 @@ class OtherProbe:
             f"after the gap the period is {percent:+.1f} % off what it was: another probe?"
             " answer, or read a check standard"
         )
-        return self._open.say(second.t, "other-probe", before_t, percent, text)
+        return self._open.say(
+            second.t,
+            "other-probe",
+            before_t,
+            percent,
+            text,
+            before_us=math.exp(before[1]),
+            after_us=math.exp(level),
+        )
