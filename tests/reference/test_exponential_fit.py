@@ -11,7 +11,6 @@ from monitor.settling.fit import LeastSquares
 from tests.reference.tables import checks, figures, rows
 from tests.unit.settling_tank import BAND_PCT, dose, exponential, judge, rests, run, seconds
 
-
 WIDE = 1e9  # variance of b1 before any reading: no prior to speak of
 
 
