@@ -10,7 +10,7 @@ doses do not make it smaller.
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 
 from monitor.dosing.balance import Known
@@ -31,6 +31,9 @@ class Answer:
     before_pct: float
     after_pct: float
     u_pct: float
+
+
+Estimate = Callable[[Sequence[Answer]], Known]
 
 
 @dataclass(frozen=True)
@@ -87,9 +90,7 @@ def _usable(answer: Answer) -> bool:
 
 def _step(answer: Answer, extra_ml: float = 0.0) -> float:
     """Step by the mass balance, had the tank held so much more."""
-    dose = answer.dose
-    if extra_ml:
-        dose = replace(dose, tank_ml=dose.tank_ml + extra_ml)
+    dose = replace(answer.dose, tank_ml=answer.dose.tank_ml + extra_ml)
     return dose.landing(answer.before_pct, 0.0)[0] - answer.before_pct
 
 
@@ -125,28 +126,25 @@ def _extra_ml(answers: Sequence[Answer]) -> Known:
     return Known(extra, u)
 
 
-def _shifts(answers: Sequence[Answer], estimate: object, tank: bool) -> list[float]:
+def _shifts(answers: Sequence[Answer], estimate: Estimate, tank: bool) -> list[float]:
     """How far the estimate moves by one standard uncertainty of what the doses share."""
-    assert callable(estimate)
     at = estimate(answers).value
-    moved = []
-    for liquid in {a.dose.liquid for a in answers}:
-        moved.append(
-            [
-                replace(a, dose=replace(a.dose, liquid_pct=a.dose.liquid_pct + a.dose.liquid_u_pct))
-                if a.dose.liquid == liquid
-                else a
-                for a in answers
-            ]
-        )
+    moved = [
+        [_other(a, liquid_pct=a.dose.liquid_pct + _own_u(a, liquid)) for a in answers]
+        for liquid in sorted({a.dose.liquid for a in answers})
+    ]
     if tank:
-        moved.append(
-            [
-                replace(a, dose=replace(a.dose, tank_ml=a.dose.tank_ml + a.dose.tank_u_ml))
-                for a in answers
-            ]
-        )
+        moved.append([_other(a, tank_ml=a.dose.tank_ml + a.dose.tank_u_ml) for a in answers])
     return [estimate(each).value - at for each in moved]
+
+
+def _own_u(answer: Answer, liquid: str) -> float:
+    return answer.dose.liquid_u_pct if answer.dose.liquid == liquid else 0.0
+
+
+def _other(answer: Answer, **figures: float) -> Answer:
+    """The same answer to a dose with other figures."""
+    return replace(answer, dose=replace(answer.dose, **figures))  # type: ignore[arg-type]
 
 
 def _likely(answers: Sequence[Answer], extra_ml: float, response: Known) -> str:

@@ -21,6 +21,7 @@ EXACT = 1e-6  # of the volume: scatter below it is none
 OPENING_S = 0.1  # of flow pass or are missing at opening and closing, where no run tells
 SHORT_S = 1.0
 OUTLIER_P = 0.01
+AIR = 0.1  # of the first run missing, against the line of the others: air before it
 
 
 class FlowError(ValueError):
@@ -161,18 +162,14 @@ def _remarks(runs: Runs) -> tuple[str, ...]:
         said.append(f"the line does not fit (p = {lack:.2g}): the flow changes with open time")
     if len(runs) < 3:
         said.append("two runs draw a line through anything: the doubt is a guess; time more runs")
-    for i in range(len(runs)):
-        rest = [run for j, run in enumerate(runs) if j != i]
-        away = _deleted_t(runs[i], rest)
-        if away is None:
-            continue
-        t, dof, excess = away
-        if t > t_quantile(1.0 - OUTLIER_P / (2.0 * len(runs)), dof):
-            where = f"run {i + 1} ({runs[i][0]:g} s, {runs[i][1]:g} mL)"
-            if i == 0 and excess < 0:
-                said.append(f"{where} gave {-excess:.2g} mL too little: air in the line before it?")
-            else:
-                said.append(f"{where} is {excess:+.2g} mL off the others' line: time it again")
+        return tuple(said)
+    for i, run in enumerate(runs):
+        excess, odd = _against_others(run, [*runs[:i], *runs[i + 1 :]], len(runs))
+        where = f"run {i + 1} ({run[0]:g} s, {run[1]:g} mL)"
+        if i == 0 and excess < -AIR * run[1]:
+            said.append(f"{where} gave {-excess:.2g} mL too little: air in the line before it?")
+        elif odd:
+            said.append(f"{where} is {excess:+.2g} mL off the others' line: time it again")
     return tuple(said)
 
 
@@ -183,15 +180,18 @@ def _short(runs: Runs) -> tuple[str, ...]:
     return (f"{len(short)} runs shorter than {SHORT_S:g} s: opening and closing rule them",)
 
 
-def _deleted_t(run: tuple[float, float], rest: Runs) -> tuple[float, float, float] | None:
-    """|residual| of a run from the others' line in their standard deviations, dof, residual."""
-    dof = len(rest) - 2
-    if dof < 1 or len({t for t, _ in rest}) < 2:
-        return None
-    slope, offset, residuals = _line(rest)
-    sd = math.sqrt(sum(r * r for r in residuals) / dof)
-    mean_t = sum(t for t, _ in rest) / len(rest)
-    sxx = sum((t - mean_t) ** 2 for t, _ in rest)
-    spread = sd * math.sqrt(1.0 + 1.0 / len(rest) + (run[0] - mean_t) ** 2 / sxx)
+def _against_others(run: tuple[float, float], others: Runs, n: int) -> tuple[float, bool]:
+    """mL by which a run is off the others' line, and whether chance hardly does that to n runs."""
+    if len({t for t, _ in others}) < 2:
+        return 0.0, False
+    slope, offset, residuals = _line(others)
     excess = run[1] - slope * run[0] - offset
-    return abs(excess) / max(spread, 1e-3 * max(run[1], 1e-9)), dof, excess
+    dof = len(others) - 2
+    if dof < 1:
+        return excess, False
+    sd = math.sqrt(sum(r * r for r in residuals) / dof)
+    mean_t = sum(t for t, _ in others) / len(others)
+    sxx = sum((t - mean_t) ** 2 for t, _ in others)
+    spread = sd * math.sqrt(1.0 + 1.0 / len(others) + (run[0] - mean_t) ** 2 / sxx)
+    least = READ_U * max(ml for _, ml in others)
+    return excess, abs(excess) > t_quantile(1.0 - OUTLIER_P / (2 * n), dof) * max(spread, least)

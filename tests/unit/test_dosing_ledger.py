@@ -13,7 +13,13 @@ from monitor.blocks import Event, Second
 from monitor.dosing.ledger import Dose, Ledger, Struck, Water
 from monitor.logbook.codec import event_line
 
-SALINE: dict[str, Any] = {"tank": "t1", "liquid": "saline", "volume_ml": 50.0, "volume_u_ml": 0.6, "open_s": 10.0}
+SALINE: dict[str, Any] = {
+    "tank": "t1",
+    "liquid": "saline",
+    "volume_ml": 50.0,
+    "volume_u_ml": 0.6,
+    "open_s": 10.0,
+}
 
 
 def bench(mode: str = "grows", volume_ml: float | None = 1200.0) -> Bench:
