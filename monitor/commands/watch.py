@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+import signal
 import subprocess
 import sys
 import tempfile
@@ -10,7 +11,7 @@ import time
 from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated, Any
+from typing import IO, TYPE_CHECKING, Annotated, Any
 
 import typer
 
@@ -149,7 +150,7 @@ def recording(settings: Bench, bench: Path, folder: Path, socket: Path) -> Itera
 def child(command_line: Sequence[str], socket: Path) -> Iterator[subprocess.Popen[bytes]]:
     """A service in a process of its own, ended with the block; its standard input is a pipe.
 
-    Raises Refusal or Wrong if it ends before it answers at this socket.
+    Raises Refusal or Wrong if it ends before it answers at this socket, or failed later.
     """
     with tempfile.TemporaryFile() as said:
         process = subprocess.Popen(
@@ -160,21 +161,24 @@ def child(command_line: Sequence[str], socket: Path) -> Iterator[subprocess.Pope
             start_new_session=True,  # the terminal's Ctrl-C is for the screen
         )
         try:
-            _await(process, socket)
+            if not _answers(process, socket):
+                _end(process)
+                raise _failure(process.returncode, said)
             yield process
         finally:
             _end(process)
-            if process.returncode not in (0, -15):
-                said.seek(0)
-                _tell(process.returncode, said.read()[-4000:].decode(errors="replace"))
+        if process.returncode not in (0, -signal.SIGTERM):
+            raise _failure(process.returncode, said)
 
 
-def _await(process: subprocess.Popen[bytes], socket: Path) -> None:
+def _answers(process: subprocess.Popen[bytes], socket: Path) -> bool:
+    """Wait until the service answers; False if it ends, or does not in good time."""
     until = time.monotonic() + START_S
     while process.poll() is None and time.monotonic() < until:
-        if socket.exists() and status(socket) is not None:
-            return
+        if status(socket) is not None:
+            return True
         time.sleep(0.03)
+    return False
 
 
 def _end(process: subprocess.Popen[bytes]) -> None:
@@ -188,15 +192,15 @@ def _end(process: subprocess.Popen[bytes]) -> None:
         process.wait()
 
 
-def _tell(code: int, said: str) -> None:
-    """Raise what a service that failed said last."""
+def _failure(code: int, said: IO[bytes]) -> Exception:
+    """What a service that failed said last."""
     from monitor.printable import printable
 
-    lines = [line for line in said.splitlines() if line.strip()]
-    last = printable(lines[-1].removeprefix("stillbrine: "), 400) if lines else f"exit code {code}"
-    if code == 2:
-        raise Wrong(last)
-    raise Refusal(f"the service ended: {last}")
+    said.seek(0)
+    lines = [line for line in said.read().decode(errors="replace").splitlines() if line.strip()]
+    last = lines[-1].removeprefix("stillbrine: ") if lines else f"exit code {code}"
+    shown = printable(last, 400)
+    return Wrong(shown) if code == 2 else Refusal(f"the service ended: {shown}")
 
 
 def status(socket: Path) -> dict[str, Any] | None:
