@@ -64,7 +64,7 @@ def fields(flow: Flow) -> dict[str, Any]:
 
 def opening(flow: Flow, volume_ml: float) -> dict[str, Any]:
     """How long to open for a volume, and the doubt of that."""
-    open_s, u = flow.open_s(volume_ml)
+    open_s, u = flow.open_s(volume_ml), flow.u_open_s(volume_ml)
     known = math.isfinite(open_s)
     return {
         "volume_ml": volume_ml,
@@ -88,7 +88,7 @@ def in_words(name: str, flow: Flow, volumes: list[float]) -> str:
         + f"; doubts at 95 %, k = {k:.2f}",
     ]
     for ml in volumes:
-        open_s, u = flow.open_s(ml)
+        open_s, u = flow.open_s(ml), flow.u_open_s(ml)
         if math.isfinite(open_s):
             lines.append(f"  {ml:g} mL: open {open_s:.2f} +- {k * u:.2g} s")
         else:

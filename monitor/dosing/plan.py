@@ -150,7 +150,7 @@ def _chosen(bench: Bench, ways: Mapping[str, float]) -> str:
 def _measurable(valve: _Valve | None, volume_ml: float) -> bool:
     if valve is None:
         return volume_ml >= LEAST_ML
-    return LEAST_S <= valve.flow.open_s(volume_ml)[0] < math.inf
+    return LEAST_S <= valve.flow.open_s(volume_ml) < math.inf
 
 
 def _fits(tank: str, settings: Tank, tank_ml: float, liquid: str, volume_ml: float) -> None:
@@ -180,7 +180,7 @@ def _planned(
     ways = stops(before.value, lands.value, steps)
     cut = volumes(settings.mode, ways, tank_ml.value, pure.value, volume_ml)
     valve = _valve(bench, liquid)
-    opens = [valve.flow.open_s(ml)[0] for ml in cut] if valve else []
+    opens = [valve.flow.open_s(ml) for ml in cut] if valve else []
     if not all(math.isfinite(each) for each in opens):
         valve, opens = None, []
     volume_u, dof = DOSE_U * volume_ml, math.inf

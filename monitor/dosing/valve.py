@@ -68,15 +68,16 @@ class Flow:
         volume, u = self.volume(open_s)
         return volume, u * max(self.k, 2.0) / 2.0
 
-    def open_s(self, volume_ml: float) -> tuple[float, float]:
-        """Seconds to open for this volume, and their standard uncertainty.
-
-        Infinite where the valve gives nothing, or cannot give so little.
-        """
+    def open_s(self, volume_ml: float) -> float:
+        """Seconds to open for this volume. Infinite where the valve cannot give it."""
         if self.ml_per_s <= 0 or volume_ml <= self.offset_ml:
-            return math.inf, math.inf
-        open_s = (volume_ml - self.offset_ml) / self.ml_per_s
-        return open_s, self.volume(open_s)[1] / self.ml_per_s
+            return math.inf
+        return (volume_ml - self.offset_ml) / self.ml_per_s
+
+    def u_open_s(self, volume_ml: float) -> float:
+        """Standard uncertainty of `open_s`."""
+        open_s = self.open_s(volume_ml)
+        return self.volume(open_s)[1] / self.ml_per_s if math.isfinite(open_s) else math.inf
 
 
 def flow(runs: Runs) -> Flow:

@@ -109,7 +109,7 @@ def test_a_small_valve() -> None:
     checks("common practice, no source: about 5 mL/s, 20 mL take about 4 s")
     found = flow([(1.0, 5.1), (2.0, 10.0), (5.0, 24.8)])
     assert found.ml_per_s == pytest.approx(5.0, rel=0.05)
-    assert found.open_s(20.0)[0] == pytest.approx(4.0, rel=0.05)
+    assert found.open_s(20.0) == pytest.approx(4.0, rel=0.05)
 
 
 def test_the_straight_line_of_runs() -> None:
