@@ -2,11 +2,13 @@
 
 Promise: a line that `append` took is with the operating system, so it survives a kill -9 of the
 program; after the next `sync` it is on the disk and survives a power cut. After a write that
-failed or fell short, the file is cut back to its last whole line before anything else is written.
+failed or fell short, the file is cut back to its last whole line before anything else is written;
+the whole lines that did get into the file stay there.
 """
 
 from __future__ import annotations
 
+import errno
 import gzip
 import os
 import shutil
@@ -16,8 +18,21 @@ from pathlib import Path
 from monitor.logbook.codec import Header, file_name, parse_name
 
 
+ROOM = 262_144  # bytes that must be free again before a recording goes on: the gap, a head, rows
+
+
 class LogWriteError(OSError):
-    """Nothing can be written now; `str()` says why in one line."""
+    """Nothing more can be written now; `str()` says why in one line.
+
+    written : bytes of whole lines that did get into the file
+    """
+
+    def __init__(self, number: int | None, why: str, written: int = 0) -> None:
+        super().__init__(number, why)
+        self.written = written
+
+    def __str__(self) -> str:
+        return str(self.strerror)
 
 
 class LogWriter:
@@ -29,6 +44,7 @@ class LogWriter:
         self.header = Header(probe, started, run, 1)
         self._whole = 0  # bytes up to the last line that was written whole
         self._spoilt = False  # a write failed or fell short after them
+        self._left: list[int] = []  # files of earlier parts, to be synced and closed
         self._fd = self._create()
         self.path = self.folder / file_name(self.header)
 
@@ -37,7 +53,7 @@ class LogWriter:
         return self.header.text()
 
     def append(self, data: bytes) -> None:
-        """Append whole lines. Raises LogWriteError; then nothing of them counts as written."""
+        """Append whole lines. Raises LogWriteError, which knows how many of them were written."""
         if self._spoilt:
             self._cut_back()
         view = memoryview(data)
@@ -46,7 +62,10 @@ class LogWriter:
                 self._spoilt = True
                 view = view[os.write(self._fd, view) :]
         except OSError as wrong:
-            raise LogWriteError(wrong.errno, f"{self.path.name}: {wrong.strerror}") from None
+            written = data.rfind(b"\n", 0, len(data) - len(view)) + 1
+            self._whole += written
+            why = f"{self.path.name}: {wrong.strerror}"
+            raise LogWriteError(wrong.errno, why, written) from None
         self._spoilt = False
         self._whole += len(data)
 
@@ -56,7 +75,16 @@ class LogWriter:
         Raises LogWriteError while it does not.
         """
         self._cut_back()
-        self.append(b"#\n")
+        room = os.fstatvfs(self._fd)
+        if room.f_bavail * room.f_frsize < ROOM:
+            raise LogWriteError(errno.ENOSPC, f"{self.path.name}: {os.strerror(errno.ENOSPC)}")
+        if not self.empty:
+            self.append(b"#\n")
+
+    @property
+    def empty(self) -> bool:
+        """Whether not even the head of this part is written."""
+        return self._whole == 0
 
     def _cut_back(self) -> None:
         try:
@@ -67,13 +95,17 @@ class LogWriter:
 
     def sync(self) -> None:
         """Bring what was written to the disk; may take seconds, call it from a thread."""
-        try:
-            os.fsync(self._fd)
-        except OSError:
-            pass  # a disk that fails shows at the next append
+        left = [self._left.pop() for _ in range(len(self._left))]
+        for fd in [*left, self._fd]:
+            try:
+                os.fsync(fd)
+            except OSError:
+                pass  # a disk that fails shows at the next append
+        for fd in left:
+            os.close(fd)
 
     def next_part(self) -> None:
-        """Close this part and begin the next. Raises LogWriteError and keeps this one."""
+        """Begin the next part; `sync` closes this one. Raises LogWriteError and keeps this one."""
         before, header = self._fd, self.header
         self.header = Header(header.probe, header.started, header.run, header.part + 1)
         try:
@@ -88,16 +120,14 @@ class LogWriter:
                 pass  # the half line stays the last of that part, where a reader drops it
         self.path = self.folder / file_name(self.header)
         self._whole, self._spoilt = 0, False
-        try:
-            os.fsync(before)
-        except OSError:
-            pass  # a disk that fails shows at the next append
-        os.close(before)
+        self._left.append(before)
 
     def close(self) -> None:
-        """Sync and close."""
+        """Sync and close; a part without even a head is taken away."""
         self.sync()
         os.close(self._fd)
+        if self.empty:
+            self.path.unlink(missing_ok=True)
 
     def _create(self) -> int:
         path = self.folder / file_name(self.header)
