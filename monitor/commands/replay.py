@@ -37,7 +37,7 @@ def command(
     if not findings:
         from monitor.commands.watch import play
 
-        play(log, bench, speed)
+        play(log, bench, speed, probe, rate)
         return
     from monitor.calibration import CalibrationError
     from monitor.findings import line

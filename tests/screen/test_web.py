@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import asyncio
 import sys
 from collections.abc import AsyncIterator
 
@@ -38,6 +39,7 @@ async def served(unused_tcp_port: int) -> AsyncIterator[Served]:
     await web.TCPSite(runner, "127.0.0.1", unused_tcp_port).start()
     yield Served(door, said, unused_tcp_port)
     await runner.cleanup()
+    await asyncio.sleep(0.3)  # a visitor's process is let go of once its end is noticed
 
 
 @pytest.fixture
