@@ -7,6 +7,7 @@ from collections.abc import Iterable
 from typing import Any, NamedTuple
 
 from monitor.blocks import Event
+from monitor.dosing.history import Answer, in_words, lesson
 from monitor.findings import Finding
 from monitor.logbook.codec import utc_of
 from monitor.report.night import Lane, Night
@@ -147,6 +148,21 @@ def _doses(night: Night) -> Iterable[str]:
                 and abs(r["dose_t"] - event.time_s) < 0.05
             ]
             yield f"{what}: {_verdict(mine[0], event.time_s) if mine else 'no rest was called'}"
+        found = lesson(list(_answers(lane, rests)))
+        if found is not None:
+            yield f"{lane.tank}: {in_words(found)}"
+
+
+def _answers(lane: Lane, rests: Iterable[Finding]) -> Iterable[Answer]:
+    """The lane's doses that came to rest, with the step that each made."""
+    for rest in rests:
+        if rest["probe"] != lane.probe or rest.get("before_pct") is None:
+            continue
+        for t, dose in lane.doses.items():
+            if abs(t - rest["dose_t"]) < 0.05:
+                yield Answer(
+                    dose, rest["before_pct"], rest["salinity_pct"], rest["step_u95_pct"] / 2.0
+                )
 
 
 def _verdict(rest: Finding, dose_t: float) -> str:

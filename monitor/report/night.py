@@ -11,6 +11,7 @@ from typing import NamedTuple
 from monitor.bench import Bench
 from monitor.blocks import NAN, Event, Second
 from monitor.chain import Judges
+from monitor.dosing.ledger import Dose
 from monitor.findings import Finding
 from monitor.replay import open_logs, replay
 
@@ -40,6 +41,7 @@ class Lane:
     aim_pct: tuple[float, float] | None = None
     minutes: list[Minute] = field(default_factory=list)
     events: list[Event] = field(default_factory=list)
+    doses: dict[float, Dose] = field(default_factory=dict)  # by the night's time
     dropped: dict[str, int] = field(default_factory=dict)
     messages: list[str] = field(default_factory=list)
 
@@ -87,8 +89,16 @@ class _Minutes:
         self._u95 = judges.settling.u95_pct
         self._belief = "out" if judges.trust.out else judges.trust.belief
         for event in second.events:
+            if event.kind == "dose":
+                self._book(event.time_s, judges)
             if event.kind in TOLD:
                 self.lane.events.append(event._replace(time_s=event.time_s + self.offset))
+
+    def _book(self, time_s: float, judges: Judges) -> None:
+        """Keep the dose as it was reckoned with."""
+        for dose in judges.ledger.doses:
+            if dose.time_s == time_s:
+                self.lane.doses[time_s + self.offset] = dose
 
     def close(self) -> None:
         """The minute is over."""

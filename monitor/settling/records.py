@@ -88,6 +88,8 @@ class Records:
             "predicted_pct": landing,
             "predicted_u95_pct": K95 * u,
             "verdict": "agrees" if outcome.agrees else "disagrees",
+            "before_pct": still.level_pct,
+            "step_u95_pct": K95 * math.hypot(sd, u_step),
         }
         if not outcome.agrees:
             said["why"] = likely_reasons(outcome, self.liquids)

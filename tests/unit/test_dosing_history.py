@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import replace
+from datetime import UTC, datetime
 
 import numpy as np
 import pytest
@@ -11,6 +12,9 @@ import scipy.stats
 
 from monitor.dosing.history import Answer, _chi2_99, in_words, lesson
 from monitor.dosing.ledger import Dose
+from monitor.findings import Finding
+from monitor.report.digest import sections
+from monitor.report.night import Lane, Night
 
 READ_U = 5e-5
 
@@ -123,3 +127,28 @@ def test_too_few_or_unknown_doses_tell_nothing() -> None:
 @pytest.mark.parametrize("dof", [2, 5, 20])
 def test_quantile_of_chi_squared(dof: int) -> None:
     assert _chi2_99(dof) == pytest.approx(scipy.stats.chi2.ppf(0.99, dof), rel=0.01)
+
+
+def test_the_morning_report_says_it() -> None:
+    answers = night(1, [20.0, 300.0, 50.0, 400.0, 30.0, 60.0], really_ml=1500.0)
+    lane = Lane("p1", "t1", doses={a.dose.time_s: a.dose for a in answers})
+    rests: list[Finding] = [
+        {
+            "finding": "rest",
+            "probe": "p1",
+            "tank": "t1",
+            "t": a.dose.time_s + 60.0,
+            "to_t": None,
+            "dose_t": a.dose.time_s,
+            "salinity_pct": a.after_pct,
+            "before_pct": a.before_pct,
+            "step_u95_pct": 2 * a.u_pct,
+        }
+        for a in answers
+    ]
+    rests.append({"finding": "rest", "probe": "p1", "t": 9e3, "to_t": None, "dose_t": None})
+    told = sections(Night(datetime(2026, 3, 14, tzinfo=UTC), 0.0, 9e3, [lane], rests))
+    (doses,) = (section.lines for section in told if section.title == "Doses")
+    found = lesson(answers)
+    assert found is not None
+    assert doses == [f"t1: {in_words(found)}"]
