@@ -128,6 +128,7 @@ class Settling:
             or self.mixing is not None
             or self._onset_t is not None
             or salinity_pct != salinity_pct
+            or self.shown_pct != self.shown_pct
             or not trust.usable
             or trust.belief != self._belief
             or trust.out is not self._out
@@ -217,8 +218,8 @@ class Settling:
             return []
         bins = self.history.bins
         common = self.doubt.common(bins[-1], self._widen) if bins else 0.0
-        rested_t = self.at_rest["rested_t"] if self.at_rest is not None else t
-        lost = self._lost(t, min(max(dose.time_s, rested_t), t))
+        met_in_rest = self.at_rest is not None and dose.time_s >= self.at_rest["t"]
+        lost = self._lost(t, min(dose.time_s, t) if met_in_rest else t)
         self._begin(begin.dosed(dose, self.history, self.mixing, self.answered, common))
         return lost
 
