@@ -16,6 +16,8 @@ from typing import NamedTuple
 import numpy as np
 
 from monitor.blocks import Floats, Second
+from monitor.findings import Finding
+from monitor.trust.force import InForce
 
 SPAN_S, EVERY_S = 80.0, 5
 GROUP_S = 0.45  # of readings in one mean, at most
@@ -26,6 +28,7 @@ ALONG, EVEN, EVEN_HARD, LAST = 0.9, 0.55, 0.65, 0.7
 SLOW_HZ, AFTER_DOSE_HZ = 0.06, 0.046
 CLIP = 0.08
 GONE = 0.45
+DEAFENING = ("stuck", "short", "no-pulses", "loose-lead")
 LEAD_S, TAIL_S = 74.0, 18.0
 # variance of the means that the least hum makes: half a second takes a third off 0.97 Hz
 LEAST_VARIANCE = 0.8 * 0.5 * (0.65 * LEAST) ** 2
@@ -48,6 +51,7 @@ class Hum:
 
     def forget(self) -> None:
         """Begin anew."""
+        self.tone: Tone | None = None  # the one in force
         self._group = 0  # readings in a mean
         self._left = _NONE  # readings that make no whole group yet
         self._means = _NONE  # us
@@ -96,6 +100,28 @@ class Hum:
         means = np.add.reduce(table, axis=1) / group if group > 1 else table[:, 0]
         keep = int(SPAN_S / self._every_s) + 1
         self._means = np.concatenate((self._means, means))[-keep:]
+
+    def judge(self, t: float, after_dose: bool, force: InForce) -> list[Finding]:
+        """`hum` begun or ended, five seconds after it was asked last."""
+        if "hum" in force:
+            return self._ended(t, after_dose, force)
+        if not self.loud or force.any_of(*DEAFENING):
+            return []
+        self.tone = self.listen(after_dose)
+        if self.tone is None:
+            return []
+        quarters = ", ".join(f"{100.0 * size:.2f}" for size in self.tone.quarters)
+        text = f"{self.tone.hz:.3f} Hz, {100.0 * self.tone.amplitude:.2f} % of the period"
+        return [force.begin("hum", t, t - LEAD_S, f"{text}; each 20 s {quarters} %")]
+
+    def _ended(self, t: float, after_dose: bool, force: InForce) -> list[Finding]:
+        if self.tone is None:  # begun before what is heard: still there?
+            self.tone = self.listen(after_dose)
+            return [] if self.tone else [force.end("hum", t, t - SPAN_S)]
+        if not self.faded(self.tone):
+            return []
+        self.tone = None
+        return [force.end("hum", t, t - TAIL_S)]
 
     def listen(self, after_dose: bool) -> Tone | None:
         """The steady line in the last 80 s, if there is one loud enough."""

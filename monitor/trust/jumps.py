@@ -10,9 +10,14 @@ from __future__ import annotations
 import itertools
 import math
 from collections import deque
+from collections.abc import Sequence
 from typing import NamedTuple
 
-from monitor.trust.level import INNER, Judged
+from monitor.blocks import Second
+from monitor.findings import Finding
+from monitor.trust.force import InForce
+from monitor.trust.hum import Hum
+from monitor.trust.level import INNER, Judged, Level
 
 WINDOW_S = 60.0
 JOIN_S = 0.6  # jumps nearer than this on one side are one
@@ -20,6 +25,7 @@ WIDEST_S = 6.0  # longer is no jump but another level
 BIG_UP, BIG_DOWN = math.log(2.6), math.log(0.65)
 BIG_WIDEST_S = 2.5
 LEAST_BIG = 2
+LEAST_UPS, LEAST_UPS_DOSE, LEAST_UPS_MIXING = 2.0, 3.0, 4.0
 CLEAR = (4.0, 40.0, 120.0)  # mean intervals, at least s, at most s without a jump
 
 
@@ -43,6 +49,7 @@ class Jumps:
 
     def __init__(self) -> None:
         self.last: deque[Jump] = deque(maxlen=400)
+        self.end_t: float | None = None  # of the newest jump while a fault of them is in force
         self._open: list[float] | None = None  # from t, to t, height
         self._edges: deque[tuple[int, int, int]] = deque(maxlen=64)  # k, above and below inner
 
@@ -51,6 +58,58 @@ class Jumps:
         self.last.clear()
         self._open = None
         self._edges.clear()
+
+    def judge(
+        self, second: Second, judged: Sequence[Judged], level: Level, hum: Hum, force: InForce
+    ) -> list[Finding]:
+        """`bubbles` or `loose-lead` begun or ended in this second."""
+        t = second.t
+        for each in judged:
+            self.take(each, full_height(each, level))
+        found: list[Finding] = []
+        if force.any_of("bubbles", "loose-lead"):
+            found = self._ended(t, force)
+        recent = self.recent(t)
+        if judged and recent:
+            found += self._begun(t, recent, level, hum, force)
+        elif not recent and not force.said:
+            self.last.clear()
+        return found
+
+    def _begun(
+        self, t: float, recent: list[Jump], level: Level, hum: Hum, force: InForce
+    ) -> list[Finding]:
+        if "loose-lead" in force:
+            return []
+        if is_loose(recent):
+            said = [force.begin("loose-lead", t, recent[0].t, told(recent, t))]
+            if "bubbles" in force:
+                said.insert(0, force.end("bubbles", t, t, "they jump too far: a loose lead"))
+            return said
+        if "bubbles" in force:
+            return []
+        least = LEAST_UPS
+        if not level.locked or "hum" in force:
+            least = LEAST_UPS_MIXING
+        elif level.after_dose(t):
+            least = LEAST_UPS_DOSE
+        if not is_bubbling(recent, least) or not self.one_sided(int(t)) or hum.tonal():
+            return []
+        first = next(jump for jump in recent if jump.height > 0)
+        return [force.begin("bubbles", t, first.t, told(recent, t))]
+
+    def _ended(self, t: float, force: InForce) -> list[Finding]:
+        """No jump for several times their usual interval: they are over."""
+        if self.last:
+            self.end_t = self.last[-1].end_t
+        elif self.end_t is None:  # begun in the run before
+            self.end_t = t - 1.0
+        if t - self.end_t < clear_after_s(list(self.last)[-20:]):
+            return []
+        end_t, self.end_t = self.end_t, None
+        self.last.clear()
+        names = [name for name in ("bubbles", "loose-lead") if name in force]
+        return [force.end(name, t, end_t) for name in names]
 
     def take(self, judged: Judged, least: float) -> None:
         """Find the jumps in a second's readings; `least` is the height of a full one."""
@@ -100,6 +159,13 @@ class Jumps:
         edges = [edge for edge in self._edges if edge[0] > k - WINDOW_S]
         up, down = sum(edge[1] for edge in edges), sum(edge[2] for edge in edges)
         return down <= 1 + 0.12 * up
+
+
+def full_height(judged: Judged, level: Level) -> float:
+    """From what height a jump counts in full."""
+    if level.after_dose(judged.k):
+        return max(1.6 * judged.gate, 0.03)
+    return 1.3 * judged.gate
 
 
 def is_loose(jumps: list[Jump]) -> bool:

@@ -29,6 +29,7 @@ LEARN = 0.004  # a reading, of the noise
 UNKNOWN_NOISE = 0.002
 LOST_S, LOST_NOISY_S = 8, 20  # without a reading in the gate; while jumps go on
 LINE_N = 12
+BACK_S = 30.0
 SETTLE_S = 8.0  # after a dose has run in before the level may lock
 MIX_S, MIX_LATE_S = 7, 3
 MIX_GATE, MIX_SDS, MIX_LEAK = 0.03, 6.0, 0.93
@@ -92,6 +93,11 @@ class Level:
                 self.dosed_until_t = max(self.dosed_until_t, t)
                 self.step_ln = 0.1
             self.unlock()
+
+    def stirred(self, t: float) -> None:
+        """The probe was put back: for half a minute the water counts as mixing."""
+        self.dosed_until_t = max(self.dosed_until_t, t + BACK_S - SETTLE_S)
+        self.unlock()
 
     def unlock(self) -> None:
         """Believe no level until the readings stand still again."""

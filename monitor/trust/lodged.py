@@ -12,6 +12,8 @@ import math
 from collections.abc import Sequence
 from typing import NamedTuple
 
+from monitor.findings import Finding
+from monitor.trust.force import InForce
 from monitor.trust.level import Level
 
 BEFORE, ACROSS, AFTER = 6, 4, 16
@@ -35,6 +37,30 @@ class Step(NamedTuple):
     k: int
     height: float
     moved: float  # over the seconds after it
+
+
+class Lodged:
+    """Watches the medians for a bubble that lodges, and comes off."""
+
+    def __init__(self, height: float | None) -> None:
+        self.height = height  # of the one in force
+
+    def judge(self, t: float, level: Level, force: InForce) -> list[Finding]:
+        """`lodged-bubble` begun or ended in this second, which has pulses."""
+        if "lodged-bubble" in force:
+            k = fallen(level, t, self.height or LEAST)
+            return [] if k is None else [force.end("lodged-bubble", t, float(k))]
+        if force.any_of("short", "loose-lead"):
+            return []
+        step = step_up(level, t)
+        if step is None:
+            return []
+        self.height = step.height
+        text = (
+            f"period {100.0 * math.expm1(step.height):+.1f} % within 3 s, then"
+            f" {100.0 * step.moved:+.2f} % in 16 s"
+        )
+        return [force.begin("lodged-bubble", t, float(step.k), text)]
 
 
 class Line(NamedTuple):

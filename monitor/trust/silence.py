@@ -7,10 +7,12 @@ from typing import Any
 
 from monitor import bench
 from monitor.blocks import Second
+from monitor.findings import Finding
+from monitor.trust.force import InForce
 from monitor.trust.intake import floor_us
 
 SILENT_S, SILENT_INTERVALS = 4.0, 10.0
-SHORT_S, SHORT_N = 4.0, 6
+SHORT_S, SHORT_N = 4.0, 6  # a loose lead's dip lasts 4 s less than once in 10,000
 SHORT_SHARE = 0.12  # of the way from the floor to the period at the saltiest standard
 
 
@@ -25,7 +27,7 @@ class Silence:
 
     def carry(self) -> dict[str, Any]:
         """The time of the last pulse."""
-        last = self._carried_t if self.newest is None else _last_pulse(self.newest)
+        last = self._carried_t if self.newest is None else last_pulse_t(self.newest)
         return {"last_pulse_t": last}
 
     def link(self, up: bool, t: float) -> None:
@@ -37,27 +39,30 @@ class Silence:
         """Count silence anew."""
         self._since = t
 
-    def step(self, second: Second, rate_hz: float) -> float | None:
-        """Since when there has been no pulse, once that is too long; None while all is well."""
+    def judge(self, second: Second, rate_hz: float, force: InForce) -> list[Finding]:
+        """`no-pulses` begun or ended in this second."""
         if second.n_rows > second.zeros:
             self.newest = second
-            return None
-        if not self.linked:
-            return None
-        since = float(second.k) if self._since is None else self._since
-        if self.newest is not None:
-            since = max(since if self._since is not None else -1e12, _last_pulse(self.newest))
-        self._since = since
+            self.linked = True
+            if "no-pulses" in force:
+                return [force.end("no-pulses", second.t, first_pulse_t(second))]
+            return []
+        if not self.linked or "no-pulses" in force:
+            return []
+        if self._since is None:
+            self._since = float(second.k)
+            if self.newest is not None:
+                self._since = last_pulse_t(self.newest)
+        elif self.newest is not None:
+            self._since = max(self._since, last_pulse_t(self.newest))
         wait_s = max(SILENT_S, SILENT_INTERVALS / rate_hz) if rate_hz > 0 else SILENT_S
         if second.zeros:
             wait_s = SILENT_S
-        return since if second.t - since >= wait_s else None
-
-
-def _last_pulse(second: Second) -> float:
-    if not second.zeros:
-        return float(second.time_s[-1])
-    return float(second.time_s[second.period_us > 0][-1])
+        if second.t - self._since < wait_s:
+            return []
+        what = "only zeros" if second.zeros else "not a line"
+        text = f"{what} for {second.t - self._since:.0f} s"
+        return [force.begin("no-pulses", second.t, self._since, text)]
 
 
 class Short:
@@ -70,22 +75,31 @@ class Short:
         self._from_t: float | None = None
         self._n = 0
 
-    def step(self, second: Second) -> tuple[float | None, float | None]:
-        """Since when the period lies at the floor (None: it does not), and when it left it."""
-        if not second.low_us < self.below_us:
-            ended = None
-            if self._from_t is not None and second.n_rows > second.zeros:
-                ended = float(second.time_s[second.period_us > 0][0])
-                self._from_t, self._n = None, 0
-            return None, ended
-        ended = None
+    def judge(self, second: Second, force: InForce) -> list[Finding]:
+        """`short` begun or ended in this second."""
+        if not second.low_us < self.below_us and self._from_t is None and "short" not in force:
+            return []
+        found: list[Finding] = []
         for t, period in zip(second.time_s.tolist(), second.period_us.tolist()):
             if 0 < period < self.below_us:
                 self._from_t = t if self._from_t is None else self._from_t
                 self._n += 1
-            elif period > 0 and self._from_t is not None:
-                ended, self._from_t, self._n = t, None, 0
+            elif period > 0:
+                self._from_t, self._n = None, 0
+                if "short" in force:
+                    found.append(force.end("short", second.t, t))
         since = self._from_t
-        if since is not None and self._n >= SHORT_N and second.t - since >= SHORT_S:
-            return since, ended
-        return None, ended
+        if since is None or self._n < SHORT_N or second.t - since < SHORT_S or "short" in force:
+            return found
+        text = f"{self._n} periods below {self.below_us:.4g} us, the last {second.low_us:.4g} us"
+        return [*found, force.begin("short", second.t, since, f"{text}: the circuit's own")]
+
+
+def first_pulse_t(second: Second) -> float:
+    """Time of the first pulse in a second that has one."""
+    return float(second.time_s[second.period_us > 0][0])
+
+
+def last_pulse_t(second: Second) -> float:
+    """Time of the last pulse in a second that has one."""
+    return float(second.time_s[second.period_us > 0][-1])
