@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import replace
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 
@@ -19,6 +20,8 @@ TANKS = {  # label, salinity, volume, mixing
     "t2": ("south tank (invented)", 0.0708, 2500.0, Mixing("loop", 12.0, 4.0, 0.08, beat=2.5)),
     "t3": ("seedling tank (invented)", 0.0600, 1200.0, Mixing("dead-zone", 8.0, 3.0, 0.1)),
 }
+AIMS_PCT = {"t1": (0.075, 0.095), "t2": (0.062, 0.078), "t3": (0.055, 0.070)}
+OTHER = {"saline": "deionised", "deionised": "saline"}
 PROBES = {  # tank, circuit, white noise, tick
     "p1": ("t1", Circuit(14.0, 880.0, 0.985), 0.0011, 0.5),
     "p2": ("t2", Circuit(9.0, 620.0, 0.975), 0.0020, 1.0),
@@ -38,8 +41,18 @@ LAP_S = 900.0
 
 
 def acts(lap: int = 0) -> list[Act]:
-    """What happens in the demo's next quarter of an hour; the same in every lap."""
-    return [replace(act, at_s=act.at_s + lap * LAP_S) for act in ACTS]
+    """What happens in the demo's next quarter of an hour.
+
+    Every other lap takes back what the one before has dosed, so that no tank drifts away.
+    """
+    return [replace(act, at_s=act.at_s + lap * LAP_S, figures=_figures(act, lap)) for act in ACTS]
+
+
+def _figures(act: Act, lap: int) -> dict[str, Any]:
+    liquid = act.figures.get("liquid")
+    if liquid is None or lap % 2 == 0:
+        return dict(act.figures)
+    return {**act.figures, "liquid": OTHER[liquid]}
 
 
 def build(clock: Clock, folder: Path | None, seed: int = 1) -> tuple[VirtualBench, str]:
@@ -57,4 +70,5 @@ def build(clock: Clock, folder: Path | None, seed: int = 1) -> tuple[VirtualBenc
         probe = Probe(bench.tanks[tank], climate, rng, circuit, white, 0.0002, tick_us, 5.0)
         text += bench_text.probe_text(name, tank, probe, rng, bench.hang(name, probe, folder))
         text += bench_text.tank_text(tank, volume, "grows", BAND_PCT, label)
+        text += "aim_pct = [{}, {}]\n".format(*AIMS_PCT[tank])
     return bench, text + bench_text.liquids_text(bench_text.LIQUIDS)
