@@ -117,10 +117,11 @@ def show(source: Source, note: str = "", plain: bool = False, light: bool | None
 
 
 def _can_show() -> bool:
-    """Whether standard output is a terminal with a screen, or a browser's socket."""
+    """Whether there is a terminal (it is drawn on by standard error), or a browser."""
     if os.environ.get("TEXTUAL_DRIVER"):
         return True
-    return sys.stdout.isatty() and os.environ.get("TERM", "dumb") not in ("dumb", "")
+    streams = (sys.stdin, sys.stdout, sys.stderr)
+    return all(s.isatty() for s in streams) and os.environ.get("TERM", "dumb") not in ("dumb", "")
 
 
 def _print(text: str) -> None:
