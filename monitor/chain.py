@@ -160,7 +160,13 @@ class Chain:
     def _begin(self, bench: Bench, calibration: Calibration | None) -> None:
         carried = self.carry() if not self._carried else self._carried
         self._carried = {}
-        self.judges = Judges(self.probe, bench, calibration, carried)
+        try:
+            self.judges = Judges(self.probe, bench, calibration, carried)
+        except (KeyError, TypeError, ValueError, AttributeError) as wrong:
+            if not carried:
+                raise
+            self.refused.append(f"carried event not taken, begun without it: {wrong!r}")
+            self.judges = Judges(self.probe, bench, calibration, {})
 
     def _judge(self, seconds: list[Second]) -> list[Finding]:
         found: list[Finding] = []

@@ -151,10 +151,15 @@ class Recorder:
                 self.event("gap", {"link": "lost", "why": why})
 
     def gap(self, why: str) -> None:
-        """A time in which nothing could be recorded is over: write both its ends."""
+        """A time in which nothing could be recorded is over: write both its ends.
+
+        The first belongs to the last line before it, so nothing may close that second first.
+        """
         self.flush()
-        self.event("gap", {"link": "lost", "why": why}, self._written_t)
-        self.event("gap", {"link": "back"})
+        if self.paused:
+            return
+        lost = codec.event_line(self._written_t, "gap", {"link": "lost", "why": why})
+        self._try(lost + codec.event_line(self._stamp(), "gap", {"link": "back"}))
 
     def tick(self) -> None:
         """Call about once a second: says that time passes, and what was no reading."""

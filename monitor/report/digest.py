@@ -132,6 +132,7 @@ def _limits(night: Night) -> Iterable[str]:
 def _doses(night: Night) -> Iterable[str]:
     rests = [f for f in night.findings if f["finding"] == "rest" and f.get("to_t") is None]
     for lane in night.lanes:
+        struck = {str(e.fields["of"]): e for e in lane.events if e.kind == "strike"}
         for event in (e for e in lane.events if e.kind == "dose"):
             f = event.fields
             size = (
@@ -140,6 +141,10 @@ def _doses(night: Night) -> Iterable[str]:
             what = (
                 f"{lane.tank}: {clock(night, event.time_s)} {size} {f.get('liquid', '')}".rstrip()
             )
+            strike = struck.get(str(f.get("id") or event.time_s))
+            if strike is not None:
+                yield f"{what}: struck out, {strike.fields.get('why') or 'no reason given'}"
+                continue
             mine = [
                 r
                 for r in rests
