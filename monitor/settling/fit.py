@@ -26,7 +26,7 @@ from monitor.settling.models import SETTLE_S, TERMS, Bank, bank
 
 FEWEST = 3  # readings before the first judgement
 SWITCH = 0.01  # chance a second that the tank goes on as another of the models
-OWN = 1.5  # a model that holds less than this times what is lent to it is left out
+LIGHT = 1e-3  # models of less weight are left out of a judgement
 EDDIES = 0.375  # what a second's mean leaves of the variance of turbulence
 STRAY_SD, STRAY_N = 6.0, 6  # off by so many standard deviations, after so many readings
 STRAYS = 5  # in a row are believed again
@@ -186,7 +186,7 @@ class Fit:
 
     def models(self) -> Models:
         """What the models say now, the light ones left out."""
-        which = np.flatnonzero(self.weight > OWN * SWITCH * self.bank.weight)
+        which = np.flatnonzero(self.weight > LIGHT)
         weight = self.weight[which] / self.weight[which].sum()
         c, cov = self.squares.c[:, which], self.squares.cov[..., which] * self.s2
         return Models(self.bank.take(which), self.x, weight, c, cov, self.s2)
