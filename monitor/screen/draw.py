@@ -101,9 +101,11 @@ class Canvas:
             up = join & (bottom < before_top)
         top = np.where(down, before_bottom + 1.0, top)
         bottom = np.where(up, before_top - 1.0, bottom)
-        self.fill(top, bottom, ink)
+        self.fill(top, bottom, ink, alone=True)
 
-    def fill(self, top: Floats, bottom: Floats, ink: int, every: int = 1) -> None:
+    def fill(
+        self, top: Floats, bottom: Floats, ink: int, every: int = 1, alone: bool = False
+    ) -> None:
         """Set the dots from `top` to `bottom`, (2 width,) dot rows; `every`: only some of them."""
         rows = np.arange(4 * self.height)[:, None]
         with np.errstate(invalid="ignore"):
@@ -111,7 +113,7 @@ class Canvas:
         if every > 1:
             columns = np.arange(2 * self.width)[None, :]
             dots &= (rows + columns * 2) % every == 0
-        self.dots(dots, ink)
+        self.dots(dots, ink, alone)
 
     def points(self, t: Floats, y: Floats, from_t: float, dt: float, ink: int) -> None:
         """Single dots, unjoined."""
@@ -125,11 +127,13 @@ class Canvas:
         dots[row[inside].astype(np.int64), column[inside].astype(np.int64)] = True
         self.dots(dots, ink)
 
-    def dots(self, dots: Bools, ink: int) -> None:
-        """Add dots, (4 height, 2 width); later inks win a shared cell."""
+    def dots(self, dots: Bools, ink: int, alone: bool = False) -> None:
+        """Add dots, (4 height, 2 width); later inks win a shared cell, or have it `alone`."""
         cells = dots.reshape(self.height, 4, self.width, 2)
         bits = np.einsum("hrwc,rc->hw", cells, _BITS).astype(np.uint16)
         there = bits > 0
+        if alone:
+            self._dots[there] = 0
         self._dots |= bits
         self.chars[there] = _BLANK + self._dots[there]
         self.ink[there] = ink
@@ -163,6 +167,11 @@ class Canvas:
         cells = cells[self.chars[row, first : last + 1] == ord(" ")]
         self.chars[row, cells] = ord(char)
         self.ink[row, cells] = ink
+
+    def recolour(self, first: int, last: int, ink: int, to: int) -> None:
+        """What has `ink` between two columns gets another."""
+        part = self.ink[:, first : last + 1]
+        part[part == ink] = to
 
     def put(self, row: int, column: int, text: str, ink: int) -> None:
         """Write text of narrow characters over what is there; what does not fit is cut."""

@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-INKS = ("", "faint", "trace", "expect", "mark", "doubt", "act", "plan", "strong")
-PLAIN, FAINT, TRACE, EXPECT, MARK, DOUBT, ACT, PLAN, STRONG = range(len(INKS))
+INKS = ("", "faint", "trace", "expect", "mark", "doubt", "act", "plan", "strong", "alarm")
+PLAIN, FAINT, TRACE, EXPECT, MARK, DOUBT, ACT, PLAN, STRONG, ALARM = range(len(INKS))
 PAPERS = ("", "/aim", "/chosen")
 CLEAR, AIM, CHOSEN = range(len(PAPERS))
 TONES = {"calm": "", "moving": "expect", "doubt": "doubt", "act": "act"}

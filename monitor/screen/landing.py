@@ -21,8 +21,8 @@ from monitor.view import Lane, Span
 
 MARGIN = 10
 RAW_SPAN_S = 900.0  # up to here single readings are drawn
-LEAST_BANDS = 8.0  # the scale spans at least so many rest bands
-INSET_LEAST = 24  # cells for the evidence's own picture
+LEAST_BANDS = 6.0  # the scale spans at least so many rest bands
+INSET_LEAST = 20  # cells for the evidence's own picture
 
 
 @dataclass(frozen=True)
@@ -54,6 +54,8 @@ def picture(
     _raw(canvas, lane, on)
     _expected_before(canvas, lane, on)
     canvas.curve(past, inks.TRACE)
+    for first, last in faulty(lane, on):
+        canvas.recolour(first, last, inks.TRACE, inks.DOUBT)
     if plan is not None:
         _landing(canvas, on, lane, plan.salinity_pct, plan.u95_pct, None, inks.PLAN)
     else:
@@ -65,13 +67,30 @@ def picture(
     return rows
 
 
+def expected(lane: Lane) -> Finding | None:
+    """The outlook that holds now; None where the probe tells nothing of the tank."""
+    gone = lane.belief == "not-believed" or lane.out is not None or lane.link_lost is not None
+    return lane.outlook if lane.moving and not gone else None
+
+
+def faulty(lane: Lane, on: Axis) -> list[tuple[int, int]]:
+    """First and last cell column of each fault on the axis."""
+    cells: list[tuple[int, int]] = []
+    for span in lane.spans:
+        to_t = on.now_t if span.to_t is None else span.to_t
+        first, last = max(on.cell(span.from_t), 0), min(on.cell(to_t), on.width - 1)
+        if span.what not in ("out", "link") and first <= last:
+            cells.append((first, last))
+    return cells
+
+
 def bounds(lane: Lane, on: Axis, past: Columns, plan: Plan | None) -> tuple[float, float]:
     """The scale's ends: what is seen, what is expected, no closer than the rest band allows."""
     seen = [past.low, past.high]
-    outlook, rest = lane.outlook, lane.rest
+    outlook, rest = expected(lane), lane.rest
     for said in (outlook, rest):
         if said is not None and on.now_cell < on.width:
-            doubt = said["u95_pct"] if said is rest else min(said["u95_pct"], 20.0 * lane.band)
+            doubt = said["u95_pct"] if said is rest else min(said["u95_pct"], 6.0 * lane.band)
             seen.append(np.array([said["salinity_pct"] - doubt, said["salinity_pct"] + doubt]))
     if plan is not None:
         seen.append(np.array([plan.salinity_pct - plan.u95_pct, plan.salinity_pct + plan.u95_pct]))
@@ -105,21 +124,14 @@ def _expected_before(canvas: Canvas, lane: Lane, on: Axis) -> None:
 
 def _future(canvas: Canvas, lane: Lane, on: Axis, clock: Clock) -> None:
     """What is expected from now on: the cone, or that it stays."""
-    if on.now_cell >= on.width or lane.belief == "not-believed" or lane.out or lane.link_lost:
+    outlook, rest = expected(lane), lane.rest
+    if on.now_cell >= on.width:
         return
-    outlook, rest = lane.outlook, lane.rest
-    if lane.moving and outlook is not None:
-        _landing(
-            canvas,
-            on,
-            lane,
-            outlook["salinity_pct"],
-            outlook["u95_pct"],
-            outlook,
-            inks.EXPECT,
-        )
+    if outlook is not None:
+        where, doubt = outlook["salinity_pct"], outlook["u95_pct"]
+        _landing(canvas, on, lane, where, doubt, outlook, inks.EXPECT)
         _moment(canvas, on, outlook, clock)
-    elif rest is not None:
+    elif rest is not None and math.isfinite(lane.value):
         first = on.now_cell + 1
         canvas.level(canvas.row_of(rest["salinity_pct"]), first, on.width - 1, inks.EXPECT, "─")
 
@@ -248,31 +260,35 @@ def heading(
 def _verdict(lane: Lane, dose_t: float, scale: Scale) -> list[Run]:
     """How the dose was answered."""
     rest = lane.rests[-1] if lane.rests else None
-    if rest is None or rest["t"] < dose_t or rest.get("predicted_pct") is None:
+    answered = rest.get("dose_t") if rest is not None else None
+    if rest is None or answered is None or abs(answered - dose_t) > 2e-3:
         return []
+    if rest.get("predicted_pct") is None:
+        return [(" · at rest, nothing was foretold", "faint")]
     expected = figures.short_text(rest["predicted_pct"], rest["predicted_u95_pct"], scale)
     if rest["verdict"] == "agrees":
         return [(f" · landed as foretold ({expected})", "faint")]
     return [(f" · foretold {expected}, LANDED ELSEWHERE", "act")]
 
 
-def belief(lane: Lane, clock: Clock, width: int) -> list[Run]:
-    """Can it be believed: the accusation with its evidence and what to do, or a calm word."""
+def belief(lane: Lane, width: int, rows: int) -> list[list[Run]]:
+    """Can it be believed: the accusation with its evidence, what to do; or a calm word."""
     if lane.belief == "believed" or not lane.begun:
         said = "believed, no fault is seen" if lane.begun else ""
-        return text.row([(said, "faint")], width)
-    tone = "act" if lane.belief == "not-believed" else "doubt"
-    word = "not believed" if lane.belief == "not-believed" else "doubtful"
-    runs: list[Run] = [(f"{word}: {words.cause(lane)}", tone)]
-    what = words.advice(lane)
-    if what:
-        runs.append((f" · {what}", "strong"))
-    return text.row(runs, width)
+        told: list[list[Run]] = [[(said, "faint")]]
+    else:
+        tone = "act" if lane.belief == "not-believed" else "doubt"
+        word = "not believed" if lane.belief == "not-believed" else "doubtful"
+        what = words.advice(lane)
+        accused = text.wrapped(f"{word}: {words.cause(lane)}", width, 1 if rows < 3 else 2)
+        told = [[(line, tone)] for line in accused]
+        told += [[(line, "strong")] for line in text.wrapped(what, width, 2)] if what else []
+    return [text.row(runs, width) for runs in (told + [[]] * rows)[:rows]]
 
 
 def evidence(span: Span, width: int, height: int) -> list[list[Run]]:
     """The raw readings that made the judge say it: periods in us, their time along the width."""
-    rows: list[list[Run]] = [[(text.fit(f"raw readings, {span.what}", width), "doubt")]]
+    rows: list[list[Run]] = [[(text.fit("as it was read, us", width), "doubt")]]
     if span.raw is None or not len(span.raw[0]):
         return rows
     t, period = span.raw

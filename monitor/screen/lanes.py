@@ -7,7 +7,7 @@ from typing import NamedTuple
 
 import numpy as np
 
-from monitor.screen import axis, draw, figures, inks, text
+from monitor.screen import axis, draw, figures, inks, landing, text
 from monitor.screen.axis import Axis
 from monitor.screen.draw import Canvas, Run
 from monitor.screen.figures import Scale
@@ -30,7 +30,7 @@ class Widths(NamedTuple):
 
 def widths(width: int, any_aim: bool, rows: int) -> Widths:
     """How a row of so many cells is shared out."""
-    name = 16 if width >= 110 else 10 if width >= 60 else 9
+    name = 20 if width >= 110 else 9 if width < 60 else 10 if any_aim else 17
     around = 1 + name + 1 + figures.VALUE_CELLS + 1
     strip = 0 if not any_aim else 24 if width >= 140 else 17 if width >= 100 else 11
     left = width - around - (strip + 1 if strip else 0)
@@ -55,7 +55,7 @@ def line(lane: Lane, name: str, said: Said, scale: Scale, wide: Widths, chosen: 
         runs.append((_strip(lane, wide.strip), tone or "faint"))
         runs.append((" ", ""))
     if wide.sentence:
-        runs.append((text.fit(said.text, wide.sentence), tone))
+        runs += text.filled(said.text, wide.sentence, tone)
     return runs
 
 
@@ -64,7 +64,7 @@ def _strip(lane: Lane, width: int) -> str:
     if aim is None:
         return " " * width
     around = AROUND_AIM * (aim[1] - aim[0])
-    outlook = lane.outlook if lane.moving else None
+    outlook = landing.expected(lane)
     return draw.strip(
         width,
         (aim[0] - around, aim[1] + around),
@@ -76,8 +76,8 @@ def _strip(lane: Lane, width: int) -> str:
     )
 
 
-def trace(lane: Lane, on: Axis) -> list[Run]:
-    """The lane's trace in one row, faults in its ink, doses and the expected rest marked."""
+def trace(lane: Lane, on: Axis, height: int) -> list[list[Run]]:
+    """The lane's trace in so many rows, faults in their ink, doses and the expected rest marked."""
     held, faint = axis.columns(lane, on)
     seen = np.concatenate((held.low, held.high))
     seen = seen[np.isfinite(seen)]
@@ -85,32 +85,28 @@ def trace(lane: Lane, on: Axis) -> list[Run]:
     if len(seen):
         least = LEAST_BANDS * lane.band if lane.calibrated else 1e-3 * abs(float(seen[0]))
         low, high = draw.nice_bounds(float(seen.min()), float(seen.max()), max(least, 1e-9))
-    canvas = Canvas(on.width, 1, low, high)
+    canvas = Canvas(on.width, height, low, high)
     if faint is not None:
         canvas.curve(faint, inks.FAINT)
     canvas.curve(held, inks.TRACE)
     _faults(canvas, lane, on)
-    outlook = lane.outlook if lane.moving else None
+    outlook = landing.expected(lane)
     if outlook is not None:
         rest_t = outlook["t"] + outlook["rest_in_s"]
-        canvas.level(0, on.now_cell + 1, on.cell(rest_t), inks.EXPECT, "╌")
+        row = canvas.row_of(min(max(outlook["salinity_pct"], low), high))
+        canvas.level(row, on.now_cell + 1, on.cell(rest_t), inks.EXPECT, "╌")
         canvas.upright(on.cell(rest_t), inks.EXPECT, "┊", over=True)
     for dose in lane.doses:
         if not dose.struck and on.from_t <= dose.time_s < on.to_t:
-            canvas.put(0, on.cell(dose.time_s), "▲", inks.MARK)
+            canvas.put(height - 1, on.cell(dose.time_s), "▲", inks.MARK)
     canvas.upright(on.now_cell, inks.FAINT, "│")
-    return canvas.runs(0, inks.INKS, inks.PAPERS)
+    return [canvas.runs(i, inks.INKS, inks.PAPERS) for i in range(height)]
 
 
 def _faults(canvas: Canvas, lane: Lane, on: Axis) -> None:
-    for span in lane.spans:
-        if span.what in ("out", "link"):
-            continue
-        to_t = on.now_t if span.to_t is None else span.to_t
-        first, last = max(on.cell(span.from_t), 0), min(on.cell(to_t), on.width - 1)
-        if first <= last:
-            canvas.ink[0, first : last + 1] = inks.DOUBT
-            canvas.level(0, first, last, inks.DOUBT, "~")
+    for first, last in landing.faulty(lane, on):
+        canvas.recolour(first, last, inks.TRACE, inks.DOUBT)
+        canvas.level(canvas.height - 1, first, last, inks.DOUBT, "~")
 
 
 class Drawn:
@@ -118,7 +114,7 @@ class Drawn:
 
     def __init__(self) -> None:
         self._rows: dict[Lane, tuple[object, list[list[Run]]]] = {}
-        self._traces: dict[Lane, tuple[object, list[Run]]] = {}
+        self._traces: dict[Lane, tuple[object, list[list[Run]]]] = {}
 
     def rows(
         self,
@@ -132,7 +128,7 @@ class Drawn:
         on: Axis,
         chosen: bool,
     ) -> list[list[Run]]:
-        """The one or two rows of a lane."""
+        """The rows of a lane: `per_lane` of them."""
         place = (on.from_t, on.cell_s, on.width, on.now_cell)
         key = (lane.version, said, scale, width, any_aim, per_lane, chosen, place)
         held = self._rows.get(lane)
@@ -156,22 +152,23 @@ class Drawn:
     ) -> list[list[Run]]:
         first = line(lane, name, said, scale, wide, chosen)
         if wide.trace:
-            first = [*first, (" ", ""), *self._trace(lane, on)]
+            first = [*first, (" ", ""), *self._trace(lane, on, 1)[0]]
         told = [text.row(first, width)]
         if per_lane == 1:
             return told
         if not wide.sentence:
             tone = inks.TONES[said.tone]
-            second: list[Run] = [("  ", ""), (text.fit(said.text, width - 2), tone)]
-        else:
-            second = [(" " * MARGIN, ""), *self._trace(lane, on)]
-        return [*told, text.row(second, width)]
+            sentence = text.filled(said.text, width - 2, tone)
+            return [*told, text.row([("  ", ""), *sentence], width)]
+        margin = (" " * MARGIN, "")
+        traced = self._trace(lane, on, per_lane - 1)
+        return told + [text.row([margin, *runs], width) for runs in traced]
 
-    def _trace(self, lane: Lane, on: Axis) -> list[Run]:
+    def _trace(self, lane: Lane, on: Axis, height: int) -> list[list[Run]]:
         """The trace, drawn again once there is another dot to it."""
         beat = lane.t // on.dot_s if lane.t == lane.t else None
-        key = (lane.marked, beat, on.from_t, on.cell_s, on.width)
+        key = (lane.marked, beat, on.from_t, on.cell_s, on.width, height)
         held = self._traces.get(lane)
         if held is None or held[0] != key:
-            held = self._traces[lane] = (key, trace(lane, on))
+            held = self._traces[lane] = (key, trace(lane, on, height))
         return held[1]

@@ -32,7 +32,7 @@ LIGHT = {
     "plan": "#007a5a",
     "aim": "#e3edf3",
 }
-_BOLD = ("mark", "doubt", "act", "strong")
+_BOLD = ("mark", "doubt", "act", "strong", "alarm")
 
 
 class Palette:
@@ -59,8 +59,10 @@ class Palette:
         bold = ink in _BOLD
         if self._colours is None:
             return Style(
-                bold=bold, dim=ink == "faint", reverse=ink == "act", underline=ink == "doubt"
+                bold=bold, dim=ink == "faint", reverse=ink == "alarm", underline=ink == "doubt"
             )
+        if ink == "alarm":
+            return Style(color=self._colours["paper"], bgcolor=self._colours["act"], bold=True)
         colour = self._colours.get(ink, self._colours["ink"])
         behind = self._colours.get(paper or "paper", self._colours["paper"])
         return Style(color=colour, bgcolor=behind, bold=bold)

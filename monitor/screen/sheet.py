@@ -22,6 +22,7 @@ from monitor.view import Lane
 SMALL_WIDTH, SMALL_HEIGHT = 60, 16
 LANDING_LEAST = 9  # rows: heading, belief, five of plot, what happened, axis
 NOISE_FROM, HISTORY_FROM = 20, 36  # rows of the landing view from which these are added
+LANE_MOST = 4  # rows a lane
 NOISE_ROWS, HISTORY_ROWS = 2, 9
 LABEL_MOST = 400
 
@@ -108,16 +109,21 @@ def draw(source: Source, look: Look, width: int, height: int, clock: Clock) -> S
 
 def head(source: Source, look: Look, known: list[_Tank], clock: Clock, width: int) -> list[Run]:
     """Is anything wrong; the time of day once; the unit of all figures."""
-    names = [text.fit(tank.name, 16).rstrip() for tank in known]
+    names = [text.fit(tank.name, 24 if width >= 80 else 16).rstrip() for tank in known]
     said = words.overall([(tank.lane, tank.said) for tank in known], names)
     when = clock.whole(source.now_s) if width >= 100 else clock.second(source.now_s)
     unit = {"%": "% by mass", "mS/cm": "mS/cm at 25 C"}.get(look.unit, look.unit)
     right = f"{unit}  {when}" if width >= SMALL_WIDTH else when
     if look.note and width >= 100:
         right = f"{text.fit(look.note, min(len(look.note), 40))}  {right}"
-    left = text.fit(said.text, max(width - len(right) - 2, 0))
-    style = inks.TONES[said.tone] or "strong"
-    return text.row([(" " + left, style), (" " + right, "faint")], width)
+    left = max(width - len(right) - 2, 0)
+    style = "alarm" if said.tone == words.ACT else inks.TONES[said.tone] or "strong"
+    other = "alarm" if said.tone == words.ACT else "faint"
+    if style == "alarm":
+        runs: list[Run] = [(" " + text.fit(said.text, left), style)]
+    else:
+        runs = [(" ", ""), *text.filled(said.text, left, style)]
+    return text.row([*runs, (" " + right, other)], width)
 
 
 Foot = list[tuple[list[Run], list[tuple[int, int, str]]]]
@@ -283,6 +289,8 @@ def _large(
         return
     room -= 1  # the rule between them
     per = 2 if 2 * len(known) <= max(room - LANDING_LEAST, room // 2) and room >= 18 else 1
+    if per == 2:
+        per = min(max(room // 3 // len(known), 2), LANE_MOST)
     for_lanes = min(per * len(known), room - LANDING_LEAST)
     any_aim = any(tank.lane.aim for tank in known)
     on = axis.axis(width - landing.MARGIN, look.span_s, source.now_s, look.end_t)
@@ -312,8 +320,9 @@ def _landing(
     lane, scale = tank.lane, tank.scale
     name = text.fit(tank.name, min(len(tank.name), max(width // 4, 10))).rstrip()
     sheet.rows.append(landing.heading(lane, name, now_s, clock, scale, width))
-    sheet.rows.append(landing.belief(lane, clock, width))
-    room -= 2
+    about = 3 if room >= 24 else 2 if room >= 12 else 1
+    sheet.rows += landing.belief(lane, width, about)
+    room -= 1 + about
     noise = NOISE_ROWS if room >= NOISE_FROM else 0
     history = HISTORY_ROWS if room >= HISTORY_FROM else 0
     plan = look.form.preview(lane).plan if look.form is not None else None
@@ -335,7 +344,13 @@ def _with_evidence(rows: list[list[Run]], lane: Lane, on: Axis, planned: bool) -
     span = next((s for s in reversed(lane.spans) if s.to_t is None and s.raw is not None), None)
     left = landing.MARGIN + on.now_cell + 1
     width = landing.MARGIN + on.width - left - 1
-    if span is None or planned or lane.moving or width < landing.INSET_LEAST or len(rows) < 6:
+    if (
+        span is None
+        or planned
+        or landing.expected(lane)
+        or width < landing.INSET_LEAST
+        or len(rows) < 6
+    ):
         return rows
     if lane.belief == "believed":
         return rows

@@ -18,6 +18,13 @@ def fit(text: str, width: int) -> str:
     return set_cell_size(safe, width)
 
 
+def filled(text: str, width: int, style: str) -> list[Run]:
+    """Text in exactly `width` cells, of which only what is written has the style."""
+    fitted = fit(text, width)
+    said = fitted.rstrip()
+    return [(said, style), (fitted[len(said) :], "")]
+
+
 def row(runs: list[Run], width: int) -> list[Run]:
     """Runs cut or filled to exactly `width` cells."""
     kept: list[Run] = []

@@ -14,7 +14,7 @@ from monitor.view import Lane
 
 CALM, MOVING, DOUBT, ACT = "calm", "moving", "doubt", "act"
 RANK = {CALM: 0, MOVING: 1, DOUBT: 2, ACT: 3}
-WHY_MOST = 120
+WHY_MOST = 240
 
 
 class Said(NamedTuple):
@@ -32,10 +32,12 @@ def state(lane: Lane, now_s: float, clock: Clock, scale: Scale) -> Said:
     limit = _limit(lane, clock, scale)
     movement = _movement(lane, now_s, clock, scale)
     parts = [part for part in (limit, movement, _drift(lane, scale)) if part is not None]
+    if len(parts) > 1 and movement.tone == CALM:
+        parts.remove(movement)
     text = "; ".join(part.text for part in parts[:2])
     tone = max((part.tone for part in parts), key=RANK.__getitem__)
     if lane.belief == "doubtful":
-        text += f", but doubtful: {printable(lane.why, WHY_MOST)}"
+        text = f"doubtful, {printable(lane.why, WHY_MOST)}: {text}"
         tone = max(tone, DOUBT, key=RANK.__getitem__)
     asked = _asked(lane)
     if asked and tone in (CALM, MOVING):
@@ -105,6 +107,8 @@ def _movement(lane: Lane, now_s: float, clock: Clock, scale: Scale) -> Said:
     if lane.moving:
         return Said(_lands(lane, now_s, scale), MOVING)
     rest = lane.rest
+    if lane.calibrated and not math.isfinite(lane.value):
+        return Said("no reading of the tank just now", DOUBT)
     if rest is not None:
         text = f"at rest {length(now_s - rest['rested_t'])}"
         if rest.get("verdict") == "disagrees":
@@ -113,8 +117,6 @@ def _movement(lane: Lane, now_s: float, clock: Clock, scale: Scale) -> Said:
         return Said(text, CALM)
     if not lane.calibrated:
         return Said("read, but no standards: no salinity", DOUBT)
-    if not math.isfinite(lane.value):
-        return Said("no reading of the tank just now", DOUBT)
     since = lane.told[-1]["t"] if lane.told else lane.offset_s
     first = lane.trace.seconds.first_t
     held = now_s - max(since, first) if first == first else 0.0
@@ -125,8 +127,10 @@ def _lands(lane: Lane, now_s: float, scale: Scale) -> str:
     outlook = lane.outlook
     dose = lane.last_dose
     if dose is not None and dose.time_s <= now_s < dose.time_s + dose.open_s:
-        left = length(dose.time_s + dose.open_s - now_s)
-        return f"dose running in, {left} to go"
+        if outlook is None:
+            return f"dose running in for {length(dose.time_s + dose.open_s - now_s)}"
+        where = short_text(outlook["salinity_pct"], outlook["u95_pct"], scale)
+        return f"dose running in, lands at {where}"
     if outlook is None:
         return "moving, too early to say where to"
     where = short_text(outlook["salinity_pct"], outlook["u95_pct"], scale)

@@ -20,6 +20,7 @@ from monitor.view.traces import DOUBTFUL, NOT_TANK, TANK, Raw, Trace
 MARKS_MOST = 2000
 EVIDENCE_BEFORE_S = 20.0
 EVIDENCE_MOST_S = 90.0
+SLOW = ("fouling",)  # a few seconds of readings show nothing of it: the trace does
 
 
 class Lane:
@@ -107,10 +108,12 @@ class Lane:
                 span.to_t, span.why = finding["to_t"], finding["evidence"]
                 return
         span = Span(name, finding["from_t"], finding["to_t"], finding["evidence"])
+        self.spans.append(span)
+        if name in SLOW:
+            return
         first = max(finding["from_t"], finding["t"] - EVIDENCE_MOST_S) - EVIDENCE_BEFORE_S
         times, periods, _ = self.raw.between(first, finding["t"])
         span.raw = (times[-2000:], periods[-2000:])
-        self.spans.append(span)
 
     def _meet(self, second: Second, judges: Judges) -> None:
         self.marked += 1
@@ -221,11 +224,6 @@ class Lane:
         return self._judges.trust.since + self.offset_s if self._judges else NAN
 
     @property
-    def usable(self) -> bool:
-        """Whether the newest second gave a reading of the tank."""
-        return self._judges.trust.usable if self._judges else False
-
-    @property
     def faults(self) -> list[Finding]:
         """Faults in force, the oldest first."""
         if self._judges is None:
@@ -240,7 +238,9 @@ class Lane:
             return NAN
         if not self.calibrated:
             return self._second.mean_us
-        return self._judges.settling.shown_pct if self.usable else NAN
+        trust = self._judges.trust
+        gone = trust.out or trust.belief == "not-believed" or self.link_lost is not None
+        return NAN if gone else self._judges.settling.shown_pct
 
     @property
     def u95(self) -> float:
