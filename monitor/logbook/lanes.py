@@ -1,13 +1,18 @@
 """Rows of text to numbers: one grammar, two lanes.
 
 `slow` is the definition: a strict regular expression and float() a line. `fast` takes many lines
-at once by NumPy and agrees with it to the bit: digits are turned into whole numbers eight at a
-time, and whole / 10^decimals is the correctly rounded value that float(text) gives, as long as
-both are exact (below 2^53 and up to 10^22). Lines it does not take go to the slow lane.
+at once by NumPy and agrees with it to the bit. Lines that have their digits, points and commas in
+the same places are one shape: laid over its template, all that is not right shows, and the digits
+times their powers of ten are whole numbers. Those are exact (below 2^53), and so are the powers of
+ten, so whole / 10^decimals is the correctly rounded value that float(text) gives.
+
+A log's lines mostly go on in one shape for thousands of rows; those are taken as they stand.
+Where shapes mix, lines are gathered by their length. What is left goes to the slow lane.
 """
 
 from __future__ import annotations
 
+import functools
 import re
 from typing import NamedTuple
 
@@ -18,18 +23,14 @@ from monitor.blocks import NAN, Floats
 ROW = re.compile(
     rb"(\d{1,9}(?:\.\d{1,6})?),(\d{1,12}(?:\.\d{1,9})?)(?:,(-?\d{1,3}(?:\.\d{1,6})?)?)?"
 )
-FEW = 48  # lines below which the slow lane is the faster one
-_ROUNDS = 6  # patterns of decimals tried on one stretch
-_PAD = 16
-_COMMAS = np.array([44, 44, 10], np.uint8)  # of a row of three columns
-_ZEROS = np.uint64(0x3030303030303030)
-_ABOVE_9 = np.uint64(0x7676767676767676)
-_HIGH = np.uint64(0x8080808080808080)
-_STEPS = (
-    (np.uint64(2561), np.uint64(8), np.uint64(0x00FF00FF00FF00FF)),
-    (np.uint64(6553601), np.uint64(16), np.uint64(0x0000FFFF0000FFFF)),
-    (np.uint64(42949672960001), np.uint64(32), np.uint64(0x00000000FFFFFFFF)),
-)
+FEW = 12  # lines below which the slow lane is the faster one
+_DIGITS_MOST = 15  # of one figure: below 2^53
+_TILE = 1 << 17  # bytes that a template covers
+_TRIAL = 1024  # lines tried first: where shapes change often, more would be in vain
+_MIXED = 1 << 15  # bytes taken at a time where shapes mix
+_ROUNDS = 12  # shapes looked for in these
+_SAME = bytes.maketrans(b"123456789", b"000000000")
+_MOST = bytes(9 if byte == 0x30 else 0 for byte in range(256))
 
 
 class Rows(NamedTuple):
@@ -51,145 +52,119 @@ def slow(line: bytes) -> tuple[float, float, float] | None:
 
 
 def fast(text: bytes, temperature: bool = True) -> Rows:
-    """Rows of whole lines (each ends with LF); without `temperature`, of two columns only."""
-    padded = np.frombuffer(b" " * _PAD + text, np.uint8)
-    words = np.ndarray((len(padded) - 7,), np.uint64, padded, 0, (1,))
-    edges = _edges(padded)
-    n = len(edges[0])
-    good = np.zeros(n, bool)
-    values = np.full((3, n), NAN)
-    left = np.arange(n)
+    """Rows of whole lines, up to the last LF; without `temperature`, of two columns only."""
+    last = text.rfind(b"\n") + 1
+    data = np.frombuffer(text, np.uint8, last)
+    commas = 2 if temperature else 1
+    good: list[np.ndarray] = []
+    values: list[Floats] = []
+    at = 0
+    while at < last:
+        shape = _shape_of(text[at : text.index(b"\n", at) + 1], commas)
+        alike = shape.alike(data[at:]) if shape else _NONE
+        if shape and len(alike) >= FEW:
+            good.append(np.ones(len(alike), bool))
+            values.append(shape.values(alike))
+            at += alike.size
+        else:
+            end = (text.rfind(b"\n", at, at + _MIXED) + 1) or text.index(b"\n", at) + 1
+            mixed = _mixed(text[at:end], commas)
+            good.append(mixed[0])
+            values.append(mixed[1])
+            at = end
+    if len(good) == 1:
+        return Rows(good[0], *values[0])
+    return Rows(np.concatenate(good), *np.concatenate(values, axis=1))
+
+
+class _Shape:
+    """Lines with digits where this one has them, and all else the same."""
+
+    def __init__(self, line: bytes, figures: list[tuple[int, int]]) -> None:
+        self.size = len(line)
+        self.weights = np.zeros((3, self.size))
+        self.scales = np.ones((3, 1))
+        self.missing = [i for i, (start, end) in enumerate(figures) if start == end]
+        for i, (start, end) in enumerate(figures):
+            places = [p for p in range(start, end) if line[p] == 0x30]
+            self.weights[i, places] = [10.0**power for power in reversed(range(len(places)))]
+            decimals = line[start:end].partition(b".")[2]
+            self.scales[i] = (-1.0 if line[start] == 0x2D else 1.0) * 10.0 ** len(decimals)
+        lines = _TILE // self.size
+        self.template = np.frombuffer(line * lines, np.uint8)
+        self.most = np.frombuffer(line.translate(_MOST) * lines, np.uint8)
+
+    def alike(self, data: np.ndarray) -> np.ndarray:
+        """Digits of the lines of this shape at the head of `data`, (n, size), 0 where none is."""
+        for lines in (_TRIAL, len(self.template) // self.size):
+            size = min(len(data) // self.size, lines) * self.size
+            digits = data[:size] ^ self.template[:size]
+            wrong = digits > self.most[:size]
+            first = int(wrong.argmax()) if size else 0
+            if size and wrong[first]:
+                digits = digits[: first // self.size * self.size]
+                break
+        return digits.reshape(-1, self.size)
+
+    def held_to(self, lines: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Digits of lines of this length, (n, size), and which of them are of this shape."""
+        digits = lines ^ self.template[: lines.size].reshape(lines.shape)
+        return digits, (digits <= self.most[: lines.size].reshape(lines.shape)).all(axis=1)
+
+    def values(self, digits: np.ndarray) -> Floats:
+        """Time, period and temperature of these lines, (3, n)."""
+        figures = np.asarray(self.weights @ digits.astype(np.float64).T)
+        figures /= self.scales
+        figures[self.missing] = NAN
+        return figures
+
+
+_NONE = np.empty((0, 1), np.uint8)
+
+
+def _shape_of(line: bytes, commas: int) -> _Shape | None:
+    """The shape of this line (with its LF), None if it is no row or no figure for this lane."""
+    return _shape(line.translate(_SAME), commas) if len(line) < 64 else None
+
+
+@functools.lru_cache(maxsize=16)
+def _shape(line: bytes, commas: int) -> _Shape | None:
+    found = ROW.fullmatch(line, 0, len(line) - 1)
+    if found is None or line.count(b",") > commas:
+        return None
+    if any(len(figure or b"") > _DIGITS_MOST for figure in found.groups()):
+        return None
+    spans = [found.span(i) for i in (1, 2, 3)]
+    return _Shape(line, [(max(start, 0), max(end, 0)) for start, end in spans])
+
+
+def _mixed(text: bytes, commas: int) -> tuple[np.ndarray, Floats]:
+    """The lines of this text, shape by shape, the commonest length first: `good` and values."""
+    data = np.frombuffer(text, np.uint8)
+    ends = np.flatnonzero(data == 10) + 1
+    starts = np.concatenate(([0], ends[:-1]))
+    sizes = np.minimum(ends - starts, 64)
+    good, values = np.zeros(len(ends), bool), np.full((3, len(ends)), NAN)
+    left = np.ones(len(ends), bool)
     slowly: list[int] = []
     for _ in range(_ROUNDS):
-        edges_left = edges if len(left) == n else [edge[left] for edge in edges]
-        taken, figures = _same_shape(padded, words, edges_left)
-        if taken.all():
-            good[left] = True
-            values[:, left] = figures
-            left = left[:0]
-        else:
-            good[left[taken]] = True
-            values[:, left[taken]] = figures[:, taken]
-            if not taken[0]:  # a spoilt line must not lead another round
-                slowly.append(int(left[0]))
-                taken[0] = True
-            left = left[~taken]
-        if len(left) < FEW:
+        if left.sum() < FEW:
             break
-    starts, ends = edges[0], edges[3]
-    for i in slowly + left.tolist():
-        row = slow(text[starts[i] - _PAD : ends[i] - _PAD])
+        same = np.flatnonzero(left & (sizes == np.bincount(sizes[left]).argmax()))
+        lead = int(same[0])
+        shape = _shape_of(text[starts[lead] : ends[lead]], commas)
+        left[lead] = False
+        if shape is None:
+            slowly.append(lead)
+            continue
+        digits, ok = shape.held_to(data[starts[same][:, None] + np.arange(shape.size)])
+        good[same[ok]] = True
+        values[:, same[ok]] = shape.values(digits[ok])
+        left[same[ok]] = False
+    for i in slowly + np.flatnonzero(left).tolist():
+        line = text[starts[i] : ends[i] - 1]
+        row = slow(line) if line.count(b",") <= commas else None
         if row is not None:
             good[i] = True
             values[:, i] = row
-    if not temperature:
-        good &= edges[2] == ends
-    return Rows(good, *values)
-
-
-def _edges(padded: np.ndarray) -> list[np.ndarray]:
-    """Start, first comma, second comma (the end where there is none) and end of each line."""
-    marks = np.flatnonzero(padded < 45)[_PAD:]  # the padding's blanks are the first of them
-    kinds = padded[marks]
-    if len(marks) % 3 == 0 and (kinds.reshape(-1, 3) == _COMMAS).all():
-        first, second, ends = marks.reshape(-1, 3).T
-        return [_starts(ends), first, second, ends]
-    ends = marks[kinds == 10]
-    starts = _starts(ends)
-    commas = np.append(marks[kinds == 44], len(padded) - 1)
-    at = np.searchsorted(commas, starts)
-    first = np.minimum(commas[at], ends)
-    second = np.minimum(commas[np.minimum(at + 1, len(commas) - 1)], ends)
-    return [starts, first, second, ends]
-
-
-def _starts(ends: np.ndarray) -> np.ndarray:
-    starts = np.empty_like(ends)
-    starts[0], starts[1:] = _PAD, ends[:-1] + 1
-    return starts
-
-
-def _same_shape(
-    padded: np.ndarray, words: np.ndarray, edges: list[np.ndarray]
-) -> tuple[np.ndarray, Floats]:
-    """Figures, (3, n), of the lines that have as many decimals as the first, and which those are.
-
-    What lies between the edges of a figure is looked at byte by byte, so a line with anything
-    else in it is never taken.
-    """
-    start, first, second, end = edges
-    lead = [int(edge[0]) for edge in edges]
-    figures = np.full((3, len(start)), NAN)
-    figures[0], ok = _figures(padded, words, start, first, _decimals(padded, *lead[:2]), 6, 8)
-    figures[1], good = _figures(
-        padded, words, first + 1, second, _decimals(padded, lead[1] + 1, lead[2]), 6, 8
-    )
-    ok &= good
-    if lead[2] + 1 < lead[3]:
-        decimals = _decimals(padded, lead[2] + 1, lead[3])
-        figures[2], good = _figures(padded, words, second + 1, end, decimals, 6, 3)
-        ok &= good
-    else:
-        ok &= second + 1 >= end
-    return ok, figures
-
-
-def _decimals(padded: np.ndarray, start: int, end: int) -> int:
-    text = padded[start:end].tobytes()
-    dot = text.rfind(b".")
-    return 0 if dot < 0 else len(text) - dot - 1
-
-
-def _figures(
-    padded: np.ndarray,
-    words: np.ndarray,
-    start: np.ndarray,
-    end: np.ndarray,
-    decimals: int,
-    decimals_most: int,
-    whole_most: int,
-) -> tuple[Floats, np.ndarray]:
-    """Values of the figures between start and end, and which of them have this form.
-
-    At most 8 digits before the point and 6 behind it: 14 digits are exact.
-    """
-    if decimals > decimals_most:
-        return np.zeros(len(start)), np.zeros(len(start), bool)
-    size = end - start
-    most = int(size.max(initial=0))
-    if most <= 8 and decimals:
-        word = words[end - 8]
-        ok = (size > decimals + 1) & (size <= whole_most + decimals + 1)
-        ok &= (word >> np.uint64(8 * (7 - decimals))) & np.uint64(0xFF) == 46
-        behind = np.uint64(0xFFFFFFFFFFFFFFFF << (8 * (8 - decimals)) & 0xFFFFFFFFFFFFFFFF)
-        word = (word & behind) | ((word << np.uint64(8)) & ~behind)
-        number, good = _number(word, 9 - size)
-        ok &= good
-        return number / 10.0**decimals, ok
-    point = end - decimals - 1 if decimals else end
-    size = point - start
-    ok = (size >= 1) & (size <= whole_most)
-    number, good = _number(words[point - 8], 8 - size)
-    ok &= good
-    if decimals:
-        ok &= padded[point] == 46
-        behind_number, good = _number(words[end - 8], 8 - decimals)
-        ok &= good
-        number = number * np.uint64(10**decimals) + behind_number
-        return number / 10.0**decimals, ok
-    return number.astype(np.float64), ok
-
-
-def _number(word: np.ndarray, drop: np.ndarray | int) -> tuple[np.ndarray, np.ndarray]:
-    """The number that eight bytes spell, the first `drop` left aside; and which are digits."""
-    bits = np.clip(8 * drop, 0, 56).astype(np.uint64) if not isinstance(drop, int) else None
-    shift = np.uint64(8 * drop) if bits is None else bits
-    word = word ^ _ZEROS
-    word >>= shift
-    word <<= shift
-    good = ((word + _ABOVE_9) | word) & _HIGH == 0
-    for factor, by, mask in _STEPS:
-        word *= factor
-        word >>= by
-        word &= mask
-    return word, good
+    return good, values

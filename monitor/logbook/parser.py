@@ -31,6 +31,8 @@ _HEADER_MOST = 200  # comment lines before the columns
 _WITHOUT = ["time_s", "period_us"]
 _STANDARD = ([*_WITHOUT, "temp_c"], _WITHOUT)
 _LONG = "line over 1 MB"
+_LF = 10
+_FAST = 20 * lanes.FEW  # bytes
 
 
 class Parser:
@@ -121,8 +123,10 @@ class Parser:
                 self._comment(text[at:end], items)
                 at = end + 1
                 continue
-            mark = text.find(b"\n#", at)
-            end = len(text) if mark < 0 else mark + 1
+            mark = text.find(b"#", at)
+            while mark > 0 and text[mark - 1] != _LF:  # inside a spoilt line
+                mark = text.find(b"#", mark + 1)
+            end = len(text) if mark < 0 else mark
             self._rows(text[at:end], items)
             at = end
 
@@ -139,31 +143,34 @@ class Parser:
             self.dropped["malformed event"] += 1
 
     def _rows(self, text: bytes, items: list[Item]) -> None:
-        n = text.count(b"\n")
-        self.lines += n
-        if self._columns in _STANDARD and n >= lanes.FEW:
+        if self._columns in _STANDARD and len(text) >= _FAST:
             rows = lanes.fast(text, self._columns != _WITHOUT)
+            self.lines += len(rows.good)
+            table: tuple[np.ndarray, ...] = rows[1:]
             if not rows.good.all():
                 lines = text.split(b"\n")
                 for i in np.flatnonzero(~rows.good).tolist():
                     self.dropped[self._wrong(lines[i])] += 1
-            table = np.stack((rows.time_s, rows.period_us, rows.temp_c))[:, rows.good]
+                table = tuple(column[rows.good] for column in table)
         else:
-            table = self._slowly(text)
-        if not table.shape[1]:
+            table = tuple(self._slowly(text))
+        time_s = table[0]
+        if not len(time_s):
             return
-        newest = np.maximum.accumulate(np.concatenate(([self._last_t], table[0])))
-        back = table[0] < newest[:-1]
-        if back.any():
-            self.dropped["time goes back"] += int(back.sum())
-            table = table[:, ~back]
-        self._last_t = float(newest[-1])
-        if table.shape[1]:
-            table.setflags(write=False)
+        if time_s[0] < self._last_t or (time_s[1:] < time_s[:-1]).any():
+            newest = np.maximum.accumulate(np.concatenate(([self._last_t], time_s)))[:-1]
+            ahead = time_s >= newest
+            self.dropped["time goes back"] += int((~ahead).sum())
+            table = tuple(column[ahead] for column in table)
+        if len(table[0]):
+            self._last_t = float(table[0][-1])
+            for column in table:
+                column.setflags(write=False)
             items.append(Block(*table))
 
     def _slowly(self, text: bytes) -> np.ndarray:
         rows: list[tuple[float, float, float]] = []
+        self.lines += text.count(b"\n")
         by_name = self._columns != _STANDARD[0]
         for line in text.split(b"\n")[:-1]:
             row = self._by_name(line) if by_name else lanes.slow(line)

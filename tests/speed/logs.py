@@ -1,6 +1,6 @@
 """Logs to measure with, drawn from the virtual tank: doses and noise, nothing wrong.
 
-    python -m tests.speed.logs OUT.log --rate 10 --hours 12 --doses 6
+python -m tests.speed.logs OUT.log --rate 10 --hours 12 --doses 6
 """
 
 from __future__ import annotations
@@ -30,8 +30,10 @@ def night(log: Path, rate_hz: float, hours: float, doses: int, seed: int = 8) ->
     last_s = hours * 3600.0
     for i in range(doses):
         scene.dose(1800.0 + i * (last_s - 1800.0) / doses)
-    events = [(met_s, f"#! {time_s:.3f} {kind} {json.dumps(fields)}\n".encode())
-              for met_s, time_s, kind, fields in scene.events]
+    events = [
+        (met_s, f"#! {time_s:.3f} {kind} {json.dumps(fields)}\n".encode())
+        for met_s, time_s, kind, fields in scene.events
+    ]
     events.append((last_s, f"#! {last_s:.3f} end {{}}\n".encode()))
     probe = scene.name.replace(".", "-")
     with log.open("wb") as file:
