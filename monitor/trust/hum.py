@@ -1,6 +1,6 @@
 """`hum`: a steady oscillation of the period, from 0.04 Hz to 1 Hz or half the reading rate.
 
-Means of up to half a second, 80 s of them, heard every five seconds. A thermostat is slower,
+Means of up to half a second, 80 s of them, heard every ten seconds. A thermostat is slower,
 ringing after a dose fades (the quarters differ), mixing has no phase. In white noise a line 40
 times its neighbours comes about once in 10,000 h.
 
@@ -19,7 +19,7 @@ from monitor.blocks import Floats, Second
 from monitor.findings import Finding
 from monitor.trust.force import InForce
 
-SPAN_S, EVERY_S = 80.0, 5
+SPAN_S, EVERY_S = 80.0, 10
 GROUP_S = 0.45  # of readings in one mean, at most
 BAND_HZ = (0.04, 0.97)
 LEAST = 0.0033  # amplitude, ln
@@ -102,7 +102,7 @@ class Hum:
         self._means = np.concatenate((self._means, means))[-keep:]
 
     def judge(self, t: float, after_dose: bool, force: InForce) -> list[Finding]:
-        """`hum` begun or ended, five seconds after it was asked last."""
+        """`hum` begun or ended, ten seconds after it was asked last."""
         if "hum" in force:
             return self._ended(t, after_dose, force)
         if not self.loud or force.any_of(*DEAFENING):

@@ -13,7 +13,9 @@ from collections import deque
 from collections.abc import Sequence
 from typing import NamedTuple
 
-from monitor.blocks import Second
+import numpy as np
+
+from monitor.blocks import Floats, Second
 from monitor.findings import Finding
 from monitor.trust.force import InForce
 from monitor.trust.hum import Hum
@@ -93,7 +95,7 @@ class Jumps:
             least = LEAST_UPS_MIXING
         elif level.after_dose(t):
             least = LEAST_UPS_DOSE
-        if not is_bubbling(recent, least) or not self.one_sided(int(t)) or hum.tonal():
+        if not is_bubbling(recent, least) or not self.one_sided(int(t), level) or hum.tonal():
             return []
         first = next(jump for jump in recent if jump.height > 0)
         return [force.begin("bubbles", t, first.t, told(recent, t))]
@@ -114,8 +116,7 @@ class Jumps:
     def take(self, judged: Judged, least: float) -> None:
         """Find the jumps in a second's readings; `least` is the height of a full one."""
         off = judged.ln_us - judged.m
-        inner = INNER * judged.gate
-        up, down = int((off > inner).sum()), int((off < -inner).sum())
+        up, down = _beyond(off, INNER * judged.gate)
         if up or down:
             self._edges.append((judged.k, up, down))
         if judged.drifting:
@@ -154,11 +155,19 @@ class Jumps:
         """Jumps of the last minute."""
         return [jump for jump in self.last if jump.end_t > t - WINDOW_S]
 
-    def one_sided(self, k: int) -> bool:
+    def one_sided(self, k: int, level: Level) -> bool:
         """Not the two-sided scatter of an oscillation: few readings low, many high."""
         edges = [edge for edge in self._edges if edge[0] > k - WINDOW_S]
+        for second, m, inner in level.edgy:
+            if second.k > k - WINDOW_S:
+                edges.append((second.k, *_beyond(np.log(second.period_us) - m, inner)))
         up, down = sum(edge[1] for edge in edges), sum(edge[2] for edge in edges)
         return down <= 1 + 0.12 * up
+
+
+def _beyond(off: Floats, inner: float) -> tuple[int, int]:
+    """How many readings lie above and below the inner gate."""
+    return int(np.count_nonzero(off > inner)), int(np.count_nonzero(off < -inner))
 
 
 def full_height(judged: Judged, level: Level) -> float:

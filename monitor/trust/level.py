@@ -23,7 +23,7 @@ from monitor.blocks import NAN, Floats, Second
 from monitor.dosing.ledger import Change, Dose
 
 GATE_SDS, GATE = 5.0, (0.012, 0.05)
-INNER = 0.6  # of the gate: readings beyond it are looked at one by one
+INNER = 0.6  # of the gate: readings beyond it are on their way to a jump, or back
 FOLLOW, FOLLOW_MOST = 0.2, 0.004  # a second; of its residual, which is clipped
 LEARN = 0.004  # a reading, of the noise
 UNKNOWN_NOISE = 0.002
@@ -67,6 +67,8 @@ class Level:
         self._lost = 0
         self._recent: deque[tuple[int, Floats, Floats]] = deque(maxlen=MIX_S)
         self._scale = 0.0
+        # calm seconds with readings beyond the inner gate; their level and inner gate
+        self.edgy: deque[tuple[Second, float, float]] = deque(maxlen=64)
 
     @property
     def sb(self) -> float:
@@ -110,21 +112,24 @@ class Level:
         """What was read before tells nothing of what comes (out and back, a gap)."""
         self.unlock()
         self.medians.clear()
+        self.edgy.clear()
 
     def calm(self, second: Second) -> bool:
-        """Take a second whose readings all lie well inside the gate; False if it is not one."""
-        m = self.m
-        inner = INNER * self.gate
+        """Take a second whose readings all lie inside the gate; False if it is not one."""
         if not self.locked or not second.n or second.zeros:
             return False
+        m, gate, high_us, low_us = self.m, self.gate, second.high_us, second.low_us
         mean = math.log(second.mean_us)
         off = mean - m
-        if (
-            second.high_us > math.exp(m + inner)
-            or second.low_us < math.exp(m - inner)
-            or abs(off) > 0.3 * self.gate
-        ):
+        if not -0.3 * gate <= off <= 0.3 * gate:
             return False
+        level_us = math.exp(m)
+        most = math.exp(gate)
+        if high_us > level_us * most or low_us * most < level_us:
+            return False
+        inner = math.exp(INNER * gate)
+        if high_us > level_us * inner or low_us * inner < level_us:
+            self.edgy.append((second, m, INNER * gate))
         self.in_gate_ln = mean
         self._lost = 0
         self.m = m + FOLLOW * min(max(off, -FOLLOW_MOST), FOLLOW_MOST)
@@ -137,8 +142,8 @@ class Level:
         share = min(LEARN * second.n, 0.5)
         seen = 0.886 * min(second.jitter, 4.0 * self.noise)
         noise = self.noise + share * (seen - self.noise)
-        self.noise = max(noise, 0.3 * self.tick_us / second.mean_us)
-        self.gate = min(max(GATE_SDS * self.noise, GATE[0]), GATE[1])
+        self.noise = noise = max(noise, 0.3 * self.tick_us / second.mean_us)
+        self.gate = min(max(GATE_SDS * noise, GATE[0]), GATE[1])
 
     def look(self, second: Second, noisy: bool) -> list[Judged]:
         """Take any other second; the seconds that can be judged now, with their level."""
