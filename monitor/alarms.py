@@ -2,31 +2,39 @@
 
 Rules:
 - Alarms never wait for the recording and never block it: each has a worker and a bounded queue; a
-  worker that is busy takes all that came meanwhile in one go.
+  worker that is busy takes all that came meanwhile in one go, and it delivers at most BURST times
+  in BURST_S.
 - A condition is told when it begins, again every `repeat_min` while it lasts, and when it ends.
   With `escalate_min` it is told only once it has lasted that long unsilenced: the second rung.
 - A command is an argument list, run without a shell, findings on its standard input, a minimal
   environment, its own process group, 30 s. It is taken only from a bench file that nobody else
   can write.
 - The path to people is tried at start and every day; when it fails, the service says so.
+- What keeps the service from its own work (`service`: a full disk) is told by every alarm.
 """
 
 from __future__ import annotations
 
 import asyncio
+import logging
 import os
 import signal
 import stat
-from collections.abc import Callable, Mapping, Sequence
+from collections import deque
+from collections.abc import Awaitable, Callable, Mapping, Sequence
 from pathlib import Path
 
 from monitor.bench import Alarm
 from monitor.findings import Finding, line
+from monitor.places import PlaceError, secret
+from monitor.printable import printable
 
 COMMAND_S = 30.0
 TRY_EVERY_S = 86_400.0
-HEARTBEAT_S = 300.0
 QUEUE = 200
+BURST = 10
+BURST_S = 300.0
+SERVICE = "service"  # kind of what the service says of itself
 
 Key = tuple[str, str, str]
 
@@ -92,8 +100,9 @@ class AlarmLine:
         settings: Alarm,
         now_s: Callable[[], float],
         say: Callable[[str], None],
-        send: Callable[[Alarm, Sequence[Finding]], object] | None = None,
+        send: Callable[[Alarm, Sequence[Finding]], Awaitable[str | None]],
     ) -> None:
+        """`send` delivers and gives what went wrong, or None."""
         self.name = name
         self.settings = settings
         self.failed: str | None = None  # why the path to people does not work now
@@ -101,13 +110,14 @@ class AlarmLine:
         self.silent_until_s: dict[str, float] = {}
         self._now_s = now_s
         self._say = say
-        self._send = send or deliver
+        self._send = send
+        self._sent: deque[float] = deque(maxlen=BURST)
         self._queue: asyncio.Queue[Finding] = asyncio.Queue(QUEUE)
         self._overrun = 0
 
     def take(self, finding: Finding) -> None:
         """A finding was concluded. Never blocks."""
-        if finding["finding"] not in self.settings.findings:
+        if finding["finding"] not in (*self.settings.findings, SERVICE):
             return
         key = key_of(finding)
         over = finding.get("to_t") is not None or not is_trouble(finding)
@@ -148,6 +158,7 @@ class AlarmLine:
                     batch = [await self._queue.get()]
             except TimeoutError:
                 batch = [test]
+            await asyncio.sleep(self._pause_s())
             while not self._queue.empty():
                 batch.append(self._queue.get_nowait())
             if self._overrun:
@@ -155,6 +166,12 @@ class AlarmLine:
                 batch.append({"finding": "overrun", "t": batch[-1]["t"], "text": text})
                 self._overrun = 0
             await self._deliver(batch)
+
+    def _pause_s(self) -> float:
+        """How long to wait so as not to flood."""
+        if len(self._sent) < BURST:
+            return 0.0
+        return max(self._sent[0] + BURST_S - self._now_s(), 0.0)
 
     def _silenced(self, key: Key, now: float) -> bool:
         return any(
@@ -168,24 +185,27 @@ class AlarmLine:
             self._overrun += 1
 
     async def _deliver(self, batch: Sequence[Finding]) -> None:
-        sent = self._send(self.settings, batch)
-        wrong = await sent if asyncio.iscoroutine(sent) else sent
+        self._sent.append(self._now_s())
+        wrong = await self._send(self.settings, batch)
         if wrong and wrong != self.failed:
             self._say(f"alarm {self.name} CANNOT WARN: {wrong}")
         elif self.failed and not wrong:
             self._say(f"alarm {self.name} can warn again")
-        self.failed = str(wrong) if wrong else None
+        self.failed = wrong or None
 
 
-async def deliver(settings: Alarm, batch: Sequence[Finding]) -> str | None:
-    """Run the command and send the notifications; what went wrong, or None."""
+async def deliver(near: Path, settings: Alarm, batch: Sequence[Finding]) -> str | None:
+    """Hand findings to the alarm's command and addresses; what went wrong, or None.
+
+    near : folder of the bench file, from which the file of addresses is named
+    """
     wrongs = []
     if settings.command:
         wrongs.append(await run_command(settings.command, batch))
     if settings.notify:
-        wrongs.append(await asyncio.to_thread(notify, Path(settings.notify), batch))
-    said = "; ".join(wrong for wrong in wrongs if wrong)
-    return said or None
+        addresses = near / Path(settings.notify).expanduser()
+        wrongs.append(await asyncio.to_thread(notify, addresses, batch))
+    return "; ".join(wrong for wrong in wrongs if wrong) or None
 
 
 async def run_command(command: Sequence[str], batch: Sequence[Finding]) -> str | None:
@@ -207,11 +227,20 @@ async def run_command(command: Sequence[str], batch: Sequence[Finding]) -> str |
             await process.communicate(text)
     except TimeoutError:
         return f"{command[0]}: not done within {COMMAND_S:.0f} s"
+    except (BrokenPipeError, ConnectionResetError):
+        pass  # it ended without reading: its exit code tells
     finally:
-        if process.returncode is None:
-            os.killpg(process.pid, signal.SIGKILL)
-            await process.wait()
+        _kill_group(process.pid)
+        await process.wait()
     return None if process.returncode == 0 else f"{command[0]}: exit {process.returncode}"
+
+
+def _kill_group(leader: int) -> None:
+    """End what a command left behind, too."""
+    try:
+        os.killpg(leader, signal.SIGKILL)
+    except ProcessLookupError:
+        pass
 
 
 def notify(addresses: Path, batch: Sequence[Finding]) -> str | None:
@@ -220,15 +249,30 @@ def notify(addresses: Path, batch: Sequence[Finding]) -> str | None:
         import apprise
     except ImportError:
         return "notify needs the extra `alerts`: pip install 'stillbrine[alerts]'"
+    logging.getLogger("apprise").setLevel(logging.CRITICAL + 1)  # it would write addresses
     try:
-        if stat.S_IMODE(addresses.stat().st_mode) & 0o077:
-            return f"{addresses.name}: readable by others; expected mode 0600"
-        urls = [url for url in addresses.read_text().split() if not url.startswith("#")]
-    except OSError as wrong:
-        return f"{addresses.name}: {wrong.strerror}"
+        lines = [each.strip() for each in secret(addresses).splitlines()]
+    except PlaceError as wrong:
+        return str(wrong)
     sender = apprise.Apprise()
-    for url in urls:
-        sender.add(url)
-    body = "\n".join(line(finding) for finding in batch)
-    sent = bool(urls) and sender.notify(title="stillbrine", body=body)
+    urls = [each for each in lines if each and not each.startswith("#")]
+    taken = [bool(sender.add(url)) for url in urls]
+    body = "\n".join(in_words(finding) for finding in batch)
+    if not taken or not all(taken):
+        at = taken.index(False) + 1 if taken else 0
+        what = f"address {at} is none that can be used" if taken else "no address in it"
+        return f"{addresses.name}: {what}; expected one a line"
+    sent = sender.notify(title="stillbrine", body=body, body_format=apprise.NotifyFormat.TEXT)
     return None if sent else f"{addresses.name}: not every address took the notification"
+
+
+def in_words(finding: Finding) -> str:
+    """A finding as a line for people."""
+    kind, whose, named = key_of(finding)
+    over = "over: " if finding.get("to_t") is not None else ""
+    why = finding.get("text") or finding.get("evidence") or finding.get("why") or ""
+    value = finding.get("value")
+    figure = f"{value:.6g} beyond {finding.get('bound'):.6g}" if kind == "limit" and value else ""
+    words = [over + kind, named, f"({whose})" if whose else "", figure]
+    said = " ".join(word for word in words if word)
+    return printable(f"{said}: {why}" if why else said, 500)

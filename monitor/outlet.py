@@ -6,10 +6,12 @@ lines wait; what does not fit is counted and said.
 
 from __future__ import annotations
 
+import os
 import queue
 import sys
 import threading
 from types import TracebackType
+from typing import TextIO
 
 from monitor.findings import Finding, line
 from monitor.printable import printable
@@ -41,6 +43,8 @@ class Outlet:
         except queue.Full:
             return
         self._thread.join(timeout=2)
+        _let_go(sys.stdout)
+        _let_go(sys.stderr)
 
     def finding(self, finding: Finding) -> None:
         """Print a finding on standard output."""
@@ -59,7 +63,22 @@ class Outlet:
     def _write(self) -> None:
         while (item := self._waiting.get()) is not None:
             out, text = item
-            try:
-                print(text, file=sys.stdout if out else sys.stderr, flush=True)
-            except (OSError, ValueError):
-                self._lost += 1  # nobody reads; the findings file beside the log has it all
+            if self._lost and not self._waiting.qsize():
+                lost, self._lost = self._lost, 0
+                _print(f"{lost} lines could not be printed in time", sys.stderr)
+            _print(text, sys.stdout if out else sys.stderr)
+
+
+def _print(text: str, to: TextIO) -> None:
+    try:
+        print(text, file=to, flush=True)
+    except (OSError, ValueError):
+        pass  # nobody reads; the findings file beside the log has it all
+
+
+def _let_go(stream: TextIO) -> None:
+    """What is left in a pipe that nobody reads must not be an error at exit."""
+    try:
+        stream.flush()
+    except (OSError, ValueError):
+        os.dup2(os.open(os.devnull, os.O_WRONLY), stream.fileno())

@@ -1,46 +1,49 @@
 """The daemon: ports in, logs and findings out, orders in between. One service a bench.
 
 It holds no judgement of its own: a Recorder a probe writes and judges, this joins them to ports,
-clock, control socket and the process's signals.
+clock, control socket, alarms and the process's signals. Nothing that goes wrong in one of these
+ends the recording: it is said, and the rest goes on.
 """
 
 from __future__ import annotations
 
 import asyncio
-import fcntl
-import os
 import secrets
-from collections.abc import Callable, Mapping, Sequence
-from datetime import datetime
+import traceback
+from collections.abc import Callable, Coroutine, Iterator, Mapping, Sequence
+from contextlib import contextmanager
+from datetime import date, datetime
+from functools import partial
 from pathlib import Path
-from typing import IO, Any
+from typing import Any
 
 from drivers.line import Decoder
-from drivers.serial_port import SerialPort
+from drivers.serial_port import PortError, SerialPort
 from monitor import bench as bench_file
-from monitor.alarms import AlarmError, AlarmLine, check_owner
-from monitor.bench import Bench, BenchError
+from monitor.alarms import AlarmError
+from monitor.bells import Bells
+from monitor.bench import Bench
 from monitor.calibration import CalibrationError, fit
-from monitor.chain import calibration_of
 from monitor.clock import Clock
 from monitor.control import Answer, ControlServer
-from monitor.findings import Finding, line
+from monitor.findings import Finding
 from monitor.follow import Follower
-from monitor.logbook import reader
+from monitor.housekeeping import Housekeeping
 from monitor.logbook.codec import utc_of, utc_text
-from monitor.logbook.writer import LogWriter
+from monitor.logbook.reader import LogError
+from monitor.logbook.writer import LogWriteError, LogWriter
 from monitor.orders import Order, OrderError, parse
-from monitor.places import private_folder, socket_path
+from monitor.places import HeldError, Lock, private_folder, socket_path
 from monitor.recorder import Head, Recorder
+from monitor.runs import carried_by_last_run, head_of
 from monitor.supervisor import notify, watchdog_s
-from monitor.tanks import Seen, Together
+from monitor.telling import Telling
 
 FLUSH_S = 0.03
 SYNC_S = 1.5
 ASLEEP_S = 2.0
+STALLED_S = 5.0  # of the host: as long without a turn, rows may have been missed
 CLOCK_STEP_S = 1.0
-
-PortFactory = Callable[..., SerialPort]
 
 
 class ServiceError(RuntimeError):
@@ -68,94 +71,137 @@ class Service:
         self.stopping = asyncio.Event()
         self.started = clock.utc()
         self.zero_s = clock.now_s()
-        self.hooks: list[Callable[[Finding], None]] = [tell]
+        self.telling = Telling(folder, say)
+        self.telling.hooks.append(tell)
+        self.bells = Bells(bench_path, clock, say)
+        self.telling.hooks.append(self.bells.take)
+        self.housekeeping = Housekeeping(folder, clock, self.bells.trouble, say)
         self._say = say
-        self._run = secrets.token_hex(8)
         self._ports: dict[str, asyncio.Task[None]] = {}
-        self._together = Together()
-        self._files: dict[str, IO[str]] = {}
-        self._lock: int | None = None
-        self.alarms: list[AlarmLine] = []
-        self._day = self.started.date()
+        self._joining: list[asyncio.Task[None]] = []
+        self._days: dict[str, date] = {}
         self._seen = (clock.now_s(), clock.awake_s(), self.started)
 
     async def run(self) -> None:
         """Record and judge until `stop` is called. Raises ServiceError if it cannot start."""
-        self._take_lock()
-        self._raise_alarms()
+        asyncio.get_running_loop().set_exception_handler(self._unhandled)
         control = ControlServer(socket_path(self.bench_path), self._ordered)
-        try:
-            for probe in self.bench.probe:
-                self._start_probe(probe)
-            await control.open()
-            async with asyncio.TaskGroup() as group:
-                tasks = [group.create_task(each) for each in (self._flushes(), self._ticks())]
-                tasks.append(group.create_task(self._syncs()))
-                tasks += [group.create_task(alarm.work()) for alarm in self.alarms]
-                tasks.append(group.create_task(self._watchdog()))
+        around: list[asyncio.Task[None]] = []
+        with self._locks(control.path):
+            try:
+                await self._start()
+                await control.open()
+                around = [asyncio.create_task(each) for each in self._around()]
                 notify("READY=1")
                 await self.stopping.wait()
                 notify("STOPPING=1")
-                for task in [*tasks, *self._ports.values()]:
-                    task.cancel()
-        finally:
-            await control.close()
-            await asyncio.gather(*self._ports.values(), return_exceptions=True)
-            for recorder in self.recorders.values():
-                recorder.end()
-            for file in self._files.values():
-                file.close()
-            if self._lock is not None:
-                os.close(self._lock)
+            finally:
+                await control.close()
+                await _ended([*around, *self._ports.values(), *self._joining])
+                await self.bells.close()
+                for probe in [*self.recorders]:
+                    self._end(probe)
+
+    @contextmanager
+    def _locks(self, socket: Path) -> Iterator[None]:
+        """One service a folder and a bench file. Raises ServiceError, PlaceError."""
+        private_folder(self.folder)
+        here = "a service already records here; stop it or choose --logs"
+        bench = f"a service already runs {self.bench_path.name}; stop it, or watch it"
+        try:
+            with Lock(self.folder / ".lock", here), Lock(socket.with_suffix(".lock"), bench):
+                yield
+        except HeldError as wrong:
+            raise ServiceError(str(wrong)) from None
 
     def stop(self) -> None:
         """End cleanly: close the logs, give back the ports."""
         self.stopping.set()
 
-    def reload(self) -> None:
-        """Read the bench file again; if it does not check, say so and carry on with the old one."""
+    async def _start(self) -> None:
+        """Begin a run of every probe. Raises ServiceError."""
         try:
-            new = bench_file.parse(self.bench_path.read_text(), self.bench_path.name)
-            calibrations = {name: head_of(new, name) for name in new.probe}
-        except (OSError, UnicodeDecodeError, BenchError, CalibrationError) as wrong:
-            self._say(f"bench file not taken, the old one stays in force: {wrong}")
-            return
-        old, self.bench = self.bench, new
-        for probe in [*self.recorders]:
-            if probe not in new.probe:
-                self._stop_probe(probe)
-        for probe, settings in calibrations.items():
-            if probe not in self.recorders:
-                self._start_probe(probe)
-                continue
-            if settings != self.recorders[probe].settings:
-                self.recorders[probe].change(settings)
-            if new.probe[probe].port != old.probe[probe].port or (
-                new.probe[probe].baud != old.probe[probe].baud
-            ):
-                self._ports.pop(probe).cancel()
-                self._open_port(probe)
-        self._say("bench file read again")
-
-    def _take_lock(self) -> None:
-        private_folder(self.folder)
-        self._lock = os.open(self.folder / ".lock", os.O_CREAT | os.O_RDWR | os.O_NOFOLLOW, 0o600)
-        try:
-            fcntl.flock(self._lock, fcntl.LOCK_EX | fcntl.LOCK_NB)
-        except BlockingIOError:
-            raise ServiceError(
-                f"{self.folder}: a service already records here; stop it or choose --logs"
-            ) from None
-
-    def _raise_alarms(self) -> None:
-        try:
-            check_owner(self.bench_path, self.bench.alarm)
+            await self._begin([*self.bench.probe])
+            self.bells.hang(self.bench)
         except AlarmError as wrong:
             raise ServiceError(str(wrong)) from None
-        for name, settings in self.bench.alarm.items():
-            alarm = AlarmLine(name, settings, self.clock.now_s, self._say)
-            self.alarms.append(alarm)
-            self.hooks.append(alarm.take)
+        for probe in self.bench.probe:
+            self._open_port(probe)
+
+    async def _begin(self, probes: list[str]) -> None:
+        """Begin a run of these, all with one start. Raises ServiceError."""
+        started, zero_s = self.clock.utc(), self.clock.now_s()
+        while any((self.folder / f"{p}-{started:%Y%m%dT%H%M%SZ}-001.log").exists() for p in probes):
+            await asyncio.sleep(0.05)  # a run that began in this very second was killed
+            started, zero_s = self.clock.utc(), self.clock.now_s()
+        if not self.recorders:
+            self.started, self.zero_s = started, zero_s
+        run = secrets.token_hex(8)
+        for probe in probes:
+            try:
+                await self._record(probe, started, zero_s, run)
+            except (LogWriteError, CalibrationError, PortError, OSError) as wrong:
+                why = wrong.strerror if type(wrong) is OSError else str(wrong)
+                raise ServiceError(f"{self.folder}: {probe}: {why}") from None
+
+    async def _record(self, probe: str, started: datetime, zero_s: float, run: str) -> None:
+        settings = self.bench.probe[probe]
+        if settings.port is None:
+            place = f"{self.bench_path.name}: probe.{probe}.port"
+            raise ServiceError(f"{place}: missing; expected a port to read")
+        head = head_of(self.bench, probe)
+        carried = await asyncio.to_thread(self._carried, probe, started)
+        writer = LogWriter(self.folder, probe, started, run)
+        self.telling.open(probe, started)
+        recorder = Recorder(
+            probe,
+            Decoder(settings),
+            writer,
+            Follower(probe),
+            self.clock,
+            zero_s,
+            lambda found: self.telling.tell(probe, found, zero_s - self.zero_s),
+            self._say,
+            partial(self.bells.trouble, probe),
+            self._watch_clocks,
+        )
+        recorder.begin(head, carried)
+        self.recorders[probe] = recorder
+        self._days[probe] = self.clock.utc().date()
+
+    def _carried(self, probe: str, started: datetime) -> Mapping[str, Any]:
+        try:
+            return carried_by_last_run(self.folder, probe, started, self.bench)
+        except (LogError, OSError, ArithmeticError, LookupError, TypeError, ValueError) as wrong:
+            self._say(f"{probe}: the run before tells nothing, begun clean: {wrong}")
+            return {}
+
+    def _around(self) -> list[Coroutine[None, None, None]]:
+        """All that runs beside the ports."""
+        fast = self.clock.speed
+        tick_s = 1.0 / fast if fast < 20 else 0.05
+        return [
+            self._every(FLUSH_S, self._flush),
+            self._every(tick_s, self._tick),
+            self._every(1.0, self.bells.tick),
+            self._syncs(),
+            self._watchdog(),
+            self.housekeeping.work(lambda: self.bench.logs, self._active),
+        ]
+
+    async def _every(self, every_s: float, act: Callable[[], None]) -> None:
+        while True:
+            await asyncio.sleep(every_s)
+            try:
+                act()
+            except Exception as wrong:
+                self._fault(wrong)
+
+    async def _syncs(self) -> None:
+        while True:
+            await asyncio.sleep(SYNC_S)
+            for recorder in list(self.recorders.values()):
+                await asyncio.to_thread(recorder.writer.sync)
 
     async def _watchdog(self) -> None:
         every_s = watchdog_s()
@@ -163,37 +209,40 @@ class Service:
             notify("WATCHDOG=1")
             await asyncio.sleep(every_s)
 
-    def _start_probe(self, probe: str) -> None:
-        settings = head_of(self.bench, probe)
-        carried = carried_by_last_run(self.folder, probe, self.started)
-        writer = LogWriter(self.folder, probe, self.started, self._run)
-        stamp = f"{self.started:%Y%m%dT%H%M%SZ}"
-        self._files[probe] = _append_only(self.folder / f"{probe}-{stamp}.findings.jsonl")
-        recorder = Recorder(
-            probe,
-            Decoder(self.bench.probe[probe]),
-            writer,
-            Follower(probe),
-            self.clock,
-            self.zero_s,
-            lambda found: self._tell(probe, found),
-            self._say,
-        )
-        recorder.begin(settings, carried)
-        self.recorders[probe] = recorder
-        self._open_port(probe)
+    def _flush(self) -> None:
+        self._watch_clocks()
+        for recorder in self.recorders.values():
+            recorder.flush()
 
-    def _stop_probe(self, probe: str) -> None:
-        self._ports.pop(probe).cancel()
-        self.recorders.pop(probe).end()
-        self._files.pop(probe).close()
+    def _tick(self) -> None:
+        """Once a second of the host: time passes, days end."""
+        today = self.clock.utc().date()
+        for probe, recorder in self.recorders.items():
+            if today > self._days[probe] and recorder.next_part():
+                self._days[probe] = today
+            recorder.tick()
+        self.telling.tell_of_all(self.bench, self.recorders, self.zero_s)
 
-    def _open_port(self, probe: str) -> None:
-        settings = self.bench.probe[probe]
-        recorder = self.recorders[probe]
-        if settings.port is None:
-            place = f"{self.bench_path.name}: probe.{probe}.port"
-            raise ServiceError(f"{place}: missing; expected a port to read")
+    def _watch_clocks(self) -> None:
+        """Write down where the machine slept, this process stood still, the wall clock was set."""
+        before = self._seen
+        self._seen = now = (self.clock.now_s(), self.clock.awake_s(), self.clock.utc())
+        passed = now[0] - before[0]
+        slept = passed - (now[1] - before[1])
+        stepped = (now[2] - before[2]).total_seconds() - passed
+        asleep, stalled = slept > ASLEEP_S, passed > STALLED_S * self.clock.speed
+        for recorder in self.recorders.values():
+            if asleep or stalled:
+                recorder.gap("asleep" if asleep else "stalled")
+            if asleep or abs(stepped) > CLOCK_STEP_S:
+                fields = {"before": utc_text(before[2]), "after": utc_text(now[2])}
+                recorder.event("clock", {**fields, "slept_s": round(max(slept, 0.0), 3)})
+
+    # Ports
+
+    def _open_port(self, probe: str, after: asyncio.Task[None] | None = None) -> None:
+        settings, recorder = self.bench.probe[probe], self.recorders[probe]
+        assert settings.port is not None
         port = SerialPort(
             settings.port,
             settings.baud,
@@ -203,84 +252,97 @@ class Service:
             clock=self.clock,
             reset_on_open=settings.reset_on_open,
         )
-        self._ports[probe] = asyncio.create_task(port.run(), name=f"port of {probe}")
+        self._ports[probe] = asyncio.create_task(self._read(port, after))
+
+    async def _read(self, port: SerialPort, after: asyncio.Task[None] | None) -> None:
+        """Keep a port open once the one before has been given back."""
+        if after is not None:
+            await asyncio.wait([after])
+        while True:
+            try:
+                await port.run()
+            except Exception as wrong:
+                self._fault(wrong)
+                await asyncio.sleep(1.0)
 
     def _down(self, probe: str, why: str) -> None:
         self._say(f"{probe}: {why}")
-        self.recorders[probe].link(False)
+        if (recorder := self.recorders.get(probe)) is not None:
+            recorder.link(False)
 
-    def _tell(self, probe: str, found: Sequence[Finding]) -> None:
-        self._together.take(found)
-        for finding in found:
-            self._files[probe].write(line(finding) + "\n")
-            for hook in self.hooks:
-                hook(finding)
+    def _close_port(self, probe: str) -> asyncio.Task[None]:
+        task = self._ports.pop(probe)
+        task.cancel()
+        return task
 
-    def _tell_of_all(self) -> None:
-        """What takes all the probes, up to the second that all their logs have closed."""
-        seen = []
-        for name, recorder in self.recorders.items():
-            chain = recorder.follower.chain
-            tank = self.bench.probe[name].tank
-            seen.append(Seen(name, tank, chain.closed_t, [(chain.watched, 0.0)]))
-        if not seen:
+    def _end(self, probe: str) -> None:
+        try:
+            self.recorders.pop(probe).end()
+            self.telling.close(probe)
+        except Exception as wrong:
+            self._fault(wrong)
+
+    def _active(self) -> set[Path]:
+        return {recorder.writer.path for recorder in self.recorders.values()}
+
+    def _fault(self, wrong: BaseException) -> None:
+        """A bug of ours: say it once, in one line, and go on."""
+        trace = traceback.extract_tb(wrong.__traceback__)
+        at = f"{Path(trace[-1].filename).name}:{trace[-1].lineno}" if trace else "?"
+        text = f"error of the program, it goes on: {type(wrong).__name__}: {wrong} ({at})"
+        self.bells.trouble("", f"error at {at}", text[:400])
+
+    def _unhandled(self, loop: asyncio.AbstractEventLoop, context: dict[str, Any]) -> None:
+        self._fault(context.get("exception") or RuntimeError(context.get("message")))
+
+    # The bench file read again
+
+    def reload(self) -> None:
+        """Read the bench file again; if it does not check, say so and carry on with the old one."""
+        try:
+            new = bench_file.parse(self.bench_path.read_text("utf-8"), self.bench_path.name)
+            heads = {name: head_of(new, name) for name in new.probe}
+            for name, settings in new.probe.items():
+                if settings.port is None:
+                    place = f"{self.bench_path.name}: probe.{name}.port"
+                    raise ServiceError(f"{place}: missing; expected a port to read")
+            self.bells.hang(new)
+        except (OSError, ValueError, AlarmError, ServiceError, CalibrationError) as wrong:
+            self._say(f"bench file not taken, the old one stays in force: {wrong}")
             return
-        for finding in self._together.advance(seen)[1]:
-            for each in seen:
-                if each.tank == finding["tank"]:
-                    self._files[each.probe].write(line(finding) + "\n")
-            for hook in self.hooks:
-                hook(finding)
+        old, self.bench = self.bench, new
+        for probe in [*self.recorders]:
+            if probe not in new.probe:
+                self._close_port(probe)
+                self._end(probe)
+        for probe in [*self.recorders]:
+            if heads[probe] != self.recorders[probe].settings:
+                self._change(probe, old, heads[probe])
+        fresh = [probe for probe in new.probe if probe not in self.recorders]
+        if fresh:
+            self._joining.append(asyncio.create_task(self._join(fresh)))
+        self._say("bench file read again")
 
-    async def _flushes(self) -> None:
-        while True:
-            await asyncio.sleep(FLUSH_S)
-            for recorder in self.recorders.values():
-                recorder.flush()
+    def _change(self, probe: str, old: Bench, head: Head) -> None:
+        recorder, was, now = self.recorders[probe], old.probe[probe], self.bench.probe[probe]
+        recorder.change(head)
+        if (was.period_unit, was.tick_hz) != (now.period_unit, now.tick_hz):
+            recorder.decoder = Decoder(now)
+        if (was.port, was.baud, was.reset_on_open) != (now.port, now.baud, now.reset_on_open):
+            recorder.link(False, "moved")
+            self._open_port(probe, after=self._close_port(probe))
 
-    async def _syncs(self) -> None:
-        while True:
-            await asyncio.sleep(SYNC_S)
-            for recorder in list(self.recorders.values()):
-                await asyncio.to_thread(recorder.writer.sync)
+    async def _join(self, probes: list[str]) -> None:
+        """Begin a run of probes that were not there before."""
+        try:
+            await self._begin(probes)
+        except ServiceError as wrong:
+            self._say(f"not recorded: {wrong}")
+        for probe in probes:
+            if probe in self.recorders:
+                self._open_port(probe)
 
-    async def _ticks(self) -> None:
-        """Once a second of the host: time passes, clocks step, days end."""
-        while True:
-            await asyncio.sleep(1.0 / self.clock.speed if self.clock.speed < 20 else 0.05)
-            self._watch_clocks()
-            utc = self.clock.utc()
-            if utc.date() > self._day:
-                self._day = utc.date()
-                for recorder in self.recorders.values():
-                    recorder.next_part()
-            for recorder in self.recorders.values():
-                recorder.tick()
-            self._tell_of_all()
-            for alarm in self.alarms:
-                alarm.tick()
-            for file in self._files.values():
-                file.flush()
-
-    def _watch_clocks(self) -> None:
-        """Write down where the machine slept and where the wall clock was set."""
-        before, self._seen = (
-            self._seen,
-            (
-                self.clock.now_s(),
-                self.clock.awake_s(),
-                self.clock.utc(),
-            ),
-        )
-        passed = self._seen[0] - before[0]
-        slept = passed - (self._seen[1] - before[1])
-        stepped = (self._seen[2] - before[2]).total_seconds() - passed
-        for recorder in self.recorders.values():
-            if slept > ASLEEP_S:
-                recorder.gap("asleep")
-            if slept > ASLEEP_S or abs(stepped) > CLOCK_STEP_S:
-                fields = {"before": utc_text(before[2]), "after": utc_text(self._seen[2])}
-                recorder.event("clock", {**fields, "slept_s": round(max(slept, 0.0), 3)})
+    # Orders
 
     async def _ordered(self, message: dict[str, Any]) -> Answer:
         """Carry out an order; the answer is given once it is in the log."""
@@ -291,13 +353,17 @@ class Service:
             return {"ok": True}
         try:
             order = parse(message, self.bench)
+            if any(self.recorders[probe].paused for probe in order.probes):
+                raise OrderError("nothing can be written to the log now; order not taken")
             written = [self._write(probe, order) for probe in order.probes]
         except (OrderError, CalibrationError) as wrong:
             return {"ok": False, "why": str(wrong)}
-        if order.kind == "silence":
-            self._silence(order)
+        except KeyError as wrong:
+            return {"ok": False, "why": f"probe {wrong} is not recorded now"}
         if not all(written):
             return {"ok": False, "why": "nothing can be written to the log now; order not taken"}
+        if order.kind == "silence":
+            self._silence(order)
         return {"ok": True, "time_s": self.recorders[order.probes[0]].run_s - order.ago_s}
 
     def _write(self, probe: str, order: Order) -> bool:
@@ -310,8 +376,7 @@ class Service:
 
     def _silence(self, order: Order) -> None:
         left_s = (utc_of(order.fields["until_utc"]) - self.clock.utc()).total_seconds()
-        for alarm in self.alarms:
-            alarm.silence(str(order.fields["what"]), self.clock.now_s() + left_s)
+        self.bells.silence(str(order.fields["what"]), self.clock.now_s() + left_s)
 
     def _chosen(self, probe: str, named: str) -> Mapping[str, Any]:
         """The calibration that a set of standards gives. Raises OrderError, CalibrationError."""
@@ -330,62 +395,14 @@ class Service:
             "rows": recorder.rows,
             "linked": recorder.linked,
             "paused": recorder.paused,
+            "broken": recorder.broken,
             "unwritten": recorder.unwritten,
             "rejected": recorder.decoder.counts.total(),
+            "cannot_warn": self.bells.failures,
         }
 
 
-def _append_only(path: Path) -> IO[str]:
-    mode = os.O_WRONLY | os.O_APPEND | os.O_CREAT | os.O_NOFOLLOW
-    return os.fdopen(os.open(path, mode, 0o600), "w", encoding="ascii")
-
-
-def head_of(bench: Bench, probe: str) -> Head:
-    """The events at the head of a part. Raises CalibrationError."""
-    head: Head = [("bench", bench.for_probe(probe).as_event())]
-    calibration = calibration_of(bench, probe)
-    if calibration is not None:
-        head.append(("calibration", calibration.as_event()))
-    return head
-
-
-def carried_by_last_run(folder: Path, probe: str, started: datetime) -> Mapping[str, Any]:
-    """What the last run of this probe would tell one that starts now.
-
-    Nothing needs to have been saved when that run ended: its last part is judged again.
-    """
-    last = reader.last_part(folder, probe)
-    if last is None:
-        return {}
-    follower = Follower(probe, first_part=last.part)
-    for chunk in last.chunks():
-        follower.feed(chunk)
-    shift = (last.header.started - started).total_seconds()
-    return dict(shifted_times(follower.chain.carry(), shift))
-
-
-def shifted_times(carried: Any, by_s: float) -> Any:
-    """Carried state with its times counted from another run's `started`.
-
-    A key that holds a time is `t`, `time_s`, or ends in `_t`: the rule of every `carry`.
-    """
-    if isinstance(carried, dict):
-        return {
-            key: _moved(value, by_s) if _is_time(key) else shifted_times(value, by_s)
-            for key, value in carried.items()
-        }
-    if isinstance(carried, list | tuple):
-        return [shifted_times(each, by_s) for each in carried]
-    return carried
-
-
-def _moved(value: Any, by_s: float) -> Any:
-    if isinstance(value, list | tuple):
-        return [_moved(each, by_s) for each in value]
-    if isinstance(value, int | float) and not isinstance(value, bool):
-        return value + by_s
-    return value
-
-
-def _is_time(key: str) -> bool:
-    return key in ("t", "time_s") or key.endswith("_t")
+async def _ended(tasks: Sequence[asyncio.Task[Any]]) -> None:
+    for task in tasks:
+        task.cancel()
+    await asyncio.gather(*tasks, return_exceptions=True)

@@ -1,4 +1,4 @@
-"""Findings to their files and to whoever listens; and the fold over a tank's probes, live.
+"""Findings to their files and to whoever listens; and the fold over all probes, live.
 
 Rules:
 - A findings file can be made again from its log: what cannot be written to it is counted and said,
@@ -9,14 +9,14 @@ Rules:
 from __future__ import annotations
 
 import os
-from collections.abc import Callable, Iterable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from datetime import datetime
 from pathlib import Path
 
 from monitor.bench import Bench
 from monitor.findings import Finding, line, shifted
 from monitor.recorder import Recorder
-from monitor.tanks import UNWATCHED_S, Unwatched
+from monitor.tanks import Seen, Together
 
 Hook = Callable[[Finding], None]
 
@@ -58,7 +58,7 @@ class Telling:
         self._folder = folder
         self._say = say
         self._files: dict[str, FindingsFile] = {}
-        self._tanks: dict[str, Unwatched] = {}
+        self._together = Together()
         self._failed: set[str] = set()
 
     def open(self, probe: str, started: datetime) -> None:
@@ -70,8 +70,9 @@ class Telling:
         if (file := self._files.pop(probe, None)) is not None:
             file.close()
 
-    def tell(self, probe: str, found: Iterable[Finding]) -> None:
-        """These were concluded from this probe's log."""
+    def tell(self, probe: str, found: Sequence[Finding], by_s: float) -> None:
+        """These were concluded from this probe's log; `by_s` brings its times to the common."""
+        self._together.take([shifted(finding, by_s) for finding in found] if by_s else found)
         for finding in found:
             self._keep(probe, finding)
             self.hook(finding)
@@ -84,25 +85,24 @@ class Telling:
             except Exception as wrong:
                 self._once(f"a listener failed ({type(wrong).__name__}: {wrong})")
 
-    def tell_of_tanks(self, bench: Bench, recorders: Mapping[str, Recorder], zero_s: float) -> None:
-        """What takes all the probes of a tank, up to the second that all their logs have closed.
+    def tell_of_all(self, bench: Bench, recorders: Mapping[str, Recorder], zero_s: float) -> None:
+        """What takes all the probes, up to the second that all their logs have closed.
 
-        zero_s : the clock's reading from which the times of these findings count
+        zero_s : the clock's reading from which the common times count
         """
-        for tank in bench.tank:
-            its = {n: r for n, r in recorders.items() if bench.probe[n].tank == tank}
-            if not its:
-                continue
-            chains = [(n, r.follower.chain, r.zero_s - zero_s) for n, r in its.items()]
-            upto_t = min(chain.closed_t + by for _, chain, by in chains)
-            fold = self._tanks.setdefault(tank, Unwatched(tank))
-            watched = [(name, chain.watched, by) for name, chain, by in chains]
-            for finding in fold.advance(upto_t, watched):
-                for name, _, by in chains:
-                    self._keep(name, shifted(finding, -by) if by else finding)
-                self.hook(finding)
-            for _, chain, by in chains:
-                chain.watched.forget(upto_t - by - 2 * UNWATCHED_S)
+        seen = []
+        for name, recorder in recorders.items():
+            chain, by = recorder.follower.chain, recorder.zero_s - zero_s
+            tank = bench.probe[name].tank
+            seen.append(Seen(name, tank, chain.closed_t + by, [(chain.watched, by)]))
+        if not seen:
+            return
+        for finding in self._together.advance(seen)[1]:
+            for each in seen:
+                by = each.runs[0][1]
+                if each.tank == finding["tank"]:
+                    self._keep(each.probe, shifted(finding, -by) if by else finding)
+            self.hook(finding)
 
     def _keep(self, probe: str, finding: Finding) -> None:
         file = self._files[probe]

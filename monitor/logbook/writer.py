@@ -12,10 +12,10 @@ import errno
 import gzip
 import os
 import shutil
-from datetime import datetime, timedelta
+from datetime import datetime
 from pathlib import Path
 
-from monitor.logbook.codec import Header, file_name, parse_name
+from monitor.logbook.codec import Header, file_name
 
 
 ROOM = 262_144  # bytes that must be free again before a recording goes on: the gap, a head, rows
@@ -163,13 +163,3 @@ def compress(path: Path) -> Path:
         temporary.unlink(missing_ok=True)
     path.unlink()
     return packed
-
-
-def outlived(folder: Path, now: datetime, keep_days: float) -> list[Path]:
-    """Finished logs older than is to be kept; only a list, nothing is removed here."""
-    last = (now - timedelta(days=keep_days)).timestamp()
-    return [
-        path
-        for path in sorted(folder.glob("*.log.gz"))
-        if parse_name(path.name) and path.stat().st_mtime < last
-    ]

@@ -26,7 +26,7 @@ from monitor.follow import Follower
 from monitor.logbook.writer import LogWriter
 from monitor.recorder import Recorder
 from monitor.replay import open_logs, replay
-from monitor.service import carried_by_last_run, head_of
+from monitor.runs import carried_by_last_run, head_of
 
 RATE_HZ = 4.0
 
@@ -67,7 +67,7 @@ class Night:
         started = self.clock.utc()
         said: list[Finding] = []
         self.said.append(said)
-        carried = carried_by_last_run(self.folder, "p1", started)
+        carried = carried_by_last_run(self.folder, "p1", started, self.bench)
         self.recorder = Recorder(
             "p1",
             Decoder(self.bench.probe["p1"]),

@@ -10,7 +10,7 @@ import signal
 import stat
 from collections.abc import Iterator
 from contextlib import contextmanager
-from datetime import UTC, datetime, timedelta
+from datetime import UTC, datetime
 from pathlib import Path
 
 import pytest
@@ -127,16 +127,3 @@ def test_compress_on_a_full_disk_harms_nothing(tmp_path: Path) -> None:
     with full_at(5000), pytest.raises(OSError):
         writing.compress(path)
     assert os.listdir(tmp_path) == [path.name]
-
-
-def test_outlived_only_lists(tmp_path: Path) -> None:
-    for day in (1, 9):
-        path = tmp_path / f"p1-2026030{day}T180000Z-001.log.gz"
-        path.write_bytes(b"")
-        at = (STARTED - timedelta(days=14 - day)).timestamp()
-        os.utime(path, (at, at))
-    (tmp_path / "holiday.log.gz").write_bytes(b"")
-    os.utime(tmp_path / "holiday.log.gz", (0, 0))
-    (old,) = writing.outlived(tmp_path, STARTED, 10)
-    assert old.name == "p1-20260301T180000Z-001.log.gz"
-    assert len(os.listdir(tmp_path)) == 3
