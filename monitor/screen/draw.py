@@ -234,7 +234,7 @@ def strip(
     low, high = scale
 
     def at(x: float) -> float:
-        return (x - low) / (high - low) * width
+        return min(max((x - low) / (high - low) * width, -1.0), width + 1.0)
 
     bounds = [min(max(int(at(bound)), 0), width - 1) for bound in aim]
     cells = ["·" if bounds[0] < i < bounds[1] else " " for i in range(width)]
@@ -253,6 +253,6 @@ def strip(
     mark = "◇" if hollow else "◆"
     place = at(value)
     cells[int(min(max(place, 0), width - 1))] = (
-        "◀" if place < 0 else "▶" if place >= width else mark
+        "◀" if place < 0 else "▶" if place > width else mark
     )
     return "".join(cells)

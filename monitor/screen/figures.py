@@ -70,7 +70,8 @@ def value_text(value: float, u95: float, scale: Scale) -> str:
     behind = places(doubt) if math.isfinite(doubt) else (1 if scale.name == "us" else 4)
     text = pointed(f"{shown:.{behind}f}")
     if len(text) > WHOLE + 1 + PLACES:
-        text = f"{shown:{WHOLE + 1 + PLACES}.3g}"
+        room = WHOLE + 1 + PLACES
+        text = f"{shown:{room}.{min(behind, max(room - 1 - len(f'{shown:.0f}'), 0))}f}"
     if not math.isfinite(doubt):
         return f"{text}{'':{DOUBT_CELLS}}"
     return text + f"±{doubt:<{DOUBT_CELLS}.{behind}f}"[:DOUBT_CELLS]

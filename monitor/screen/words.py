@@ -97,7 +97,7 @@ def _limit(lane: Lane, clock: Clock, scale: Scale) -> Said | None:
                 " most",
                 ACT,
             )
-        bound = short_text(finding["bound"], 1e-4, scale)
+        bound = f"{scale.of(finding['bound']):.4g}"
         side = "ABOVE" if which == "high" else "BELOW"
         return Said(f"{side} its aim ({bound}) since {since}", ACT)
     return None
