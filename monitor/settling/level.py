@@ -1,18 +1,17 @@
 """Where the water stands still, and whether it has left that level without a dose.
 
-The level follows slow changes (evaporation, a fouling probe) ten to forty seconds behind, so that
-a change of the last seconds stands out against it. A second costs a few Python floats.
+The level follows slow changes (evaporation, a fouling probe) four minutes behind, so that a faster
+change stands out against it. A second costs a few Python floats.
 """
 
 from __future__ import annotations
 
 import math
-from collections import deque
 
 from monitor.blocks import NAN
 
 BLOCK = 10  # readings
-BLOCKS = 4  # the newest of them does not count yet
+FOLLOWS = 24  # blocks: a change slower than a band in so many is followed
 LEFT_BANDS, LEFT_NOISES = 3.0, 6.0  # off the level by both: a disturbance
 
 
@@ -23,7 +22,7 @@ class Level:
         self.band = band_pct
         self.pct = NAN
         self.bound = math.inf
-        self._blocks: deque[float] = deque(maxlen=BLOCKS)
+        self._blocks = 0  # that the level is a mean of
         self._sum, self._count = 0.0, 0
 
     def add(self, salinity_pct: float) -> None:
@@ -31,11 +30,8 @@ class Level:
         self._sum += salinity_pct
         self._count += 1
         if self._count == BLOCK:
-            self._blocks.append(self._sum / BLOCK)
+            self._follow(self._sum / BLOCK)
             self._sum, self._count = 0.0, 0
-            if len(self._blocks) > 1:
-                older = list(self._blocks)[:-1]
-                self.pct = sum(older) / len(older)
 
     def left(self, filtered_pct: float) -> bool:
         """Whether the filtered value is off the level (never, where there is none yet)."""
@@ -49,14 +45,20 @@ class Level:
         """The water has come to rest here."""
         self.restart()
         self.pct = salinity_pct
-        self._blocks.extend([salinity_pct] * 2)
+        self._blocks = 2
 
     def restart(self) -> None:
         """Readings so far are not followed by more of the same; the level stays until then."""
         self._sum, self._count = 0.0, 0
-        self._blocks.clear()
+        self._blocks = 0
 
     def forget(self) -> None:
         """Nothing is known of the level any more."""
         self.restart()
         self.pct = NAN
+
+    def _follow(self, mean_pct: float) -> None:
+        if self.pct != self.pct:
+            self.pct = mean_pct
+        self._blocks = min(self._blocks + 1, FOLLOWS)
+        self.pct += (mean_pct - self.pct) / self._blocks
