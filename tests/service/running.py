@@ -24,6 +24,7 @@ from drivers.virtual_tank.line_out import shelf
 from drivers.virtual_tank.mixing import Mixing
 from drivers.virtual_tank.probe import Circuit, Climate, Probe
 from drivers.virtual_tank.tank import Tank
+from monitor.blocks import Block
 from monitor.clock import HostClock
 from monitor.control import give_now
 from monitor.logbook.parser import Parser
@@ -31,7 +32,7 @@ from monitor.logbook.parser import Parser
 MAIN = "from monitor.cli import main; main()"
 
 
-class Bench:
+class OnPtys:
     """A virtual bench in a thread of its own, and the bench file that belongs to it."""
 
     def __init__(self, folder: Path, probes: int = 1, rate_hz: float = 10.0) -> None:
@@ -72,7 +73,7 @@ class Bench:
         self._loop.call_soon_threadsafe(lambda: (act(), done.set()))
         assert done.wait(5)
 
-    def __enter__(self) -> Bench:
+    def __enter__(self) -> OnPtys:
         self._thread.start()
         return self
 
@@ -139,7 +140,7 @@ class Run:
 
 
 @contextmanager
-def running(bench: Bench, where: Path, logs: Path | None = None) -> Iterator[Run]:
+def running(bench: OnPtys, where: Path, logs: Path | None = None) -> Iterator[Run]:
     """A service that reads, ended with the block if it still runs."""
     run = Run(bench.path, logs or where / "logs", where)
     try:
@@ -169,9 +170,5 @@ def events(path: Path, kind: str) -> list[dict[str, Any]]:
 
 def times(path: Path) -> list[float]:
     """Times of the rows of a log."""
-    return [
-        float(t)
-        for item in Parser().feed(path.read_bytes())
-        for t in getattr(item, "time_s", ())
-        if not isinstance(item.time_s, float)
-    ]
+    blocks = [item for item in Parser().feed(path.read_bytes()) if isinstance(item, Block)]
+    return [float(t) for block in blocks for t in block.time_s]

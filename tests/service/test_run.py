@@ -13,12 +13,12 @@ from pathlib import Path
 import pytest
 
 from monitor.control import ControlError
-from tests.service.running import MAIN, Bench, Run, events, running, times, until
+from tests.service.running import MAIN, OnPtys, Run, events, running, times, until
 
 
 @pytest.fixture
-def bench(tmp_path: Path) -> Iterator[Bench]:
-    with Bench(tmp_path) as made:
+def bench(tmp_path: Path) -> Iterator[OnPtys]:
+    with OnPtys(tmp_path) as made:
         yield made
 
 
@@ -29,7 +29,7 @@ def replayed(*logs: Path) -> list[str]:
     return [each for each in done.stdout.splitlines() if '"unwatched"' not in each]
 
 
-def test_orders_are_answered_once_they_are_in_the_log(bench: Bench, tmp_path: Path) -> None:
+def test_orders_are_answered_once_they_are_in_the_log(bench: OnPtys, tmp_path: Path) -> None:
     with running(bench, tmp_path) as run:
         for n in range(20):
             run.order("note", {"text": f"n{n}", "by": "ab"})
@@ -51,7 +51,7 @@ def test_orders_are_answered_once_they_are_in_the_log(bench: Bench, tmp_path: Pa
 
 
 @pytest.mark.parametrize("number", [signal.SIGTERM, signal.SIGINT])
-def test_a_signal_ends_it_cleanly(bench: Bench, tmp_path: Path, number: int) -> None:
+def test_a_signal_ends_it_cleanly(bench: OnPtys, tmp_path: Path, number: int) -> None:
     with running(bench, tmp_path) as run:
         assert run.end(number) == 0
         assert run.log().read_text().splitlines()[-1].endswith(" end {}")
@@ -59,7 +59,7 @@ def test_a_signal_ends_it_cleanly(bench: Bench, tmp_path: Path, number: int) -> 
         assert "Traceback" not in run.said
 
 
-def test_findings_printed_are_those_of_the_replay(bench: Bench, tmp_path: Path) -> None:
+def test_findings_printed_are_those_of_the_replay(bench: OnPtys, tmp_path: Path) -> None:
     with running(bench, tmp_path) as run:
         bench.do(lambda: bench.virtual.dose("t1", "saline", 60.0, 3.0))
         run.order("dose", {"tank": "t1", "liquid": "saline", "volume_ml": 60.0, "open_s": 3.0})
@@ -75,7 +75,9 @@ def test_findings_printed_are_those_of_the_replay(bench: Bench, tmp_path: Path) 
         assert (run.logs / kept).read_text() == run.out.read_text()
 
 
-def test_sighup_takes_a_good_bench_file_and_refuses_a_bad_one(bench: Bench, tmp_path: Path) -> None:
+def test_sighup_takes_a_good_bench_file_and_refuses_a_bad_one(
+    bench: OnPtys, tmp_path: Path
+) -> None:
     with running(bench, tmp_path) as run:
         bench.write('[nonsense]\nx = "\x1b[31m"\n'.replace("\x1b", "\\u001b"))
         run.process.send_signal(signal.SIGHUP)
@@ -92,7 +94,7 @@ def test_sighup_takes_a_good_bench_file_and_refuses_a_bad_one(bench: Bench, tmp_
         assert run.told == replayed(run.log())
 
 
-def test_sighup_with_another_baud_opens_the_port_anew(bench: Bench, tmp_path: Path) -> None:
+def test_sighup_with_another_baud_opens_the_port_anew(bench: OnPtys, tmp_path: Path) -> None:
     with running(bench, tmp_path) as run:
         bench.text = bench.text.replace("[probe.p1]\n", "[probe.p1]\nbaud = 57600\n")
         bench.write("")
@@ -104,7 +106,7 @@ def test_sighup_with_another_baud_opens_the_port_anew(bench: Bench, tmp_path: Pa
 
 
 def test_a_probe_is_taken_away_and_added_again(tmp_path: Path) -> None:
-    with Bench(tmp_path, probes=2) as bench, running(bench, tmp_path) as run:
+    with OnPtys(tmp_path, probes=2) as bench, running(bench, tmp_path) as run:
         until(lambda: run.rows("p2") > 3)
         whole = bench.text
         at = whole.index("[probe.p2]"), whole.index("[liquid.")
@@ -125,7 +127,7 @@ def test_a_probe_is_taken_away_and_added_again(tmp_path: Path) -> None:
         assert "error of the program" not in run.said
 
 
-def test_one_service_a_folder_and_one_a_bench_file(bench: Bench, tmp_path: Path) -> None:
+def test_one_service_a_folder_and_one_a_bench_file(bench: OnPtys, tmp_path: Path) -> None:
     with running(bench, tmp_path) as run:
         second = Run(bench.path, run.logs, tmp_path)
         assert second.process.wait(15) == 1
@@ -137,7 +139,7 @@ def test_one_service_a_folder_and_one_a_bench_file(bench: Bench, tmp_path: Path)
         assert "Traceback" not in run.said
 
 
-def test_port_pulled_and_brought_back_ten_times(bench: Bench, tmp_path: Path) -> None:
+def test_port_pulled_and_brought_back_ten_times(bench: OnPtys, tmp_path: Path) -> None:
     with running(bench, tmp_path) as run:
         for n in range(1, 11):
             before = run.rows()
