@@ -27,6 +27,7 @@ WIDEST_S = 6.0  # longer is no jump but another level
 BIG_UP, BIG_DOWN = math.log(2.6), math.log(0.65)
 BIG_WIDEST_S = 2.5
 LEAST_BIG = 2
+TALL = 3.0  # times a full jump's height: weighs half as much again
 LEAST_UPS, LEAST_UPS_DOSE, LEAST_UPS_MIXING = 2.0, 3.0, 4.0
 CLEAR = (4.0, 40.0, 120.0)  # mean intervals, at least s, at most s without a jump
 
@@ -143,7 +144,7 @@ class Jumps:
         start, _, height = run
         if t - start > WIDEST_S:
             return
-        weight = 1.0 if abs(height) > least else 0.5
+        weight = 1.5 if abs(height) > TALL * least else 1.0 if abs(height) > least else 0.5
         last = self.last[-1] if self.last else None
         if last is not None and start - last.end_t < JOIN_S and (last.height > 0) is (height > 0):
             height = max(last.height, height, key=abs)

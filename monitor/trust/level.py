@@ -32,7 +32,7 @@ LINE_N = 12
 BACK_S = 30.0
 SETTLE_S = 8.0  # after a dose has run in before the level may lock
 MIX_S, MIX_LATE_S = 7, 3
-MIX_GATE, MIX_SDS, MIX_LEAK = 0.03, 6.0, 0.93
+MIX_GATE, MIX_SDS, MIX_SCALES = 0.03, 6.0, 9
 AFTER_DOSE_S = 300.0
 
 
@@ -66,7 +66,7 @@ class Level:
         self.step_ln = 0.0  # largest |ln| step that the newest dose can make
         self._lost = 0
         self._recent: deque[tuple[int, Floats, Floats]] = deque(maxlen=MIX_S)
-        self._scale = 0.0
+        self._scales: deque[float] = deque(maxlen=MIX_SCALES)
         # calm seconds with readings beyond the inner gate; their level and inner gate
         self.edgy: deque[tuple[Second, float, float]] = deque(maxlen=64)
 
@@ -106,7 +106,7 @@ class Level:
         self.locked = False
         self._lost = 0
         self._recent.clear()
-        self._scale = 0.0
+        self._scales.clear()
 
     def forget(self) -> None:
         """What was read before tells nothing of what comes (out and back, a gap)."""
@@ -198,9 +198,11 @@ class Level:
         self._lock(second)
         if len(recent) <= MIX_LATE_S:
             return []
-        q40, q10 = np.quantile(np.concatenate([ln for _, _, ln in recent]), (0.4, 0.1)).tolist()
-        self._scale = max((q40 - q10) / 1.03, MIX_LEAK * self._scale)
-        gate = max(GATE_SDS * self.noise, MIX_SDS * self._scale, MIX_GATE)
+        ordered = np.sort(np.concatenate([ln for _, _, ln in recent]))
+        q40, q10 = (float(ordered[int(share * len(ordered))]) for share in (0.4, 0.1))
+        self._scales.append((q40 - q10) / 1.03)
+        usual = sorted(self._scales)[len(self._scales) // 2]
+        gate = max(GATE_SDS * self.noise, MIX_SDS * usual, MIX_GATE)
         k, centre_s, centre_ln = recent[-1 - MIX_LATE_S]
         if not self.locked:
             inside = np.abs(ln_us - q40) <= gate
