@@ -162,6 +162,7 @@ def child(command_line: Sequence[str], socket: Path) -> Iterator[subprocess.Pope
             start_new_session=True,  # the terminal's Ctrl-C is for the screen
         )
         try:
+            _load_meanwhile()
             if not _answers(process, socket):
                 _end(process)
                 raise _failure(process.returncode, said)
@@ -170,6 +171,12 @@ def child(command_line: Sequence[str], socket: Path) -> Iterator[subprocess.Pope
             _end(process)
         if process.returncode not in (0, -signal.SIGTERM):
             raise _failure(process.returncode, said)
+
+
+def _load_meanwhile() -> None:
+    """What the screen needs takes as long to load as a service to start: both at once."""
+    import monitor.screen.app
+    import monitor.screen.followed  # noqa: F401
 
 
 def _answers(process: subprocess.Popen[bytes], socket: Path) -> bool:

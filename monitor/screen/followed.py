@@ -24,7 +24,7 @@ from monitor.screen.source import ActError
 from monitor.tanks import Unwatched
 from monitor.view import Lane
 
-BUDGET_S = 0.12  # of a poll
+BUDGET_S = 0.06  # of a poll
 LOOK_S = 2.0  # how often new files are looked for
 DEAD_S = 15.0  # the service writes a line at least every ten seconds
 HISTORY_S = 12 * 3600.0  # with less in the newest part, the one before is read too
