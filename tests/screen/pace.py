@@ -19,8 +19,9 @@ import sys
 import tempfile
 import termios
 import time
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from pathlib import Path
+from typing import Any
 
 from monitor.commands.watch import status
 from monitor.places import socket_path
@@ -34,26 +35,43 @@ TICKS = os.sysconf("SC_CLK_TCK")
 class Terminal:
     """A pseudo-terminal with a program in it."""
 
-    def __init__(self, line: list[str], columns: int, rows: int) -> None:
-        self.ours, theirs = os.openpty()
-        fcntl.ioctl(theirs, termios.TIOCSWINSZ, struct.pack("4H", rows, columns, 0, 0))
-        env = {**os.environ, "TERM": "xterm-256color", "COLORTERM": "truecolor"}
+    def __init__(
+        self, line: list[str], columns: int, rows: int, env: Mapping[str, str] | None = None
+    ) -> None:
+        self.ours, self._theirs = os.openpty()
+        fcntl.ioctl(self._theirs, termios.TIOCSWINSZ, struct.pack("4H", rows, columns, 0, 0))
+        whole = {**os.environ, "TERM": "xterm-256color", "COLORTERM": "truecolor", **(env or {})}
+        self.drawn = b""
         self.began = time.monotonic()
         self.process = subprocess.Popen(
-            line, stdin=theirs, stdout=theirs, stderr=theirs, env=env, start_new_session=True
+            line,
+            stdin=self._theirs,
+            stdout=self._theirs,
+            stderr=self._theirs,
+            env=whole,
+            start_new_session=True,
         )
-        os.close(theirs)
+
+    @property
+    def settings(self) -> list[Any]:
+        """The terminal's settings, as `stty` has them."""
+        return termios.tcgetattr(self._theirs)
+
+    def close(self) -> None:
+        """Give the pseudo-terminal back."""
+        os.close(self.ours)
+        os.close(self._theirs)
 
     def read(self, until: float, words: tuple[bytes, ...] = ()) -> tuple[int, float | None]:
         """Take what it draws until then, or one of these words: bytes, and when that was."""
         n, tail = 0, b""
         while (left := until - time.monotonic()) > 0:
-            if not select.select([self.ours], [], [], left)[0]:
-                break
-            try:
-                data = os.read(self.ours, 65536)
-            except OSError:  # it is gone
-                break
+            if not select.select([self.ours], [], [], min(left, 0.1))[0]:
+                if self.process.poll() is not None:
+                    break
+                continue
+            data = os.read(self.ours, 65536)
+            self.drawn += data
             n += len(data)
             tail = tail[-64:] + data
             if any(word in tail for word in words):
