@@ -22,7 +22,7 @@ from monitor.view import Lane
 
 TEXT_MOST = 200
 DOSE_U = 0.01  # of a volume whose doubt is not stated; common practice, no source
-_NUMBER = re.compile(r"\d{1,7}([.,]\d{1,6})?")
+_NUMBER = re.compile(r"[0-9]{1,7}([.,][0-9]{1,6})?")
 
 
 @dataclass

@@ -43,7 +43,7 @@ class Paper(Widget):
     def __init__(self) -> None:
         super().__init__()
         self._rows: list[list[Run]] = []
-        self._strips: list[Strip] = []
+        self.strips: list[Strip] = []
         self.colours = palette.Palette(palette.DARK)
 
     def show(self, rows: list[list[Run]], width: int) -> None:
@@ -54,19 +54,19 @@ class Paper(Widget):
             return
         style = self.colours.style
         if not same:
-            self._strips = [Strip([])] * len(rows)
+            self.strips = [Strip([])] * len(rows)
         for i in changed:
-            self._strips[i] = Strip([Segment(text, style(ink)) for text, ink in rows[i]], width)
+            self.strips[i] = Strip([Segment(text, style(ink)) for text, ink in rows[i]], width)
         self._rows = rows
         self.refresh(*(Region(0, i, width, 1) for i in changed))
 
     def forget(self) -> None:
         """Draw all again next time."""
-        self._rows, self._strips = [], []
+        self._rows, self.strips = [], []
 
     def render_line(self, y: int) -> Strip:
         """One row."""
-        return self._strips[y] if y < len(self._strips) else Strip.blank(self.size.width)
+        return self.strips[y] if y < len(self.strips) else Strip.blank(self.size.width)
 
 
 class Screen(App[None]):
@@ -326,11 +326,15 @@ class Screen(App[None]):
     # Mouse
 
     def on_click(self, event: events.Click) -> None:
-        """A click does what stands there."""
+        """A click."""
+        self.clicked(event.x, event.y)
+        self.redraw()
+
+    def clicked(self, x: int, y: int) -> None:
+        """Do what stands at this place."""
         for hit in self.sheet.hits:
-            if hit.row == event.y and hit.first <= event.x <= hit.last:
-                self._clicked(hit, event.x)
-                self.redraw()
+            if hit.row == y and hit.first <= x <= hit.last:
+                self._clicked(hit, x)
                 return
 
     def _clicked(self, hit: sheet.Hit, x: int) -> None:

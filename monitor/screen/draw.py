@@ -252,7 +252,5 @@ def strip(
             cells[i] = "┿" if i in bounds else bar
     mark = "◇" if hollow else "◆"
     place = at(value)
-    cells[int(min(max(place, 0), width - 1))] = (
-        "◀" if place < 0 else "▶" if place > width else mark
-    )
+    cells[int(min(max(place, 0), width - 1))] = "◀" if place < 0 else "▶" if place > width else mark
     return "".join(cells)

@@ -1,0 +1,29 @@
+"""SVG pictures of a screen held against those kept: run with `KEEP_PICTURES=1` to keep new ones."""
+
+from __future__ import annotations
+
+import os
+import re
+from pathlib import Path
+
+from textual.app import App
+
+KEPT = Path(__file__).parent / "pictures"
+
+
+def normal(svg: str) -> str:
+    """The picture without what is drawn by lot."""
+    return re.sub(r"terminal-\d+", "terminal", svg)
+
+
+def holds(app: App[None], name: str) -> bool:
+    """Whether the screen looks as it was kept; a differing picture is left beside it."""
+    svg = normal(app.export_screenshot(title="stillbrine"))
+    kept = KEPT / f"{name}.svg"
+    if os.environ.get("KEEP_PICTURES"):
+        KEPT.mkdir(exist_ok=True)
+        kept.write_text(svg)
+    if kept.exists() and kept.read_text() == svg:
+        return True
+    kept.with_suffix(".differs.svg").write_text(svg)
+    return False
