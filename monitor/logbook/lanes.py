@@ -109,7 +109,8 @@ class _Shape:
     def held_to(self, lines: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Digits of lines of this length, (n, size), and which of them are of this shape."""
         digits = lines ^ self.template[: lines.size].reshape(lines.shape)
-        return digits, (digits <= self.most[: lines.size].reshape(lines.shape)).all(axis=1)
+        right = digits <= self.most[: lines.size].reshape(lines.shape)
+        return digits, np.asarray(right.all(axis=1))
 
     def values(self, digits: np.ndarray) -> Floats:
         """Time, period and temperature of these lines, (3, n)."""
