@@ -18,6 +18,8 @@ from collections import deque
 from collections.abc import Mapping, Sequence
 from typing import Any
 
+import numpy as np
+
 from monitor.bench import Tank
 from monitor.blocks import NAN, Second
 from monitor.calibration import Calibration
@@ -41,6 +43,9 @@ ONSET_MOST_S = 300
 UNFORESEEN, UNFORESEEN_N = 4.0, 10  # times the expected scatter: the disturbance went on
 SILENT_S = 30  # without a reading the outlook falls silent
 SETTLED_S = 10.0  # before a rest was declared the water stood still for so long
+
+BUBBLES = "bubbles"
+NOT_BELIEVED = ("no-pulses", "short", "stuck", "loose-lead", "lodged-bubble")
 
 Changes = Sequence[Dose | Struck | Water]
 
@@ -82,6 +87,7 @@ class Settling:
         self._last_k = -math.inf  # of the last reading
         self._refresh_k = -math.inf
         self._belief = "believed"
+        self._jumpy = False  # bubbles are in force
         self._out = False
         self._widen = 0.0
         self._onset_t: float | None = None  # of a disturbance that is not followed yet
@@ -130,7 +136,8 @@ class Settling:
             or salinity_pct != salinity_pct
             or self.shown_pct != self.shown_pct
             or not trust.usable
-            or trust.belief != self._belief
+            or self._belief != "believed"
+            or trust.belief != "believed"
             or trust.out is not self._out
             or k >= self._refresh_k
         ):
@@ -171,11 +178,13 @@ class Settling:
 
     def _believe(self, second: Second, trust: Trust) -> None:
         """Begin anew after what made the readings another's, or none."""
+        jumpy = BUBBLES in trust.faults
+        if jumpy and not self._jumpy:
+            self._drop(trust, (BUBBLES,), second.t)
+        self._jumpy = jumpy
         if trust.belief != self._belief:
             if trust.belief == "not-believed":
-                since = min((f["from_t"] for f in trust.faults.values()), default=second.t)
-                self.history.forget_from(since - 1.0)
-                self._follow_anew()
+                self._drop(trust, NOT_BELIEVED, second.t)
             elif self._belief == "not-believed":
                 self._begin_quiet(second.t)
             self._belief = trust.belief
@@ -186,9 +195,25 @@ class Settling:
                 self.level.forget()
                 self._follow_unforetold(second.t)
 
+    def _drop(self, trust: Trust, faults: Sequence[str], t: float) -> None:
+        """What was read since these faults began does not exist."""
+        since = [trust.faults[name]["from_t"] for name in faults if name in trust.faults]
+        self.history.forget_from(min(since, default=t) - 1.0)
+        self.shown_pct = self.history.bins[-1][2] if self.history.bins else NAN
+        self._follow_anew()
+
+    def _reading(self, second: Second, trust: Trust) -> tuple[float, float]:
+        """The second's salinity and period; under bubbles only of what lies near the level."""
+        if not self._jumpy or self.doubt is None:
+            return second.salinity_pct, second.mean_us
+        us = np.exp([trust.level.in_gate_ln])
+        salinity = self.doubt.salinity_pct(us, np.array([second.temp_used_c]))
+        return float(salinity[0]), float(us[0])
+
     def _read(self, second: Second, trust: Trust) -> bool:
         """Take in the second's reading, where there is one that counts."""
-        salinity_pct, k = second.salinity_pct, second.k
+        k = second.k
+        salinity_pct, period_us = self._reading(second, trust)
         usable = trust.usable and not trust.out and trust.belief != "not-believed"
         if not usable or salinity_pct != salinity_pct:
             if k - self._last_k > HELD_S:
@@ -207,7 +232,7 @@ class Settling:
             self.level.add(salinity_pct)
         self._last_k = k
         self.shown_pct = filtered
-        self.history.bins.append((k, salinity_pct, filtered, second.mean_us, second.temp_used_c))
+        self.history.bins.append((k, salinity_pct, filtered, period_us, second.temp_used_c))
         return True
 
     # What begins a change
@@ -262,7 +287,6 @@ class Settling:
         if self.mixing is not None:
             self._begin(self.mixing.change)
         self.outlook = said
-        self._onset_t = None
 
     def _struck(self, dose: Dose) -> None:
         """The dose under way counts as not given: what mixes is a change nobody recorded."""

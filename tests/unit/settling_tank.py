@@ -13,7 +13,7 @@ from typing import Any
 import numpy as np
 
 from monitor import bench
-from monitor.blocks import Floats, Second
+from monitor.blocks import NAN, Floats, Second
 from monitor.calibration import Calibration, fit
 from monitor.dosing.ledger import Dose, Struck, Water
 from monitor.findings import Finding
@@ -32,6 +32,13 @@ Happenings = Mapping[int, tuple[Happening, ...]]
 
 
 @dataclass
+class Near:
+    """The part of the judge of trust that knows which readings lie near the level."""
+
+    in_gate_ln: float = NAN
+
+
+@dataclass
 class Believed:
     """What the judge of trust says, by hand."""
 
@@ -40,6 +47,7 @@ class Believed:
     out: bool = False
     widen: float = 0.0
     faults: dict[str, Finding] = field(default_factory=dict)
+    level: Near = field(default_factory=Near)
 
 
 def dose(time_s: float = 100.0, **changed: Any) -> Dose:

@@ -16,6 +16,7 @@ from tests.unit.settling_tank import (
     BAND_PCT,
     Believed,
     Happenings,
+    Near,
     dose,
     ends,
     exponential,
@@ -170,6 +171,41 @@ def test_no_rest_on_a_probe_not_believed_and_its_readings_do_not_count() -> None
     assert rest["t"] > 210.0
     assert (rest["dose_t"], rest["verdict"]) == (100.0, "agrees")
     assert not [f for f in said if 135.0 <= f["t"] <= 210.0]
+
+
+def test_bubbles_are_left_out_by_what_lies_near_the_level() -> None:
+    def bubbly(t: float) -> float:  # every fourth second is half a bubble's
+        return STIRRED(t) * (0.9 if t > 150.0 and int(t) % 4 == 0 else 1.0)
+
+    made = seconds(bubbly, 400)
+    near = [math.log(12.0 + 80.0 * STIRRED(k + 0.5) ** -0.95) for k in range(400)]
+
+    def trust(k: int) -> Believed:
+        if k < 160:
+            return Believed()
+        fault = {"bubbles": {"from_t": 150.0}}
+        return Believed("doubtful", faults=fault, level=Near(near[k]))
+
+    settling = judge()
+    said = run(settling, made, {100: (dose(),)}, trust)
+    assert len(rests(said)) - len(ends(said)) == 1  # lost to the first bubbles, found again
+    assert not settling.moving
+    assert not [f for f in said if f["t"] > 220.0]
+    assert abs(settling.shown_pct - TRUTH_PCT) < 3e-4
+
+
+def test_a_fault_forgets_its_own_readings_only() -> None:
+    """A creep that has been in force for long does not take the readings with it."""
+    faults = {"fouling": {"from_t": 5.0}, "no-pulses": {"from_t": 118.0}}
+
+    def trust(k: int) -> Believed:
+        return (
+            Believed("not-believed", usable=False, faults=faults) if 122 <= k < 140 else Believed()
+        )
+
+    said = run(judge(), seconds(STIRRED, 400), {100: (dose(),)}, trust)
+    (rest,) = rests(said)
+    assert (rest["dose_t"], rest["verdict"]) == (100.0, "agrees")
 
 
 def test_not_while_the_probe_is_out_and_after_it_the_dose_is_still_answered() -> None:
