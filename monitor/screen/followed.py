@@ -13,99 +13,17 @@ from pathlib import Path
 from typing import Any
 
 from monitor.bench import Bench
-from monitor.blocks import Second
-from monitor.chain import Judges
 from monitor.control import ControlError, give
-from monitor.findings import Finding, in_order, shifted
-from monitor.follow import Follower
+from monitor.findings import Finding, in_order
 from monitor.logbook import reader
-from monitor.logbook.reader import Part, Tail
+from monitor.screen.growing import Followed
 from monitor.screen.source import ActError
 from monitor.tanks import Unwatched
 from monitor.view import Lane
 
 BUDGET_S = 0.06  # of a poll
-LOOK_S = 2.0  # how often new files are looked for
 DEAD_S = 15.0  # the service writes a line at least every ten seconds
-HISTORY_S = 12 * 3600.0  # with less in the newest part, the one before is read too
 ASK_S = 5.0
-
-
-class Followed:
-    """One probe's newest run, as its files grow."""
-
-    def __init__(self, lane: Lane, folder: Path) -> None:
-        self.lane = lane
-        self.folder = folder
-        self.follower: Follower | None = None
-        self.started: datetime | None = None
-        self.offset = 0.0
-        self.caught_up = False
-        self.heard = time.monotonic()  # when the file last grew
-        self._parts: list[Part] = []
-        self._tail: Tail | None = None
-        self._looked = 0.0
-
-    def look(self, zero: datetime) -> None:
-        """Look for a further part, or a newer run."""
-        self._looked = time.monotonic()
-        last = reader.last_part(self.folder, self.lane.probe)
-        if last is None:
-            return
-        if self.started != last.header.started:
-            self._begin(last, zero)
-        elif self._tail is not None and not self._parts and last.path != self._tail.path:
-            self._parts.append(last)
-
-    def _begin(self, last: Part, zero: datetime) -> None:
-        """Follow this run, with the part before where the newest is young."""
-        self.started = last.header.started
-        self.offset = (self.started - zero).total_seconds()
-        self._parts = [last]
-        age_s = time.time() - last.path.stat().st_ctime
-        if last.part > 1 and last.path.stat().st_size < 4_000_000 and age_s < HISTORY_S:
-            before = [p for p in reader.runs(self._paths()) if p.started == self.started]
-            self._parts = [p for run in before for p in run.parts if p.part >= last.part - 1]
-        self._tail = None
-        self.lane.begin_run(self.offset)
-        self.follower = Follower(self.lane.probe, first_part=self._parts[0].part, watch=self._watch)
-
-    def _paths(self) -> list[str]:
-        started = f"{self.started:%Y%m%dT%H%M%SZ}"
-        probe = self.lane.probe
-        keep = reader.in_folder(self.folder, lambda p, start, _: p == probe and start == started)
-        return [str(path) for path in keep]
-
-    def _watch(self, second: Second, judges: Judges) -> None:
-        self.lane.second(second, judges)
-
-    def read(self, until: float) -> list[Finding]:
-        """Findings of what the files grew by. Raises nothing: what is damaged is counted."""
-        if self.follower is None:
-            return []
-        found: list[Finding] = []
-        self.caught_up = False
-        while time.monotonic() < until:
-            if self._tail is None:
-                if not self._parts:
-                    break
-                self._tail = Tail(self._parts.pop(0).path)
-            data = self._tail.read()
-            if data:
-                self.heard = time.monotonic()
-                found += self.follower.feed(data)
-            elif self._parts:
-                found += self.follower.next_part()
-                self._tail = None
-            else:
-                self.caught_up = True
-                break
-        return [shifted(each, self.offset) for each in found] if self.offset else found
-
-    @property
-    def stale(self) -> bool:
-        """Whether it is time to look for new files."""
-        return time.monotonic() - self._looked > LOOK_S
 
 
 class LiveSource:
@@ -160,6 +78,9 @@ class LiveSource:
             return f"no log of {self.name} yet: start `stillbrine run`"
         if not all(each.caught_up for each in self._followed if each.follower):
             return "reading the log"
+        trouble = [each.trouble for each in self._followed if each.trouble]
+        if trouble:
+            return trouble[0]
         silent = min(time.monotonic() - each.heard for each in self._followed if each.follower)
         if silent > DEAD_S:
             return f"NOTHING IS RECORDED for {silent:.0f} s: does `stillbrine run` still run?"
@@ -176,12 +97,13 @@ class LiveSource:
 
     def poll(self) -> None:
         """Read what the logs grew by."""
-        until = time.monotonic() + BUDGET_S
         found: list[Finding] = []
+        share_s = BUDGET_S / max(len(self._followed), 1)
         for each in self._followed:
             if each.stale:
                 self._look(each)
-            found += each.read(until)
+            found += each.read(time.monotonic() + share_s)
+        self.lanes[:] = [each.lane for each in self._followed]
         found += self._of_tanks()
         for finding in in_order(found):
             for lane in self.lanes:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import gzip
 from pathlib import Path
 from typing import Any
 
@@ -11,7 +12,7 @@ from monitor.blocks import Event
 from monitor.findings import Finding, in_order
 from monitor.logbook.reader import LogError
 from monitor.replay import open_logs, replay
-from monitor.screen import followed
+from monitor.screen import followed, growing
 from monitor.screen.followed import LiveSource
 from monitor.screen.replayed import ReplaySource
 from monitor.screen.source import ActError
@@ -147,7 +148,7 @@ async def test_a_recording_takes_no_orders(log: str) -> None:
 
 @pytest.fixture
 def live(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Any:
-    monkeypatch.setattr(followed, "LOOK_S", 0.0)
+    monkeypatch.setattr(growing, "LOOK_S", 0.0)
     monkeypatch.setattr(followed, "BUDGET_S", 10.0)
 
     def make(n: int = 1, orders: bool = True) -> LiveSource:
@@ -200,6 +201,57 @@ def test_it_goes_on_with_the_runs_next_part(live: Any, text: str, tmp_path: Path
         source.poll()
     assert source.lanes[0].t == 399.0
     assert source.lanes[0].trace.seconds.first_t == 0.5
+
+
+def test_a_part_that_was_packed_meanwhile_is_read_as_well(
+    live: Any, text: str, tmp_path: Path
+) -> None:
+    path = Path(invented.saved(tmp_path, text))
+    Path(f"{path}.gz").write_bytes(gzip.compress(path.read_bytes()))
+    path.unlink()
+    after = invented.log_text(invented.bench(), length_s=400.0, part=2, first_s=300.0)
+    invented.saved(tmp_path, after, part=2)
+    source = live()
+    for _ in range(3):
+        source.poll()
+    assert source.lanes[0].trace.seconds.first_t == 0.5
+    assert source.lanes[0].t == 399.0
+
+
+def test_a_file_that_is_no_log_stops_nothing(live: Any, text: str, tmp_path: Path) -> None:
+    path = Path(invented.saved(tmp_path, text))
+    (tmp_path / path.name.replace("-001", "-002")).write_bytes(b"\x00 no log\n")
+    source = live()
+    for _ in range(2):
+        source.poll()
+    assert source.lanes[0].t == 299.0
+
+
+def test_a_log_that_was_cut_back_is_judged_anew(live: Any, text: str, tmp_path: Path) -> None:
+    path = Path(invented.saved(tmp_path, text))
+    source = live()
+    source.poll()
+    path.write_text(text[: text.rindex("\n200.000,") + 1])
+    for _ in range(3):
+        source.poll()
+    assert source.lanes[0].t == 199.0
+    assert told(source.lanes) == findings_of([str(path)])
+
+
+def test_all_lanes_come_along_while_much_is_to_be_read(
+    live: Any, text: str, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    for name in ("p1", "p2", "p3"):
+        long = invented.log_text(invented.bench(3), name, length_s=3000.0)
+        invented.saved(tmp_path, long, name)
+    source = live(3)
+    monkeypatch.setattr(followed, "BUDGET_S", 0.0)
+    source.poll()
+    assert not source.caught_up
+    assert all(lane.begun for lane in source.lanes)
+    while not source.caught_up:
+        source.poll()
+    assert [lane.t for lane in source.lanes] == [2999.0] * 3
 
 
 def test_a_service_that_is_silent_is_told(live: Any, log: str, monkeypatch: Any) -> None:
