@@ -18,6 +18,7 @@ AGO_MOST_S = 86_400.0
 FOR_TANK = ("dose", "strike", "water")
 FOR_PROBE = ("out", "back", "answer", "check", "compare", "calibration")
 FOR_ANY = ("note", "silence")
+ORDERED = FOR_TANK + tuple(kind for kind in FOR_PROBE if kind != "calibration")  # what is judged by
 
 
 class OrderError(ValueError):

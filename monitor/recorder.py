@@ -13,10 +13,11 @@ Rules:
 from __future__ import annotations
 
 import errno
-from collections.abc import Callable, Mapping
-from typing import Any
+from collections.abc import Callable, Mapping, Sequence
+from typing import Any, NamedTuple
 
 from drivers.line import Decoder
+from monitor.blocks import Event
 from monitor.clock import Clock
 from monitor.findings import Finding
 from monitor.follow import Follower
@@ -32,6 +33,13 @@ REJECTED_S = 60.0
 STALLED_S = 2.0  # of the host: as long without a flush, the machine may have slept
 
 Head = list[tuple[str, Mapping[str, Any]]]
+
+
+class Past(NamedTuple):
+    """What the run before tells this one, in times of this run."""
+
+    carried: Mapping[str, Any]
+    again: Sequence[Event] = ()  # recorded, but never judged: its end came first
 
 
 def _nothing(what: str, text: str | None) -> None:
@@ -69,6 +77,7 @@ class Recorder:
         self.paused: str | None = None  # why nothing can be written
         self.broken: str | None = None  # why nothing is judged
         self.linked = False
+        self.silences: dict[str, str] = {}  # what is silenced, until when in UTC
         self.zero_s = zero_s
         self._clock = clock
         self._tell = tell
@@ -91,11 +100,13 @@ class Recorder:
         """Time of the run now, never before the newest line."""
         return max(self._clock.now_s() - self.zero_s, self._last_t)
 
-    def begin(self, settings: Head, carried: Mapping[str, Any]) -> None:
+    def begin(self, settings: Head, past: Past) -> None:
         """Write the head of the first part. Raises LogWriteError, but not for a full disk."""
         self.settings = settings
+        self._silenced(past.carried.get("silences") or {})
+        again = (codec.event_line(*event) for event in past.again)
         try:
-            self._put(self._head_lines(carried), owed=True)
+            self._put(self._head_lines(past.carried) + "".join(again), owed=True)
         except LogWriteError as wrong:
             if wrong.errno not in (errno.ENOSPC, errno.EDQUOT):
                 raise
@@ -138,6 +149,8 @@ class Recorder:
         else:
             time_s = now
         lines += codec.event_line(time_s, kind, fields)
+        if kind == "silence":
+            self._silenced({fields["what"]: fields["until_utc"]})
         return self._try(lines) == len(lines)
 
     def link(self, up: bool, why: str = "unplugged") -> None:
@@ -176,7 +189,7 @@ class Recorder:
         fresh = self.rows - self._carried_rows >= CARRY_ROWS
         if (now - self._carried_t >= CARRY_S or fresh) and not self.broken:
             self._carried_t, self._carried_rows = now, self.rows
-            self.event("carried", self.follower.chain.carry())
+            self._try_carry()
         if now - self._rejected_t >= REJECTED_S and (told := self.decoder.take_rejected()):
             self._rejected_t = now
             self.event("rejected", told)
@@ -188,7 +201,7 @@ class Recorder:
         self.flush()
         if self.paused:
             return False
-        carried = {} if self.broken else self.follower.chain.carry()
+        carried = {} if self.broken else self._carry()
         try:
             self.writer.next_part()
         except LogWriteError as wrong:
@@ -214,12 +227,32 @@ class Recorder:
         if told := self.decoder.take_rejected():
             self._say(f"{self.probe}: {told['n']} more lines were no reading: {told['why']}")
 
+    def _try_carry(self) -> None:
+        try:
+            self.event("carried", self._carry())
+        except codec.EventError as wrong:
+            self._trouble("memory", f"what a restart would need cannot be written: {wrong}")
+
+    def _carry(self) -> Mapping[str, Any]:
+        self._silenced({})
+        return {**self.follower.chain.carry(), "silences": self.silences}
+
+    def _silenced(self, more: Mapping[str, str]) -> None:
+        """Keep these silences beside those that are not over."""
+        now = self._clock.utc()
+        both = {**self.silences, **more}
+        self.silences = {what: utc for what, utc in both.items() if codec.utc_of(utc) > now}
+
     def _head_lines(self, carried: Mapping[str, Any]) -> str:
         now = self._stamp()
         self._carried_t = self._alive_t = now
         self._carried_rows = self.rows
-        events = [*self.settings, ("carried", carried)]
-        return self.writer.head() + "".join(codec.event_line(now, *event) for event in events)
+        head = self.writer.head() + "".join(codec.event_line(now, *e) for e in self.settings)
+        try:
+            return head + codec.event_line(now, "carried", carried)
+        except codec.EventError as wrong:
+            self._trouble("memory", f"begun clean, what was carried over is no JSON: {wrong}")
+            return head + codec.event_line(now, "carried", {})
 
     def _owe(self, text: str) -> None:
         """Write what the log cannot do without: now, or first of all when writing works again."""

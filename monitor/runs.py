@@ -8,17 +8,18 @@ from __future__ import annotations
 
 import os
 import re
-from collections.abc import Mapping
 from datetime import datetime
 from pathlib import Path
 from typing import Any
 
 from monitor.bench import Bench
-from monitor.chain import calibration_of
-from monitor.follow import Follower
+from monitor.blocks import Event
+from monitor.chain import Chain, calibration_of
 from monitor.logbook import reader
+from monitor.logbook.parser import Parser
 from monitor.logbook.reader import Part
-from monitor.recorder import Head
+from monitor.orders import ORDERED
+from monitor.recorder import Head, Past
 
 STEP = 1 << 20
 BACK_MOST = 1 << 26  # bytes to look back for a `carried`; far more than the writer lets pass
@@ -34,29 +35,40 @@ def head_of(bench: Bench, probe: str) -> Head:
     return head
 
 
-def carried_by_last_run(
-    folder: Path, probe: str, started: datetime, bench: Bench
-) -> Mapping[str, Any]:
+def carried_by_last_run(folder: Path, probe: str, started: datetime, bench: Bench) -> Past:
     """What the last run of this probe would tell one that starts now on this bench.
 
-    Raises LogError if its log cannot be read.
+    What a person recorded in its last, open second was never judged: it is to be met again.
+    Raises LogError or OSError if its log cannot be read.
     """
     last = reader.last_part(folder, probe)
     if last is None:
-        return {}
-    follower = Follower(probe, bench, first_part=2)  # its time begins where the text does
+        return Past({})
     text = end_of_part(last)
-    if text is None:
-        for chunk in last.chunks():
-            follower.feed(chunk)
-    else:
-        follower.feed(last.header.text().encode() + text)
-    follower.next_part()
-    shift_s = (last.header.started - started).total_seconds()
-    end_t = follower.chain.closed_t
-    if end_t + shift_s > 0:  # the wall clock went back: as if that run ended just now
-        shift_s = -end_t
-    return dict(shifted_times(follower.chain.carry(), shift_s))
+    parser, chain = Parser(), Chain(probe, bench, first_second=None)
+    silences: dict[str, Any] = {}
+    unjudged: list[Event] = []
+    end_t = 0.0
+    for data in last.chunks() if text is None else [last.header.text().encode(), text]:
+        for item in parser.feed(data):
+            closed_t = chain.closed_t
+            chain.feed(item)
+            if chain.closed_t != closed_t:
+                unjudged.clear()
+            if not isinstance(item, Event):
+                end_t = max(end_t, float(item.time_s[-1]))
+                continue
+            end_t = max(end_t, item.time_s)
+            if item.kind == "carried":
+                silences = dict(item.fields.get("silences") or {})
+            elif item.kind == "silence":
+                silences[item.fields["what"]] = item.fields["until_utc"]
+            if item.kind in ORDERED:
+                unjudged.append(item)
+    # where the wall clock went back: as if that run ended just now
+    shift_s = min((last.header.started - started).total_seconds(), -end_t)
+    carried = {**shifted_times(chain.carry(), shift_s), "silences": silences}
+    return Past(carried, [event._replace(time_s=event.time_s + shift_s) for event in unjudged])
 
 
 def end_of_part(part: Part) -> bytes | None:

@@ -34,7 +34,7 @@ from monitor.logbook.reader import LogError
 from monitor.logbook.writer import LogWriteError, LogWriter
 from monitor.orders import Order, OrderError, parse
 from monitor.places import HeldError, Lock, private_folder, socket_path
-from monitor.recorder import Head, Recorder
+from monitor.recorder import Head, Past, Recorder
 from monitor.runs import carried_by_last_run, head_of
 from monitor.supervisor import notify, watchdog_s
 from monitor.telling import Telling
@@ -125,6 +125,9 @@ class Service:
             self.bells.hang(self.bench)
         except AlarmError as wrong:
             raise ServiceError(str(wrong)) from None
+        for recorder in self.recorders.values():
+            for what, until_utc in recorder.silences.items():
+                self._silence(what, until_utc)
         for probe in self.bench.probe:
             self._open_port(probe)
 
@@ -150,7 +153,7 @@ class Service:
             place = f"{self.bench_path.name}: probe.{probe}.port"
             raise ServiceError(f"{place}: missing; expected a port to read")
         head = head_of(self.bench, probe)
-        carried = await asyncio.to_thread(self._carried, probe, started)
+        past = await asyncio.to_thread(self._past, probe, started)
         writer = LogWriter(self.folder, probe, started, run)
         self.telling.open(probe, started)
         recorder = Recorder(
@@ -165,16 +168,16 @@ class Service:
             partial(self.bells.trouble, probe),
             self._watch_clocks,
         )
-        recorder.begin(head, carried)
+        recorder.begin(head, past)
         self.recorders[probe] = recorder
         self._days[probe] = self.clock.utc().date()
 
-    def _carried(self, probe: str, started: datetime) -> Mapping[str, Any]:
+    def _past(self, probe: str, started: datetime) -> Past:
         try:
             return carried_by_last_run(self.folder, probe, started, self.bench)
         except (LogError, OSError, ArithmeticError, LookupError, TypeError, ValueError) as wrong:
             self._say(f"{probe}: the run before tells nothing, begun clean: {wrong}")
-            return {}
+            return Past({})
 
     def _around(self) -> list[Coroutine[None, None, None]]:
         """All that runs beside the ports."""
@@ -363,7 +366,7 @@ class Service:
         if not all(written):
             return {"ok": False, "why": "nothing can be written to the log now; order not taken"}
         if order.kind == "silence":
-            self._silence(order)
+            self._silence(str(order.fields["what"]), str(order.fields["until_utc"]))
         return {"ok": True, "time_s": self.recorders[order.probes[0]].run_s - order.ago_s}
 
     def _write(self, probe: str, order: Order) -> bool:
@@ -374,9 +377,9 @@ class Service:
         when = None if order.ago_s == 0 else recorder.run_s - order.ago_s
         return recorder.event(order.kind, fields, when)
 
-    def _silence(self, order: Order) -> None:
-        left_s = (utc_of(order.fields["until_utc"]) - self.clock.utc()).total_seconds()
-        self.bells.silence(str(order.fields["what"]), self.clock.now_s() + left_s)
+    def _silence(self, what: str, until_utc: str) -> None:
+        left_s = (utc_of(until_utc) - self.clock.utc()).total_seconds()
+        self.bells.silence(what, self.clock.now_s() + left_s)
 
     def _chosen(self, probe: str, named: str) -> Mapping[str, Any]:
         """The calibration that a set of standards gives. Raises OrderError, CalibrationError."""

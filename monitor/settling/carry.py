@@ -80,8 +80,8 @@ def _change(change: Change, settling: Settling) -> dict[str, Any]:
         "from_t": change.from_t,
         "open_s": change.open_s,
         "ledger": change.ledger,
-        "extra": change.extra_pct / still.level_pct if still.level_pct else 0.0,
-        "size": change.size_pct / still.level_pct if still.level_pct else 0.0,
+        "extra": _share(change.extra_pct, still.level_pct),
+        "size": _share(change.size_pct, still.level_pct),
         "common": change.common,
         "dose": plain_dose(change.dose) if change.dose is not None else None,
         "us": _or_none(still.period_us),
@@ -92,6 +92,12 @@ def _change(change: Change, settling: Settling) -> dict[str, Any]:
     }
 
 
+def _share(value_pct: float, level_pct: float) -> float:
+    """Of the level; 0 where none was seen, as before the first reading."""
+    share = value_pct / level_pct if level_pct else 0.0
+    return share if math.isfinite(share) else 0.0
+
+
 def _changed(told: Mapping[str, Any], doubt: Doubt) -> Change:
     us, temp_c = _number(told["us"]), _number(told["c"])
     level = _number(told["factor"]) * _salinity(doubt, us, temp_c)
@@ -99,7 +105,8 @@ def _changed(told: Mapping[str, Any], doubt: Doubt) -> Change:
     still = Still(level, noise, u, us, temp_c)
     dose = carried_dose(told["dose"]) if told["dose"] else None
     known = told["ledger"] and math.isfinite(level)
-    extra, size = told["extra"] * level, told["size"] * level
+    seen = level if math.isfinite(level) else 0.0
+    extra, size = told["extra"] * seen, told["size"] * seen
     return Change(told["from_t"], told["open_s"], still, dose, known, extra, size, told["common"])
 
 
