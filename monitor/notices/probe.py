@@ -118,10 +118,10 @@ class OtherProbe:
             self._last, self._asked = None, False
         if gap and self._last is not None:
             self._asked, self._good = True, 0
-        if not trust.locked or not trust.usable:
+        if not trust.locked:
             self._good = 0
             return []
-        self._good += 1
+        self._good += trust.usable
         if self._good < MINUTE_S:
             return []
         level, before, before_t = trust.level_ln, self._last, self._last_t

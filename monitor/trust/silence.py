@@ -21,6 +21,7 @@ class Silence:
 
     def __init__(self, carried: Mapping[str, Any] | None) -> None:
         self.linked = True
+        self._turned_t = 0.0  # when the link last came or went
         self.newest: Second | None = None  # with a pulse in it
         self._since: float | None = None  # silence is counted from here, if no pulse came later
         self._carried_t: float | None = (carried or {}).get("last_pulse_t")
@@ -33,6 +34,7 @@ class Silence:
     def link(self, up: bool, t: float) -> None:
         """The port came or went: silence between is the link's."""
         self.linked = up
+        self._turned_t = t
         self.restart(t)
 
     def restart(self, t: float) -> None:
@@ -43,7 +45,8 @@ class Silence:
         """`no-pulses` begun or ended in this second."""
         if second.n_rows > second.zeros:
             self.newest = second
-            self.linked = True
+            if second.t > self._turned_t:  # else these pulses came before the link was lost
+                self.linked = True
             if "no-pulses" in force:
                 return [force.end("no-pulses", second.t, first_pulse_t(second))]
             return []
