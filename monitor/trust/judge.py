@@ -139,6 +139,7 @@ class Trust:
         found += self._silence.judge(second, self.level.rate_hz, self._force)
         if pulses:
             found += self._short.judge(second, self._force)
+            suspected = suspected and not self._short.suspects
             found += self._stuck.judge(second, suspected, self.level, self._force)
         judged = self._levelled(second, pulses)
         found += self._jumps.judge(second, judged, self.level, self._hum, self._force)
@@ -154,7 +155,7 @@ class Trust:
     def _levelled(self, second: Second, pulses: bool) -> list[Judged]:
         """Let the level follow; the readings that can be judged against it now."""
         level = self.level
-        if "short" in self._force:
+        if self._force.any_of("short", "stuck"):  # it is not the water that is read
             level.forget()
             self._jumps.forget()
             return []

@@ -78,6 +78,11 @@ class Short:
         self._from_t: float | None = None
         self._n = 0
 
+    @property
+    def suspects(self) -> bool:
+        """Whether the newest periods lie at the floor."""
+        return self._from_t is not None
+
     def judge(self, second: Second, force: InForce) -> list[Finding]:
         """`short` begun or ended in this second."""
         if not second.low_us < self.below_us and self._from_t is None and "short" not in force:

@@ -1,12 +1,14 @@
 """`stuck`: the very same figure, longer than chance allows.
 
-The chance that a reading repeats is greatest with the level in the middle of a tick:
-q = erf(tick/2 / (sqrt 2 sd)). A run of n is called at q^n < 1e-9 (below 1e-4 false an hour at
-20 readings/s), or when the temperature moved by more than tick and noise could hide.
+A reading repeats with a chance q that noise, tick and the level's place in the tick give; the place
+is known from the minutes before, as far as the level may have wandered since. A run of n is called
+at q^n < 1e-9 (below 1e-4 false an hour at 20 readings/s), or when the temperature moved by more
+than tick and noise could hide.
 """
 
 from __future__ import annotations
 
+import itertools
 import math
 from collections import deque
 
@@ -21,6 +23,9 @@ CHANCE_LN = math.log(1e-9)
 SURER = 1.25  # times what chance gives: the noise is known to some 10 %
 WARM_S = 40.0
 PER_C = 0.0212  # of the period, a Celsius
+CHUNK_S, CHUNKS = 20, 6  # means that tell where the level stood, and how it wanders
+MEANS_KEPT = 300
+DOUBT_TICKS = 0.05
 
 
 class Stuck:
@@ -34,6 +39,7 @@ class Stuck:
         self._newest: Second | None = None
         self._temp_c = NAN
         self._lengths: deque[int] = deque(maxlen=30)
+        self._means: deque[float] = deque(maxlen=MEANS_KEPT)  # us, a second
         self._held = NAN  # the figure of the fault in force
 
     def suspects(self, second: Second, level: Level) -> bool:
@@ -42,6 +48,7 @@ class Stuck:
         if figure != second.high_us or figure != self._figure:
             self._turn(second, figure)
         self._newest = second
+        self._means.append(second.mean_us)
         if self._figure != self._figure:
             return False
         self._n += second.n_rows - second.zeros
@@ -54,7 +61,7 @@ class Stuck:
         """`stuck` begun or ended in this second."""
         if "stuck" in force:
             return self._ended(second, force)
-        if not suspected or "short" in force:
+        if not suspected:
             return []
         from_t, n = self._beginning()
         if second.t - from_t < LEAST_S:
@@ -78,16 +85,38 @@ class Stuck:
 
     def _by_chance(self, level: Level) -> float:
         """The longest run that chance gives."""
-        sd_us = 0.85 * min(level.standards_noise, 1.3 * level.noise) * self._figure
-        q = math.erf(0.5 * level.tick_us / (math.sqrt(2.0) * max(sd_us, 1e-9)))
+        tick = level.tick_us
+        off = self._off_us(tick)
+        scale = 1.0 / (math.sqrt(2.0) * max(self._sd_us(level), 1e-9))
+        q = 0.5 * (math.erf((0.5 * tick - off) * scale) + math.erf((0.5 * tick + off) * scale))
         return CHANCE_LN / math.log(min(q, 1.0 - 1e-12)) if q > 0.0 else 0.0
+
+    def _sd_us(self, level: Level) -> float:
+        return 0.85 * min(level.standards_noise, 1.3 * level.noise) * self._figure
+
+    def _off_us(self, tick_us: float) -> float:
+        """How far from the middle of the figure's tick the level is for sure."""
+        assert self._first is not None
+        assert self._newest is not None
+        run_s = self._newest.k - self._first.k + 1
+        means = list(self._means)[: -run_s - 1] if run_s + 1 < len(self._means) else []
+        chunks = [
+            sum(means[end - CHUNK_S : end]) / CHUNK_S
+            for end in range(len(means), CHUNK_S - 1, -CHUNK_S)[:CHUNKS]
+        ]
+        if len(chunks) < 3 or any(chunk != chunk for chunk in chunks):
+            return 0.0
+        wander = max(abs(a - b) for a, b in itertools.pairwise(chunks))
+        trend = abs(chunks[0] - chunks[-1]) / (len(chunks) - 1)
+        doubt = 1.5 * wander + trend * run_s / CHUNK_S + DOUBT_TICKS * tick_us
+        return max(abs(chunks[0] - self._figure) - doubt, 0.0)
 
     def _warmed(self, second: Second, level: Level) -> bool:
         """The water's warmth moved by more than tick and noise can hide."""
         assert self._first is not None
         moved_us = abs(second.temp_used_c - self._temp_c) * PER_C * self._figure
-        sd_us = 0.85 * min(level.standards_noise, 1.3 * level.noise) * self._figure
-        return second.k - self._first.k >= WARM_S and moved_us > 3.0 * (level.tick_us + sd_us)
+        hidden_us = 3.0 * (level.tick_us + self._sd_us(level))
+        return second.k - self._first.k >= WARM_S and moved_us > hidden_us
 
     def _beginning(self) -> tuple[float, int]:
         """When the run began, its readings in the second before counted, and how many it holds."""
