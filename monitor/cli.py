@@ -35,6 +35,7 @@ COMMANDS = {  # each a module of monitor.commands; the first line of its help
     "dose": "Plan a dose: which liquid, how much, how long to open, where it lands and how surely.",
     "valve": "Find a valve's flow from its timed runs, with its doubt, and what to mistrust in"
     " them.",
+    "tell": "Tell a running service what was done: a dose, water, a probe taken out, a note.",
     "ports": "List the serial ports that are plugged in, by the name that survives a reboot.",
     "check": "Check a bench file, its ports, and whether a failure in the night would be noticed.",
 }
@@ -49,10 +50,13 @@ class _Commands(TyperGroup):
     def get_command(self, ctx: Any, cmd_name: str) -> Any:
         if cmd_name not in COMMANDS:
             return None
+        module = import_module(f"monitor.commands.{cmd_name}")
+        if hasattr(module, "app"):  # it has commands of its own
+            return typer.main.get_command(module.app)
         alone = typer.Typer(
             add_completion=False, rich_markup_mode=None, pretty_exceptions_enable=False
         )
-        alone.command(cmd_name)(import_module(f"monitor.commands.{cmd_name}").command)
+        alone.command(cmd_name)(module.command)
         return typer.main.get_command(alone)
 
     def format_commands(self, ctx: Any, formatter: Any) -> None:

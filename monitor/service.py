@@ -44,6 +44,7 @@ SYNC_S = 1.5
 ASLEEP_S = 2.0
 STALLED_S = 5.0  # of the host: as long without a turn, rows may have been missed
 CLOCK_STEP_S = 1.0
+SILENCE_MOST_S = 86_400.0
 
 
 class ServiceError(RuntimeError):
@@ -358,6 +359,8 @@ class Service:
             order = parse(message, self.bench)
             if any(self.recorders[probe].paused for probe in order.probes):
                 raise OrderError("nothing can be written to the log now; order not taken")
+            if order.kind == "silence":
+                self._check_silence(str(order.fields["until_utc"]))
             written = [self._write(probe, order) for probe in order.probes]
         except (OrderError, CalibrationError) as wrong:
             return {"ok": False, "why": str(wrong)}
@@ -376,6 +379,12 @@ class Service:
             fields = self._chosen(probe, str(fields.get("set", "")))
         when = None if order.ago_s == 0 else recorder.run_s - order.ago_s
         return recorder.event(order.kind, fields, when)
+
+    def _check_silence(self, until_utc: str) -> None:
+        """Nothing is silenced without a limit in time. Raises OrderError."""
+        left_s = (utc_of(until_utc) - self.clock.utc()).total_seconds()
+        if not 0.0 < left_s <= SILENCE_MOST_S:
+            raise OrderError(f"until_utc: {until_utc}; expected a time within the next 24 h")
 
     def _silence(self, what: str, until_utc: str) -> None:
         left_s = (utc_of(until_utc) - self.clock.utc()).total_seconds()
