@@ -51,6 +51,8 @@ def parse(message: Mapping[str, Any], bench: Bench) -> Order:
         raise OrderError("ago_s: not a number; expected seconds since it happened")
     if not 0 <= ago_s <= AGO_MOST_S:
         raise OrderError(f"ago_s: {ago_s:g}; expected 0 to {AGO_MOST_S:g} seconds")
+    if not isinstance(message.get("probe"), str | None):
+        raise OrderError("probe: not a name; expected one of the bench file's")
     fields = {**fields, "id": message.get("id")}
     probes = _whose(kind, fields, message, bench)
     try:

@@ -6,6 +6,7 @@ looks at what is in the log. It fails at the first figure that is not reached.
 
 from __future__ import annotations
 
+import itertools
 import json
 import os
 import random
@@ -85,7 +86,7 @@ def _look(
     assert abs(tank_ml + DOSE_ML * again - (1200.0 + DOSE_ML * dosed)) < 1e-6, (tank_ml, dosed)
     t = times(log)
     lost_s = (killed - header.started).total_seconds() - t[-1]
-    hole_s = max((b - a for a, b in zip(t, t[1:])), default=0.0)
+    hole_s = max((b - a for a, b in itertools.pairwise(t)), default=0.0)
     done = Round(reading_s, lost_s, hole_s, parser.dropped["torn"])
     assert lost_s <= LOST_S, done
     assert hole_s <= 0.5, done
