@@ -18,19 +18,19 @@ from collections import deque
 from collections.abc import Mapping, Sequence
 from typing import Any
 
-import numpy as np
-
 from monitor.bench import Tank
 from monitor.blocks import NAN, Second
 from monitor.calibration import Calibration
 from monitor.dosing.ledger import Dose, Struck, Water
 from monitor.findings import Finding
 from monitor.settling import begin, carry
+from monitor.settling.disturbance import Disturbance
 from monitor.settling.doubt import Doubt
 from monitor.settling.history import Bin, History
 from monitor.settling.level import Level
 from monitor.settling.mixing import Change, Mixing
 from monitor.settling.records import Records
+from monitor.settling.sieve import Sieve, Turn
 from monitor.trust.judge import Trust
 
 FILTER = 0.3  # share of a second's reading in the filtered value
@@ -38,14 +38,9 @@ HELD_S = 10  # without a reading the filtered value is shown this long
 GAP_S = 60  # without a reading: the quiet readings begin anew
 OUTLOOK_S = 5.0
 REFRESH_S = 300  # noise and doubt are looked at this often, and after each rest
-ONSET_S = 5.0  # a disturbance is followed no sooner after its onset
-ONSET_MOST_S = 300
 UNFORESEEN, UNFORESEEN_N = 4.0, 10  # times the expected scatter: the disturbance went on
 SILENT_S = 30  # without a reading the outlook falls silent
 SETTLED_S = 10.0  # before a rest was declared the water stood still for so long
-
-BUBBLES = "bubbles"
-NOT_BELIEVED = ("no-pulses", "short", "stuck", "loose-lead", "lodged-bubble")
 
 Changes = Sequence[Dose | Struck | Water]
 
@@ -75,6 +70,7 @@ class Settling:
         self.band = settings.rest_band_pct
         self.doubt = Doubt(calibration, temp_u_c, temp_c) if calibration is not None else None
         self.records = Records(probe, tank, self.doubt, liquids or {}) if self.doubt else None
+        self.sieve = Sieve(self.doubt) if self.doubt else None
         self.liquids = liquids or {}
         self.history = History()
         self.level = Level(self.band)
@@ -86,19 +82,16 @@ class Settling:
         self.u95_pct = NAN
         self._last_k = -math.inf  # of the last reading
         self._refresh_k = -math.inf
-        self._belief = "believed"
-        self._jumpy = False  # bubbles are in force
-        self._out = False
+        self._calm = True  # nothing to mind
         self._widen = 0.0
-        self._onset_t: float | None = None  # of a disturbance that is not followed yet
-        self._fastest = 0.0  # its fastest change in ONSET_S
+        self.disturbance: Disturbance | None = None  # one that is not followed yet
         if carried and self.doubt is not None:
             carry.resumed(self, carried, self.doubt)
 
     @property
     def moving(self) -> bool:
         """Whether a dose or a disturbance is under way, not yet at rest."""
-        return self.mixing is not None or self._onset_t is not None
+        return self.mixing is not None or self.disturbance is not None
 
     @property
     def heading(self) -> float:
@@ -132,13 +125,13 @@ class Settling:
         if (
             changes
             or self.mixing is not None
-            or self._onset_t is not None
+            or self.disturbance is not None
             or salinity_pct != salinity_pct
             or self.shown_pct != self.shown_pct
             or not trust.usable
-            or self._belief != "believed"
+            or not self._calm
             or trust.belief != "believed"
-            or trust.out is not self._out
+            or trust.out
             or k >= self._refresh_k
         ):
             return self._busy(second, changes, trust)
@@ -152,10 +145,11 @@ class Settling:
 
     def _busy(self, second: Second, changes: Changes, trust: Trust) -> list[Finding]:
         """Any second that is not a calm one."""
-        if self.records is None:
+        if self.records is None or self.sieve is None:
             return []
-        self._believe(second, trust)
-        read = self._read(second, trust)
+        self._mind(self.sieve.turn(second, trust), second.t)
+        self._calm = self.sieve.calm
+        read = self._read(second, *self.sieve.reading(second, trust))
         found: list[Finding] = []
         for change in changes:
             if isinstance(change, Dose):
@@ -165,8 +159,10 @@ class Settling:
             else:
                 self._watered(second.t)
         if read and self.mixing is None:
-            if self._onset_t is not None:
-                self._follow_disturbance(second.t)
+            seen = self.disturbance
+            if seen is not None:
+                if seen.slows(second.t, self.history, self.shown_pct):
+                    self._begin_unrecorded(seen.onset_t, second.t - seen.onset_t)
             elif self.level.left(self.shown_pct):
                 found += self._disturbed(second)
         if self.mixing is not None:
@@ -176,46 +172,25 @@ class Settling:
 
     # What counts as a reading
 
-    def _believe(self, second: Second, trust: Trust) -> None:
+    def _mind(self, turn: Turn, t: float) -> None:
         """Begin anew after what made the readings another's, or none."""
-        jumpy = BUBBLES in trust.faults
-        if jumpy and not self._jumpy:
-            self._drop(trust, (BUBBLES,), second.t)
-        self._jumpy = jumpy
-        if trust.belief != self._belief:
-            if trust.belief == "not-believed":
-                self._drop(trust, NOT_BELIEVED, second.t)
-            elif self._belief == "not-believed":
-                self._begin_quiet(second.t)
-            self._belief = trust.belief
-        if trust.out is not self._out:
-            self._out = trust.out
-            if not trust.out:
-                self._begin_quiet(second.t)
-                self.level.forget()
-                self._follow_unforetold(second.t)
+        if turn.bad_from_t is not None:
+            self.history.forget_from(turn.bad_from_t)
+            self.shown_pct = self.history.bins[-1][2] if self.history.bins else NAN
+            if self.mixing is not None:
+                said = self.outlook
+                self._begin(self.mixing.change)
+                self.outlook = said
+        if turn.quiet:
+            self._begin_quiet(t)
+        if turn.back:
+            self.level.forget()
+            self._follow_unforetold(t)
 
-    def _drop(self, trust: Trust, faults: Sequence[str], t: float) -> None:
-        """What was read since these faults began does not exist."""
-        since = [trust.faults[name]["from_t"] for name in faults if name in trust.faults]
-        self.history.forget_from(min(since, default=t) - 1.0)
-        self.shown_pct = self.history.bins[-1][2] if self.history.bins else NAN
-        self._follow_anew()
-
-    def _reading(self, second: Second, trust: Trust) -> tuple[float, float]:
-        """The second's salinity and period; under bubbles only of what lies near the level."""
-        if not self._jumpy or self.doubt is None:
-            return second.salinity_pct, second.mean_us
-        us = np.exp([trust.level.in_gate_ln])
-        salinity = self.doubt.salinity_pct(us, np.array([second.temp_used_c]))
-        return float(salinity[0]), float(us[0])
-
-    def _read(self, second: Second, trust: Trust) -> bool:
+    def _read(self, second: Second, salinity_pct: float, period_us: float) -> bool:
         """Take in the second's reading, where there is one that counts."""
         k = second.k
-        salinity_pct, period_us = self._reading(second, trust)
-        usable = trust.usable and not trust.out and trust.belief != "not-believed"
-        if not usable or salinity_pct != salinity_pct:
+        if salinity_pct != salinity_pct:
             if k - self._last_k > HELD_S:
                 self.shown_pct = NAN
             return False
@@ -228,7 +203,7 @@ class Settling:
         if self.mixing is not None:
             if not self.mixing.follow(k, salinity_pct, filtered):
                 return False
-        elif self._onset_t is None:
+        elif self.disturbance is None:
             self.level.add(salinity_pct)
         self._last_k = k
         self.shown_pct = filtered
@@ -250,43 +225,19 @@ class Settling:
 
     def _disturbed(self, second: Second) -> list[Finding]:
         """The filtered value left the still level without a dose."""
-        onset = second.k
-        for k, _, filtered, _, _ in reversed(self.history.bins):
-            if abs(filtered - self.level.pct) <= self.band or second.k - k > ONSET_MOST_S:
-                break
-            onset = k
-        self._onset_t = float(onset)
-        self._fastest = 0.0
+        self.disturbance = Disturbance(second.t, self.history, self.level.pct, self.band)
         self.level.restart()
-        return self._lost(second.t, self._onset_t)
-
-    def _follow_disturbance(self, t: float) -> None:
-        """Begin the fit once the disturbance slows down."""
-        assert self._onset_t is not None
-        if t - self._onset_t <= ONSET_S:
-            return
-        past = self.history.filtered_at(t - ONSET_S)
-        change = abs(self.shown_pct - past) if past == past else math.inf
-        self._fastest = max(self._fastest, change)
-        if change < max(0.5 * self._fastest, self.band):
-            self._begin_unrecorded(self._onset_t, t - self._onset_t)
+        return self._lost(second.t, self.disturbance.onset_t)
 
     def _begin_unrecorded(self, from_t: float, open_s: float) -> None:
         self._begin(begin.unrecorded(from_t, open_s, self.level.pct, self.shown_pct, self.history))
 
     def _begin(self, change: Change) -> None:
-        self._onset_t = None
+        self.disturbance = None
         self.level.restart()
         self.outlook = None
         self.mixing = Mixing(change, self.band, self.liquids)
         self.mixing.catch_up(self.history.since(change.from_t))
-
-    def _follow_anew(self) -> None:
-        """Follow the change under way from the readings that are left."""
-        said = self.outlook
-        if self.mixing is not None:
-            self._begin(self.mixing.change)
-        self.outlook = said
 
     def _struck(self, dose: Dose) -> None:
         """The dose under way counts as not given: what mixes is a change nobody recorded."""

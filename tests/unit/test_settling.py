@@ -263,7 +263,7 @@ def test_heading_is_where_an_unsettled_dose_takes_it() -> None:
 
 def test_without_a_calibration_nothing_is_said() -> None:
     settling = judge()
-    settling.doubt = settling.records = None
+    settling.doubt = settling.records = settling.sieve = None
     made = seconds(lambda t: NAN, 200)
     assert run(settling, made, {100: (dose(),)}) == []
     assert settling.carry() == {}
