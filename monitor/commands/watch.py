@@ -113,6 +113,7 @@ def show(source: Source, note: str = "", plain: bool = False, light: bool | None
         return
     from monitor.screen.app import run_app
 
+    source.poll()  # the first picture has figures in it
     run_app(source, note=note, light=light)
 
 

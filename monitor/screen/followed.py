@@ -72,21 +72,28 @@ class LiveSource:
         return 0.0
 
     @property
-    def status(self) -> str:
-        """What hinders, in one line; "" while nothing does."""
-        if not any(each.follower for each in self._followed):
-            return f"no log of {self.name} yet: start `stillbrine run`"
-        if not all(each.caught_up for each in self._followed if each.follower):
-            return "reading the log"
-        trouble = [each.trouble for each in self._followed if each.trouble]
-        if trouble:
-            return trouble[0]
-        silent = min(time.monotonic() - each.heard for each in self._followed if each.follower)
-        if silent > DEAD_S:
-            return f"NOTHING IS RECORDED for {silent:.0f} s: does `stillbrine run` still run?"
+    def trouble(self) -> str:
+        """What hinders the recording, in one line; "" while nothing does."""
+        following = [each for each in self._followed if each.follower]
+        unread = [each.trouble for each in following if each.trouble]
+        if unread:
+            return unread[0]
+        if following and self.caught_up:
+            silent = min(time.monotonic() - each.heard for each in following)
+            if silent > DEAD_S:
+                return f"NOTHING IS RECORDED for {silent:.0f} s: does `stillbrine run` still run?"
         paused = [name for name, told in self._told.items() if told.get("paused")]
         if paused:
             return f"NOT RECORDED: {', '.join(paused)}: {self._told[paused[0]]['paused']}"
+        return ""
+
+    @property
+    def status(self) -> str:
+        """Where the reading stands, in one line; "" while there is nothing to say."""
+        if not any(each.follower for each in self._followed):
+            return f"no log of {self.name} yet: start `stillbrine run`"
+        if not self.caught_up:
+            return "reading the log"
         rejected = sum(int(told.get("rejected") or 0) for told in self._told.values())
         return f"{rejected} lines of the wire were no readings" if rejected else ""
 

@@ -50,6 +50,8 @@ class PlainText:
 
     def _over_all(self, said: list[tuple[Lane, Said]]) -> str:
         text = overall(said, [name(lane) for lane, _ in said]).text
+        if self.source.trouble:
+            return f"{printable(self.source.trouble)}; before that: {text}"
         status = self.source.status
         return f"{text}; {printable(status, 120)}" if status and self.source.live else text
 

@@ -104,6 +104,7 @@ class ReplaySource:
     """Plays logs on the lanes of a screen."""
 
     live = False
+    trouble = ""
 
     def __init__(
         self,

@@ -10,6 +10,7 @@ import math
 from dataclasses import dataclass, field
 from typing import NamedTuple
 
+from monitor.printable import printable
 from monitor.screen import axis, figures, guide, inks, landing, lanes, text, words
 from monitor.screen.acts import Form
 from monitor.screen.axis import Axis
@@ -111,6 +112,8 @@ def head(source: Source, look: Look, known: list[_Tank], clock: Clock, width: in
     """Is anything wrong; the time of day once; the unit of all figures."""
     names = [text.fit(tank.name, 24 if width >= 80 else 16).rstrip() for tank in known]
     said = words.overall([(tank.lane, tank.said) for tank in known], names)
+    if source.trouble:  # what is shown is not what is so now
+        said = Said(printable(source.trouble), words.ACT)
     when = clock.whole(source.now_s) if width >= 100 else clock.second(source.now_s)
     unit = {"%": "% by mass", "mS/cm": "mS/cm at 25 C"}.get(look.unit, look.unit)
     right = f"{unit}  {when}" if width >= SMALL_WIDTH else when

@@ -25,8 +25,16 @@ class Source(Protocol):
         """The present on the lanes' time, s."""
 
     @property
+    def trouble(self) -> str:
+        """What is wrong with the source itself and needs a person, "" for nothing."""
+
+    @property
     def status(self) -> str:
         """One line on the source itself, "" while there is nothing to say."""
+
+    @property
+    def caught_up(self) -> bool:
+        """Whether all that is there was read; until then it wants to be polled again at once."""
 
     def poll(self) -> None:
         """Bring the lanes up to date; takes a few hundredths of a second at most."""

@@ -1,4 +1,4 @@
-"""Lanes in a state that is chosen, not judged: for pictures that must not change with the judges."""
+"""Lanes in a chosen state, not a judged one: pictures that do not change with the judges."""
 
 from __future__ import annotations
 
@@ -62,6 +62,8 @@ class FixedSource:
 
     live = True
     status = ""
+    trouble = ""
+    caught_up = True
 
     def __init__(self, lanes: list[Lane], now_s: float) -> None:
         self.lanes = lanes

@@ -257,8 +257,9 @@ def test_all_lanes_come_along_while_much_is_to_be_read(
 def test_a_service_that_is_silent_is_told(live: Any, log: str, monkeypatch: Any) -> None:
     source = live()
     source.poll()
+    assert source.trouble == ""
     monkeypatch.setattr(followed, "DEAD_S", -1.0)
-    assert source.status.startswith("NOTHING IS RECORDED")
+    assert source.trouble.startswith("NOTHING IS RECORDED")
 
 
 async def test_an_order_without_a_service_is_refused_in_one_line(live: Any, log: str) -> None:
