@@ -30,6 +30,7 @@ from monitor.screen.words import ACT, CALM, DOUBT, Said
 
 POLL_S = 0.25
 MESSAGE_S = 12.0
+HURRIED_S = 1.0  # how often it is drawn while the source is catching up
 ZOOM = 2.0
 SIGNALS = (signal.SIGINT, signal.SIGTERM, signal.SIGHUP)
 
@@ -93,6 +94,8 @@ class Screen(App[None]):
         self.light = light if light is not None else _light_terminal()
         self.sheet = Sheet([])
         self._message_until = 0.0
+        self._drawn = 0.0
+        self._hurried = False
         self._zone = zone
         self._ordering: asyncio.Task[None] | None = None
 
@@ -146,15 +149,30 @@ class Screen(App[None]):
     def tick(self) -> None:
         """Four times a second."""
         self.source.poll()
+        if not self.source.caught_up:
+            self._hurry()
+            if time.monotonic() - self._drawn < HURRIED_S:
+                return
         if self.look.message is not None and time.monotonic() > self._message_until:
             self.look.message = None
         self.redraw()
+
+    def _hurry(self) -> None:
+        """Poll again at once, keys in between."""
+        if not self._hurried:
+            self._hurried = True
+            self.set_timer(0.005, self._poll_again)
+
+    def _poll_again(self) -> None:
+        self._hurried = False
+        self.tick()
 
     def redraw(self, size: Size | None = None) -> None:
         """Draw what changed."""
         width, height = size or self.paper.size
         if width < 1 or height < 1:
             return
+        self._drawn = time.monotonic()
         self.look.chosen = min(self.look.chosen, max(len(self.source.lanes) - 1, 0))
         self.sheet = sheet.draw(self.source, self.look, width, height, self.clock)
         self.paper.show(self.sheet.rows, width)

@@ -28,6 +28,9 @@ class Columns:
         """Add a row at the end."""
         for column, value in zip(self.columns, row):
             column.append(value)
+
+    def forget(self) -> None:
+        """Drop the oldest rows once there are twice as many as are kept."""
         if len(self.columns[0]) >= 2 * self.most:
             for column in self.columns:
                 del column[: self.most]
@@ -55,7 +58,7 @@ class Trace:
     def __init__(self) -> None:
         self.seconds = Columns(7, SECONDS_MOST)
         self.minutes = Columns(6, MINUTES_MOST)
-        self._minute = -1
+        self._next_t = -np.inf  # end of the minute at hand
         self._n = self._good = 0
         self._sum = self._jitter = 0.0
         self._low, self._high = np.inf, -np.inf
@@ -71,13 +74,16 @@ class Trace:
         """Take a second that has readings."""
         t = second.k + offset_s
         jitter = second.jitter
-        self.seconds.append(
-            (t + 0.5, value, filtered, good, second.mean_us, second.temp_used_c, jitter)
-        )
-        minute = int(t // 60.0)
-        if minute != self._minute:
-            self._close()
-            self._minute = minute
+        times, values, smooth, goods, periods, temps, jitters = self.seconds.columns
+        times.append(t + 0.5)
+        values.append(value)
+        smooth.append(filtered)
+        goods.append(good)
+        periods.append(second.mean_us)
+        temps.append(second.temp_used_c)
+        jitters.append(jitter)
+        if t >= self._next_t:
+            self._close(t)
         self._n += 1
         self._jitter += jitter if jitter == jitter else 0.0
         if good and value == value:
@@ -88,13 +94,17 @@ class Trace:
             if value > self._high:
                 self._high = value
 
-    def _close(self) -> None:
+    def _close(self, t: float) -> None:
+        """The minute is over; `t` lies in another."""
+        self.seconds.forget()
         if self._n:
             mean = self._sum / self._good if self._good else NAN
             low, high = (self._low, self._high) if self._good else (NAN, NAN)
             share = self._good / self._n
-            middle = 60.0 * self._minute + 30.0
+            middle = self._next_t - 30.0
             self.minutes.append((middle, low, mean, high, share, self._jitter / self._n))
+            self.minutes.forget()
+        self._next_t = 60.0 * (t // 60.0) + 60.0
         self._n = self._good = 0
         self._sum = self._jitter = 0.0
         self._low, self._high = np.inf, -np.inf
