@@ -186,7 +186,10 @@ class AlarmLine:
 
     async def _deliver(self, batch: Sequence[Finding]) -> None:
         self._sent.append(self._now_s())
-        wrong = await self._send(self.settings, batch)
+        try:
+            wrong = await self._send(self.settings, batch)
+        except Exception as failed:  # whatever a notification's library raises; it may name secrets
+            wrong = type(failed).__name__
         if wrong and wrong != self.failed:
             self._say(f"alarm {self.name} CANNOT WARN: {wrong}")
         elif self.failed and not wrong:

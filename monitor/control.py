@@ -69,7 +69,7 @@ class ControlServer:
             if _same_user(writer):
                 await self._talk(reader, writer)
         except (TimeoutError, ConnectionError, ValueError, asyncio.CancelledError):
-            pass  # a slow, vanished or rude peer is dropped; nothing was promised to it
+            writer.transport.abort()  # slow, vanished or rude: nothing was promised to it
         finally:
             self._talks.discard(talk)
             writer.close()

@@ -139,16 +139,21 @@ def test_one_service_a_folder_and_one_a_bench_file(bench: OnPtys, tmp_path: Path
         assert "Traceback" not in run.said
 
 
+def pull_and_put_back(bench: OnPtys, run: Run, n: int) -> None:
+    """The n-th time."""
+    before = run.rows()
+    bench.do(lambda: bench.virtual.unplug("p1"))
+    until(lambda: sum(e["link"] == "lost" for e in events(run.log(), "gap")) == n)
+    assert run.rows() >= before
+    bench.do(lambda: bench.virtual.plug("p1"))
+    until(lambda: sum(e["link"] == "back" for e in events(run.log(), "gap")) == n + 1)
+    until(lambda: run.rows() > before + 3)
+
+
 def test_port_pulled_and_brought_back_ten_times(bench: OnPtys, tmp_path: Path) -> None:
     with running(bench, tmp_path) as run:
         for n in range(1, 11):
-            before = run.rows()
-            bench.do(lambda: bench.virtual.unplug("p1"))
-            until(lambda: sum(e["link"] == "lost" for e in events(run.log(), "gap")) == n)
-            assert run.rows() >= before
-            bench.do(lambda: bench.virtual.plug("p1"))
-            until(lambda: sum(e["link"] == "back" for e in events(run.log(), "gap")) == n + 1)
-            until(lambda: run.rows() > before + 3)
+            pull_and_put_back(bench, run, n)
         assert run.process.poll() is None
         assert run.end() == 0
         gaps = [e["TIME"] for e in events(run.log(), "gap")][1:]
