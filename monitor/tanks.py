@@ -59,7 +59,8 @@ class Watched:
             else:
                 spans.append([t, t])
         elif t - spans[-1][1] == UNWATCHED_S:
-            self.why[spans[-1][1]] = "out of the tank" if trust.out else trust.why or "silent"
+            why = trust.why if trust.belief != "believed" else "no readings"
+            self.why[spans[-1][1]] = "out of the tank" if trust.out else why
 
     def why_after(self, t: float) -> str | None:
         """What kept the probe from being usable at the end of its last span up to `t`."""

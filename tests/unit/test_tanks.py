@@ -17,7 +17,9 @@ def watched(usable: list[tuple[int, int]], until: int, why: str = "no-pulses") -
     """A probe usable in these seconds [from, to)."""
     made = Watched()
     for k in range(until):
-        trust: Any = SimpleNamespace(usable=any(a <= k < b for a, b in usable), out=False, why=why)
+        trust: Any = SimpleNamespace(
+            usable=any(a <= k < b for a, b in usable), out=False, why=why, belief="not-believed"
+        )
         settling: Any = SimpleNamespace(moving=False, shown_pct=0.08, u95_pct=0.0002)
         made.step(Second(k), trust, settling)
     return made
