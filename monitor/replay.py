@@ -7,11 +7,13 @@ order in which the files were read.
 
 from __future__ import annotations
 
+import math
 from collections import Counter
 from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, field
 from datetime import datetime
 from functools import partial
+from typing import Protocol
 
 from monitor.bench import Bench
 from monitor.blocks import Second
@@ -115,7 +117,26 @@ def _text(run: Run) -> Iterator[bytes | None]:
         yield None
 
 
-def replay(probes: Sequence[ProbeReplay]) -> Iterator[list[Finding]]:
+class Advancing(Protocol):
+    """What `replay` asks of a probe."""
+
+    @property
+    def closed_t(self) -> float:
+        """Up to where all has been judged, on the common time."""
+
+    @property
+    def done(self) -> bool:
+        """Whether all its runs have been judged."""
+
+    @property
+    def seen(self) -> Seen:
+        """For the fold over all probes."""
+
+    def advance(self) -> list[Finding]:
+        """Further findings, in order."""
+
+
+def replay(probes: Sequence[Advancing]) -> Iterator[list[Finding]]:
     """Findings of these probes, in order, as they become sure.
 
     Raises LogError, CalibrationError.
@@ -123,9 +144,32 @@ def replay(probes: Sequence[ProbeReplay]) -> Iterator[list[Finding]]:
     together = Together()
     while running := [probe for probe in probes if not probe.done]:
         together.take(min(running, key=lambda probe: probe.closed_t).advance())
+        if any(probe.closed_t == -math.inf for probe in probes if not probe.done):
+            continue  # in which tank it hangs is not known yet
         ready, _ = together.advance([probe.seen for probe in probes])
         if ready:
             yield ready
+
+
+def opened(
+    paths: Sequence[str],
+    given: Bench | None,
+    bare_probe: str | None = None,
+    bare_rate_hz: float | None = None,
+) -> tuple[datetime, list[Run]]:
+    """The first `started` of these files, and the runs that they hold.
+
+    Raises LogError if a file is no log, or one of a probe that the bench has not.
+    """
+    runs = reader.runs(paths, bare_probe, bare_rate_hz)
+    if given is not None:
+        for run in runs:
+            if run.probe not in given.probe:
+                raise LogError(
+                    f"{run.parts[0].path}: probe {run.probe} is not in the bench file; expected"
+                    f" one of {', '.join(given.probe)}"
+                )
+    return min(run.started for run in runs), runs
 
 
 def open_logs(
@@ -139,15 +183,7 @@ def open_logs(
 
     Raises LogError if a file is no log, CalibrationError if the bench's standards allow no fit.
     """
-    runs = reader.runs(paths, bare_probe, bare_rate_hz)
-    if given is not None:
-        for run in runs:
-            if run.probe not in given.probe:
-                raise LogError(
-                    f"{run.parts[0].path}: probe {run.probe} is not in the bench file; expected"
-                    f" one of {', '.join(given.probe)}"
-                )
-    zero = min(run.started for run in runs)
+    zero, runs = opened(paths, given, bare_probe, bare_rate_hz)
     names = dict.fromkeys(run.probe for run in runs)
     return [
         ProbeReplay(name, [run for run in runs if run.probe == name], zero, given, witness)

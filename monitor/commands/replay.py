@@ -9,15 +9,20 @@ from typing import TYPE_CHECKING, Annotated
 import typer
 
 from monitor.commands import Refusal, Wrong, load_bench
+from monitor.commands.many import judged, logs_of
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
 
+    from monitor.many import JudgedProbe
     from monitor.replay import ProbeReplay
 
 
 def command(
-    log: Annotated[list[str], typer.Argument(help="Logs, plain or gzipped.", metavar="LOG...")],
+    log: Annotated[
+        list[str],
+        typer.Argument(help="Logs, plain or gzipped, and folders of them.", metavar="LOG..."),
+    ],
     bench: Annotated[
         Path | None, typer.Option(help="Judge anew by this bench file, not by the log's settings.")
     ] = None,
@@ -29,15 +34,22 @@ def command(
         str | None, typer.Option(help="Of a bare capture (numbers only): whose it is.")
     ] = None,
     rate: Annotated[float | None, typer.Option(help="And its readings a second.")] = None,
+    jobs: Annotated[
+        int | None, typer.Option(min=1, help="Processes for many logs; else what is worth it.")
+    ] = None,
+    dask: Annotated[
+        str | None, typer.Option(help="Judge by the workers of this Dask scheduler.")
+    ] = None,
 ) -> None:
     """Play recorded logs on the screen, or print what was found in them.
 
     Example: stillbrine replay night.log.gz --bench bench.toml --findings
     """
+    paths = logs_of(log)
     if not findings:
         from monitor.commands.watch import play
 
-        play(log, bench, speed, probe, rate)
+        play(paths, bench, speed, probe, rate)
         return
     from monitor.calibration import CalibrationError
     from monitor.findings import line
@@ -45,8 +57,12 @@ def command(
     from monitor.replay import open_logs, replay
 
     given = load_bench(bench) if bench else None
+    probes: Sequence[JudgedProbe | ProbeReplay]
     try:
-        probes = open_logs(log, given, bare_probe=probe, bare_rate_hz=rate)
+        if probe is None and (dask or (len(paths) > 1 and jobs != 1)):
+            probes = judged(paths, given, jobs=jobs, dask=dask)
+        else:
+            probes = open_logs(paths, given, bare_probe=probe, bare_rate_hz=rate)
         for batch in replay(probes):
             sys.stdout.write("".join(line(finding) + "\n" for finding in batch))
     except LogError as wrong:
@@ -56,7 +72,7 @@ def command(
     _tell(probes)
 
 
-def _tell(probes: Sequence[ProbeReplay]) -> None:
+def _tell(probes: Sequence[JudgedProbe | ProbeReplay]) -> None:
     """What was dropped, and which settings did not check, on standard error."""
     from monitor.printable import printable
 

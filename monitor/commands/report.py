@@ -6,19 +6,23 @@ import os
 import shutil
 import sys
 from datetime import datetime, timedelta
+from functools import partial
 from pathlib import Path
 from typing import Annotated
 
 import typer
 
 from monitor.commands import Refusal, Wrong, load_bench
+from monitor.commands.many import judged, logs_of
 from monitor.commands.times import local_time
 
 EVENING_H = 18
 
 
 def command(
-    log: Annotated[list[str] | None, typer.Argument(help="Logs; else those of the bench.")] = None,
+    log: Annotated[
+        list[str] | None, typer.Argument(help="Logs and folders of them; else those of the bench.")
+    ] = None,
     bench: Annotated[
         Path | None,
         typer.Option(help="The bench file: whose logs; with logs named, judge them by it."),
@@ -30,6 +34,12 @@ def command(
     until: Annotated[str | None, typer.Option(help="Local time; else the end.")] = None,
     html: Annotated[Path | None, typer.Option(help="Write the page as one HTML file.")] = None,
     csv: Annotated[Path | None, typer.Option(help="Write minute summaries as CSV.")] = None,
+    jobs: Annotated[
+        int | None, typer.Option(min=1, help="Processes for many logs; else what is worth it.")
+    ] = None,
+    dask: Annotated[
+        str | None, typer.Option(help="Judge by the workers of this Dask scheduler.")
+    ] = None,
 ) -> None:
     """Say what happened in the night, most important first.
 
@@ -45,12 +55,12 @@ def command(
     first = local_time(since, "--since")
     last = local_time(until, "--until")
     if log:
-        paths, given = list(log), load_bench(bench) if bench else None
+        paths, given = logs_of(log), load_bench(bench) if bench else None
     else:
         first = first or _last_evening(datetime.now().astimezone())
         paths, given = logs_of_bench(bench, logs, first), None
     try:
-        night = gather(paths, given, first, last)
+        night = gather(paths, given, first, last, partial(judged, jobs=jobs, dask=dask))
     except LogError as wrong:
         raise Wrong(str(wrong)) from None
     except CalibrationError as wrong:

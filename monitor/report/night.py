@@ -3,17 +3,18 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from datetime import datetime, timedelta
-from typing import NamedTuple
+from typing import NamedTuple, Protocol
 
 from monitor.bench import Bench
 from monitor.blocks import NAN, Event, Second
 from monitor.chain import Judges
 from monitor.dosing.ledger import Dose
 from monitor.findings import Finding
-from monitor.replay import open_logs, replay
+from monitor.many import JudgedProbe, Keeper, judge_logs
+from monitor.replay import replay
 
 TOLD = ("dose", "strike", "water", "out", "back", "note", "check", "compare", "silence", "gap")
 
@@ -62,19 +63,20 @@ class Night:
 
 
 class _Minutes:
-    """Sums seconds into minutes as they are judged."""
+    """Sums the seconds of one run into minutes as they are judged."""
 
-    def __init__(self, lane: Lane, offset: float) -> None:
-        self.lane = lane
-        self.offset = offset
+    def __init__(self, probe: str) -> None:
+        self.lane = Lane(probe)
+        self.offset = 0.0
         self._minute: int | None = None
         self._values: list[float] = []
         self._readings = 0
         self._temp = self._u95 = NAN
         self._belief = ""
 
-    def see(self, second: Second, judges: Judges) -> None:
+    def __call__(self, probe: str, offset: float, second: Second, judges: Judges) -> None:
         """One judged second."""
+        self.offset = offset
         if self._minute != second.k // 60:
             self.close()
             self._minute = second.k // 60
@@ -115,44 +117,55 @@ class _Minutes:
         self._values, self._readings = [], 0
 
 
+class Judge(Protocol):
+    """How many logs are judged: `many.judge_logs`, or that with more said to it."""
+
+    def __call__(
+        self, paths: Sequence[str], given: Bench | None, *, keeper: Callable[[str], Keeper]
+    ) -> list[JudgedProbe]:
+        """The probes of these logs, judged."""
+
+
 def gather(
     paths: Sequence[str],
     given: Bench | None = None,
     since: datetime | None = None,
     until: datetime | None = None,
+    judge: Judge = judge_logs,
 ) -> Night:
     """Judge these logs and keep what lies between `since` and `until`.
 
     Raises LogError, CalibrationError.
     """
-    lanes: dict[str, Lane] = {}
-    sums: dict[tuple[str, float], _Minutes] = {}
-
-    def see(probe: str, offset: float, second: Second, judges: Judges) -> None:
-        minutes = sums.get((probe, offset))
-        if minutes is None:
-            lane = lanes.setdefault(probe, Lane(probe))
-            minutes = sums[probe, offset] = _Minutes(lane, offset)
-        minutes.see(second, judges)
-
-    probes = open_logs(paths, given, see)
+    probes = judge(paths, given, keeper=_Minutes)
     findings = [finding for batch in replay(probes) for finding in batch]
-    for minutes in sums.values():
-        minutes.close()
-    for probe in probes:
-        lane = lanes.setdefault(probe.probe, Lane(probe.probe))
-        lane.dropped = dict(probe.told.dropped)
-        lane.messages = probe.told.messages
+    lanes = [_lane(probe) for probe in probes]
     zero = probes[0].zero
     first = 0.0 if since is None else (since - zero).total_seconds()
     ends = [probe.closed_t for probe in probes]
     last = max(ends) if until is None else (until - zero).total_seconds()
-    night = Night(zero, max(first, 0.0), min(last, max(ends)), list(lanes.values()), [])
+    night = Night(zero, max(first, 0.0), min(last, max(ends)), lanes, [])
     night.findings = [f for f in findings if _touches(f, night)]
     for lane in night.lanes:
         lane.minutes = [m for m in lane.minutes if night.from_t < m.t <= night.to_t + 60]
         lane.events = [e for e in lane.events if night.from_t <= e.time_s <= night.to_t]
     return night
+
+
+def _lane(probe: JudgedProbe) -> Lane:
+    """All runs of one probe, in order."""
+    joined = Lane(probe.probe)
+    for run in probe.runs:
+        assert isinstance(run.kept, _Minutes)
+        lane = run.kept.lane
+        if lane.tank:
+            joined.tank, joined.label, joined.aim_pct = lane.tank, lane.label, lane.aim_pct
+        joined.minutes += lane.minutes
+        joined.events += lane.events
+        joined.doses |= lane.doses
+    joined.dropped = dict(probe.told.dropped)
+    joined.messages = probe.told.messages
+    return joined
 
 
 def _touches(finding: Finding, night: Night) -> bool:
