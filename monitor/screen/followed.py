@@ -18,12 +18,13 @@ from monitor.findings import Finding, in_order
 from monitor.logbook import reader
 from monitor.screen.growing import Followed
 from monitor.screen.source import ActError
-from monitor.tanks import Unwatched
+from monitor.tanks import UNWATCHED_S, Unwatched
 from monitor.view import Lane
 
 BUDGET_S = 0.06  # of a poll
 DEAD_S = 15.0  # the service writes a line at least every ten seconds
 ASK_S = 5.0
+KEPT_S = 2 * UNWATCHED_S  # what an `unwatched` may still ask for
 
 
 class LiveSource:
@@ -138,6 +139,8 @@ class LiveSource:
             upto = min(e.follower.chain.closed_t + e.offset for e in its if e.follower)
             fold = self._tanks.setdefault(tank, Unwatched(tank))
             found += fold.advance(upto, spans)
+            for _, watched, offset in spans:
+                watched.forget(upto - offset - KEPT_S)
         return found
 
     def _ask(self) -> None:

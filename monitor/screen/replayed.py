@@ -19,7 +19,7 @@ from monitor.logbook import reader
 from monitor.logbook.parser import Item
 from monitor.logbook.reader import LogError, Run
 from monitor.screen.source import ActError
-from monitor.tanks import Unwatched
+from monitor.tanks import UNWATCHED_S, Unwatched
 from monitor.view import Lane
 
 SLICE_S = 120.0  # judged at a time, at most
@@ -27,6 +27,7 @@ HUNT_S = 1.0  # and while it runs on to a finding: it stops no farther behind
 BUDGET_S = 0.06  # of a poll
 WORTH_A_LOOK = ("fault", "belief", "rest", "limit", "unwatched", "notice", "trend")
 SPEED_MOST = 3600.0
+KEPT_S = 2 * UNWATCHED_S  # what an `unwatched` may still ask for
 
 
 class Player:
@@ -213,6 +214,8 @@ class ReplaySource:
             fold = self._tanks.setdefault(tank, Unwatched(tank))
             spans = [(p.lane.probe, p.chain.watched, p.offset) for p in its]
             found += fold.advance(upto, spans)
+            for _, watched, offset in spans:
+                watched.forget(upto - offset - KEPT_S)
         return found
 
     def seek(self, t: float) -> None:

@@ -130,6 +130,20 @@ def test_several_probes_have_a_lane_each(tmp_path: Path) -> None:
     assert all(lane.begun for lane in source.lanes)
 
 
+def test_a_tank_that_nobody_watches_is_told_on_its_lane(tmp_path: Path) -> None:
+    events = [Event(100.0, "out", {"why": "wipe"}), Event(900.0, "back", {})]
+    log = invented.log_text(invented.bench(), length_s=1000.0, events=events)
+    paths = [invented.saved(tmp_path, log)]
+    source = ReplaySource(paths)
+    source.seek(800.0)
+    source.advance()
+    assert source.lanes[0].lasting["unwatched", ""]["from_t"] == 100.0
+    source.seek(1e9)
+    source.advance()
+    assert not source.lanes[0].lasting
+    assert told(source.lanes) == findings_of(paths)
+
+
 def test_a_log_without_settings_asks_for_a_bench(tmp_path: Path) -> None:
     text = "# stillbrine log 1\n# probe: p1\n# started: 2026-03-14T18:00:00Z\n"
     path = invented.saved(tmp_path, text + "time_s,period_us,temp_c\n0.000,900.0,25.0\n")
