@@ -25,8 +25,9 @@ from monitor.dosing.ledger import Change, Dose
 GATE_SDS, GATE = 5.0, (0.012, 0.05)
 INNER = 0.6  # of the gate: readings beyond it are on their way to a jump, or back
 FOLLOW, FOLLOW_MOST = 0.2, 0.004  # a second; of its residual, which is clipped
-LEARN = 0.004  # a reading, of the noise
+LEARN, LEARNED = 0.004, 250  # a reading, of the noise; from so many on
 UNKNOWN_NOISE = 0.002
+LEAST_TICKS = 0.3  # less noise than that cannot be seen beside the tick
 LOST_S, LOST_NOISY_S = 8, 20  # without a reading in the gate; while jumps go on
 LINE_N = 12
 BACK_S = 30.0
@@ -56,8 +57,10 @@ class Level:
         self.locked = False
         self.m = NAN if carried.get("m") is None else carried["m"]
         self.in_gate_ln = NAN  # mean of this second's readings in the gate
-        self.noise = carried.get("noise") or noise_of(settings.standards_in_force)
-        self.standards_noise = noise_of(settings.standards_in_force)
+        self.told_noise = noise_of(settings.standards_in_force)  # None: they do not tell
+        noise = carried.get("noise") or self.told_noise
+        self.noise = noise or UNKNOWN_NOISE
+        self.learned = LEARNED if noise else 0  # readings
         self.rate_hz = carried.get("rate_hz") or settings.rate_hz or 0.0
         self.gate = GATE[1]
         self.medians: deque[tuple[int, float]] = deque(maxlen=64)
@@ -139,10 +142,14 @@ class Level:
 
     def learn(self, second: Second) -> None:
         """Follow the noise of one reading; only while all is well."""
-        share = min(LEARN * second.n, 0.5)
+        n = second.n
+        share = min(LEARN * n, 0.5)
+        if self.learned < LEARNED:  # as a mean of all so far
+            self.learned += n
+            share = max(share, n / self.learned)
         seen = 0.886 * min(second.jitter, 4.0 * self.noise)
         noise = self.noise + share * (seen - self.noise)
-        self.noise = noise = max(noise, 0.3 * self.tick_us / second.mean_us)
+        self.noise = noise = max(noise, LEAST_TICKS * self.tick_us / second.mean_us)
         self.gate = min(max(GATE_SDS * noise, GATE[0]), GATE[1])
 
     def look(self, second: Second, noisy: bool) -> list[Judged]:
@@ -239,7 +246,7 @@ def line(values: Sequence[float]) -> tuple[float, float, float]:
     return mean + slope * middle, slope * (n - 1), off[int(0.8 * n)]
 
 
-def noise_of(standards: Sequence[bench.Standard]) -> float:
+def noise_of(standards: Sequence[bench.Standard]) -> float | None:
     """Noise of one reading, relative, pooled over the standards' own scatter.
 
     The tick's part is left in: taking it out makes noise below a third of a tick too small to be
@@ -250,4 +257,4 @@ def noise_of(standards: Sequence[bench.Standard]) -> float:
         if each.sd_us is not None and each.readings > 2:
             total += (each.readings - 1) * (each.sd_us / each.period_us) ** 2
             weight += each.readings - 1
-    return max(math.sqrt(total / weight), 1e-4) if weight else UNKNOWN_NOISE
+    return max(math.sqrt(total / weight), 1e-4) if weight else None

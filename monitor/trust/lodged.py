@@ -23,7 +23,7 @@ STEEP = 10.0  # the step, over what either line moves in a second
 NEAR_LINE, NEAR_LONG_LINE = 0.08, 0.1  # of the step: 80th percentile of the distances
 NEAR_SDS = 2.5  # or so many deviations of a median
 STAYS = 0.4  # of the step, to the end
-GOES_ON = 0.5  # of the step: what rises by more after it is water
+GOES_ON, GOES_ON_CALM = 0.5, 0.2  # of the step: what moves by more after it is water
 BETWEEN = (0.15, 0.85)  # of the step: medians there are on their way
 LONGEST_S, LONGEST_DOSED_S = 3, 2  # so many of them; after a dose, which may be as high, fewer
 NEAR_DOSE_S = 68.0
@@ -97,7 +97,8 @@ def step_up(level: Level, t: float) -> Step | None:
         return None
     foot, top = low.at(BEFORE - 1), high.first
     moved = long.at(AFTER - 1) - long.first
-    if long.at(AFTER - 1) - foot < STAYS * height or moved > GOES_ON * height:
+    goes_on = GOES_ON if level.after_dose(t - ALL) else GOES_ON_CALM
+    if long.at(AFTER - 1) - foot < STAYS * height or moved > goes_on * height:
         return None
     bounds = [foot + share * (top - foot) for share in BETWEEN]
     across = values[BEFORE - 2 : BEFORE + ACROSS + 2]

@@ -15,7 +15,7 @@ from collections import deque
 from monitor.blocks import NAN, Second
 from monitor.findings import Finding
 from monitor.trust.force import InForce
-from monitor.trust.level import Level
+from monitor.trust.level import LEAST_TICKS, Level
 
 LEAST_N, LEAST_S = 12, 3.0
 LONGER = 2.5  # times the longest of the last 30 runs
@@ -26,6 +26,7 @@ PER_C = 0.0212  # of the period, a Celsius
 CHUNK_S, CHUNKS = 20, 6  # means that tell where the level stood, and how it wanders
 MEANS_KEPT = 300
 DOUBT_TICKS = 0.05
+HIDDEN_TICKS = 0.1
 
 
 class Stuck:
@@ -92,7 +93,14 @@ class Stuck:
         return CHANCE_LN / math.log(min(q, 1.0 - 1e-12)) if q > 0.0 else 0.0
 
     def _sd_us(self, level: Level) -> float:
-        return 0.85 * min(level.standards_noise, 1.3 * level.noise) * self._figure
+        """Noise of one reading, rather too small: beside the tick any less looks the same."""
+        seen_us = 1.3 * level.noise * self._figure
+        if level.told_noise is not None:
+            return 0.85 * min(level.told_noise * self._figure, seen_us)
+        hidden = (
+            seen_us < 1.4 * LEAST_TICKS * level.tick_us
+        )  # behind the tick: any less is as likely
+        return HIDDEN_TICKS * level.tick_us if hidden else 0.85 * seen_us
 
     def _off_us(self, tick_us: float) -> float:
         """How far from the middle of the figure's tick the level is for sure."""
