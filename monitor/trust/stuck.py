@@ -97,9 +97,7 @@ class Stuck:
         seen_us = 1.3 * level.noise * self._figure
         if level.told_noise is not None:
             return 0.85 * min(level.told_noise * self._figure, seen_us)
-        hidden = (
-            seen_us < 1.4 * LEAST_TICKS * level.tick_us
-        )  # behind the tick: any less is as likely
+        hidden = level.learned == 0 or seen_us < 1.4 * LEAST_TICKS * level.tick_us
         return HIDDEN_TICKS * level.tick_us if hidden else 0.85 * seen_us
 
     def _off_us(self, tick_us: float) -> float:
