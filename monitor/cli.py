@@ -41,6 +41,9 @@ COMMANDS = {  # each a module of monitor.commands; the first line of its help
 }
 
 
+_USAGE: Any = typer.BadParameter.__bases__[0]  # whichever copy of click typer stands on
+
+
 class _Commands(TyperGroup):
     """Imports and builds the one command that is called: the others would cost each start."""
 
@@ -68,7 +71,6 @@ app = typer.Typer(
     cls=_Commands,
     name="stillbrine",
     help="Has the tank come to rest, where, with how much doubt, and can the probe be believed?",
-    no_args_is_help=True,
     rich_markup_mode=None,
     pretty_exceptions_enable=False,
     context_settings={"help_option_names": ["-h", "--help"]},
@@ -80,16 +82,26 @@ def main() -> None:
     """Run the command line; the entry point of `stillbrine`."""
     # Nothing here has matrices worth a thread; to start a pool of them takes half of NumPy's start
     os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+    if len(sys.argv) == 1:
+        sys.argv.append("--help")
     try:
-        app(standalone_mode=True)
+        sys.exit(app(standalone_mode=False) or 0)
     except Refusal as refusal:
-        _say(refusal, 1)
+        _say(str(refusal), 1)
     except Wrong as wrong:
-        _say(wrong, 2)
+        _say(str(wrong), 2)
+    except _USAGE as wrong:
+        command = wrong.ctx.command_path if wrong.ctx is not None else "stillbrine"
+        _say(f"{wrong.format_message().rstrip('.')}; expected as in {command} --help", 2)
+    except (typer.Abort, KeyboardInterrupt):
+        sys.exit(130)
     except BrokenPipeError:
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())  # nothing left to flush to
         sys.exit(0)
 
 
-def _say(said: Exception, code: int) -> None:
-    print(f"stillbrine: {said}", file=sys.stderr)
+def _say(said: str, code: int) -> None:
+    from monitor.printable import printable
+
+    print(f"stillbrine: {printable(said, 600)}", file=sys.stderr)
     sys.exit(code)

@@ -17,7 +17,6 @@ from monitor.commands import Refusal, Wrong
 
 app = typer.Typer(
     help="Tell a running service what was done: a dose, water, a probe taken out, a note.",
-    no_args_is_help=True,
     rich_markup_mode=None,
     add_completion=False,
     pretty_exceptions_enable=False,
