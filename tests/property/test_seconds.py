@@ -24,7 +24,9 @@ def told(seconds: list[Second]) -> list[str]:
 
 def log(seed: int, n: int) -> Block:
     rng = np.random.default_rng(seed)
-    steps = rng.choice([0.0, 0.013, 0.1, 0.4, 3.0, 8000.0], n, p=[0.2, 0.3, 0.3, 0.18, 0.018, 0.002])
+    steps = rng.choice(
+        [0.0, 0.013, 0.1, 0.4, 3.0, 8000.0], n, p=[0.2, 0.3, 0.3, 0.18, 0.018, 0.002]
+    )
     period = np.round(500 + rng.normal(0, 1, n), 1)
     period[rng.random(n) < 0.05] = 0.0
     period[rng.random(n) < 0.05] *= 1.3
