@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import itertools
+
 import numpy as np
 from hypothesis import given, settings
 from hypothesis import strategies as st
@@ -38,7 +40,7 @@ def gathered(block: Block, cuts: list[int], events: dict[int, Event]) -> list[st
     gatherer = Gatherer()
     seconds: list[Second] = []
     edges = sorted({0, len(block.time_s), *cuts, *events})
-    for start, stop in zip(edges, edges[1:]):
+    for start, stop in itertools.pairwise(edges):
         if start in events:
             seconds += gatherer.feed(events[start])
         seconds += gatherer.feed(Block(*(column[start:stop] for column in block)))
