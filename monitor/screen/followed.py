@@ -115,9 +115,7 @@ class LiveSource:
         found += self._of_tanks()
         for finding in in_order(found):
             for lane in self.lanes:
-                named = finding.get("probe")
-                if lane.probe == named or (named is None and lane.tank == finding.get("tank")):
-                    lane.finding(finding)
+                lane.hear(finding)
         self._ask()
 
     def _look(self, each: Followed) -> None:

@@ -250,7 +250,7 @@ def heading(
     else:
         liquid = text.fit(dose.liquid, min(len(dose.liquid), 16))
         when = f"{clock.second(dose.time_s)}, {figures.length(now_s - dose.time_s)} ago"
-        runs.append((f" last dose {dose.volume_ml:.4g} mL {liquid} at {when}", ""))
+        runs.append((f" last dose {dose.volume_ml:.4g} mL {liquid} {when}", ""))
         runs += _verdict(lane, dose.time_s, scale)
     if math.isfinite(lane.tank_ml):
         runs.append((f" · tank {lane.tank_ml:.0f} mL", "faint"))
@@ -267,7 +267,7 @@ def _verdict(lane: Lane, dose_t: float, scale: Scale) -> list[Run]:
         return [(" · at rest, nothing was foretold", "faint")]
     expected = figures.short_text(rest["predicted_pct"], rest["predicted_u95_pct"], scale)
     if rest["verdict"] == "agrees":
-        return [(f" · landed as foretold ({expected})", "faint")]
+        return [(f" · landed as foretold, {expected}", "faint")]
     return [(f" · foretold {expected}, LANDED ELSEWHERE", "act")]
 
 

@@ -1,23 +1,22 @@
 """Recorded logs as a source: played, paused, sought, run on to the next finding.
 
-Rows are cut where play stands; what is concluded does not depend on where that is.
+What is concluded does not depend on where play stood. The same logs judged by another bench, or
+another night's logs, can be played beside them: their lanes are marked and begin at the same time.
 """
 
 from __future__ import annotations
 
 import time
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from datetime import datetime
 from pathlib import Path
-from typing import Any
+from typing import Any, NamedTuple
 
 from monitor.bench import Bench
-from monitor.blocks import Block, Event, Second
-from monitor.chain import Chain, Judges
-from monitor.findings import Finding, in_order, shifted
+from monitor.findings import Finding, in_order
 from monitor.logbook import reader
-from monitor.logbook.parser import Item
 from monitor.logbook.reader import LogError, Run
+from monitor.screen.player import Player, has_settings, last_t
 from monitor.screen.source import ActError
 from monitor.tanks import UNWATCHED_S, Unwatched
 from monitor.view import Lane
@@ -28,77 +27,29 @@ BUDGET_S = 0.06  # of a poll
 WORTH_A_LOOK = ("fault", "belief", "rest", "limit", "unwatched", "notice", "trend")
 SPEED_MOST = 3600.0
 KEPT_S = 2 * UNWATCHED_S  # what an `unwatched` may still ask for
+BESIDE = "B"  # marks the lanes of what is played beside
 
 
-class Player:
-    """One probe's runs, judged up to a time."""
+class _Night(NamedTuple):
+    """Runs that are judged alike: from when their time counts, by which bench, marked how."""
 
-    def __init__(self, lane: Lane, runs: Sequence[Run], zero: datetime, given: Bench | None):
-        self.lane = lane
-        self.done = False
-        self._zero = zero
-        self._given = given
-        self._runs = list(runs)
-        self._next_run()
-
-    def _next_run(self) -> None:
-        run = self._runs.pop(0)
-        self.offset = (run.started - self._zero).total_seconds()
-        self.lane.begin_run(self.offset)
-        first = 0 if run.parts[0].part == 1 else None
-        self.chain = Chain(self.lane.probe, self._given, first, self._watch)
-        self._items = _items(run)
-        self._held: Item | None = None
-
-    def _watch(self, second: Second, judges: Judges) -> None:
-        self.lane.second(second, judges)
-
-    def play(self, upto_t: float) -> list[Finding]:
-        """Judge all lines before `upto_t`. Raises LogError, CalibrationError."""
-        found: list[Finding] = []
-        while not self.done and self.offset <= upto_t:
-            item = self._held if self._held is not None else next(self._items, None)
-            self._held = None
-            if item is None:
-                self._end_run()
-                continue
-            now, later = _cut(item, upto_t - self.offset)
-            if now is not None:
-                found += self.chain.feed(now)
-            if later is not None:
-                self._held = later
-                break
-        return [shifted(each, self.offset) for each in found] if self.offset else found
-
-    def _end_run(self) -> None:
-        if self._runs:
-            self._next_run()
-        else:
-            self.done = True
+    runs: list[Run]
+    zero: datetime
+    given: Bench | None
+    mark: str = ""
 
     @property
-    def closed_t(self) -> float:
-        """Up to where all has been judged."""
-        return self.chain.closed_t + self.offset
+    def end_s(self) -> float:
+        """Time of the last line."""
+        return max(last_t(run, self.zero) for run in self.runs)
 
-
-def _items(run: Run) -> Iterator[Item]:
-    for part in run.parts:
-        parser = run.parser()
-        for chunk in part.chunks():
-            yield from parser.feed(chunk)
-        yield from parser.finish()
-
-
-def _cut(item: Item, t: float) -> tuple[Item | None, Item | None]:
-    """What of the item lies before `t`, and what does not. An event of old time goes on."""
-    if isinstance(item, Event):
-        return (item, None) if item.time_s < t else (None, item)
-    i = int(item.time_s.searchsorted(t))
-    if i == len(item.time_s):
-        return item, None
-    now = Block(*(column[:i] for column in item)) if i else None
-    return now, Block(*(column[i:] for column in item))
+    def players(self) -> list[Player]:
+        """A player a probe, each with a lane of its own."""
+        made = []
+        for name in dict.fromkeys(run.probe for run in self.runs):
+            its = [run for run in self.runs if run.probe == name]
+            made.append(Player(Lane(name, self.given, self.mark), its, self.zero, self.given))
+        return made
 
 
 class ReplaySource:
@@ -114,24 +65,25 @@ class ReplaySource:
         speed: float = 60.0,
         bare_probe: str | None = None,
         bare_rate_hz: float | None = None,
+        against: Bench | None = None,
+        beside: Sequence[str] = (),
     ) -> None:
-        """Raises LogError if a file is no log, CalibrationError if standards allow no fit."""
-        self._runs = reader.runs(paths, bare_probe, bare_rate_hz)
-        for run in self._runs:
-            if given is not None and run.probe not in given.probe:
-                known = ", ".join(given.probe)
-                name = Path(run.parts[0].path).name
-                raise LogError(
-                    f"{name}: probe {run.probe} is not in the bench; expected one of {known}"
-                )
-            if given is None and not _has_settings(run):
-                name = Path(run.parts[0].path).name
-                raise LogError(f"{name}: no bench event in it; expected --bench BENCH beside it")
-        self.started = min(run.started for run in self._runs)
-        self._given = given
+        """Raises LogError if a file is no log, CalibrationError if standards allow no fit.
+
+        `against`: judge all once more by this bench. `beside`: logs of another time.
+        """
+        runs = _checked(reader.runs(paths, bare_probe, bare_rate_hz), given)
+        self.started = min(run.started for run in runs)
+        self._nights = [_Night(runs, self.started, given)]
+        if against is not None:
+            self._nights.append(_Night(_checked(runs, against), self.started, against, BESIDE))
+        if beside:
+            others = _checked(reader.runs(beside, bare_probe, bare_rate_hz), given)
+            zero = min(run.started for run in others)
+            self._nights.append(_Night(others, zero, given, BESIDE))
         self.speed = speed
         self.playing = True
-        self.end_s = max(_last_t(run, self.started) for run in self._runs)
+        self.end_s = max(night.end_s for night in self._nights)
         self._hunting = False
         self._polled: float | None = None
         self._target = 0.0
@@ -139,15 +91,9 @@ class ReplaySource:
         self._begin()
 
     def _begin(self) -> None:
-        names = list(dict.fromkeys(run.probe for run in self._runs))
-        self.lanes = [Lane(name, self._given) for name in names]
-        self._players = [
-            Player(
-                lane, [r for r in self._runs if r.probe == lane.probe], self.started, self._given
-            )
-            for lane in self.lanes
-        ]
-        self._tanks: dict[str, Unwatched] = {}
+        self._nights_playing = [night.players() for night in self._nights]
+        self._tanks: dict[tuple[int, str], Unwatched] = {}
+        self.lanes = [player.lane for players in self._nights_playing for player in players]
         self._done_s = 0.0
 
     @property
@@ -192,26 +138,23 @@ class ReplaySource:
 
     def _slice(self, upto: float) -> list[Finding]:
         """Judge up to this time; what was found that is worth a look."""
-        found: list[Finding] = []
-        for player in self._players:
-            found += player.play(upto)
-        found += self._of_tanks()
-        found = in_order(found)
-        for finding in found:
-            for lane in self.lanes:
-                if lane.probe == finding.get("probe", lane.probe) and (
-                    "probe" in finding or lane.tank == finding.get("tank")
-                ):
-                    lane.finding(finding)
-        left = self._left
-        return [f for f in found if f["finding"] in WORTH_A_LOOK and f["t"] > max(left, 1.0)]
+        all_found: list[Finding] = []
+        for place, players in enumerate(self._nights_playing):
+            found = [finding for player in players for finding in player.play(upto)]
+            found = in_order(found + self._of_tanks(place, players))
+            for finding in found:
+                for player in players:
+                    player.lane.hear(finding)
+            all_found += found
+        since = max(self._left, 1.0)
+        return [f for f in all_found if f["finding"] in WORTH_A_LOOK and f["t"] > since]
 
-    def _of_tanks(self) -> list[Finding]:
+    def _of_tanks(self, place: int, players: list[Player]) -> list[Finding]:
         found: list[Finding] = []
-        for tank in {lane.tank for lane in self.lanes}:
-            its = [player for player in self._players if player.lane.tank == tank]
+        for tank in {player.lane.tank for player in players}:
+            its = [player for player in players if player.lane.tank == tank]
             upto = min(player.closed_t for player in its)
-            fold = self._tanks.setdefault(tank, Unwatched(tank))
+            fold = self._tanks.setdefault((place, tank), Unwatched(tank))
             spans = [(p.lane.probe, p.chain.watched, p.offset) for p in its]
             found += fold.advance(upto, spans)
             for _, watched, offset in spans:
@@ -241,21 +184,15 @@ class ReplaySource:
         """Nothing is held."""
 
 
-def _has_settings(run: Run) -> bool:
-    """Whether a bench stands before the run's first row."""
-    for item in _items(run):
-        if isinstance(item, Block):
-            return False
-        if item.kind == "bench":
-            return True
-    return False
-
-
-def _last_t(run: Run, zero: datetime) -> float:
-    """Time of a run's last line on the common time, s."""
-    last = 0.0
-    parser = run.parser()
-    for chunk in run.parts[-1].chunks():
-        for item in parser.feed(chunk):
-            last = max(last, float(item.time_s[-1]) if isinstance(item, Block) else item.time_s)
-    return last + 1.0 + (run.started - zero).total_seconds()
+def _checked(runs: list[Run], given: Bench | None) -> list[Run]:
+    """The runs, if there is something to judge them by. Raises LogError."""
+    for run in runs:
+        name = Path(run.parts[0].path).name
+        if given is not None and run.probe not in given.probe:
+            known = ", ".join(given.probe)
+            raise LogError(
+                f"{name}: probe {run.probe} is not in the bench; expected one of {known}"
+            )
+        if given is None and not has_settings(run):
+            raise LogError(f"{name}: no bench event in it; expected --bench BENCH beside it")
+    return runs

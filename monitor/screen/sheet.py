@@ -321,7 +321,7 @@ def _landing(
     room: int,
 ) -> None:
     lane, scale = tank.lane, tank.scale
-    name = text.fit(tank.name, min(len(tank.name), max(width // 4, 10))).rstrip()
+    name = text.fit(tank.name, min(len(tank.name), max(width // 5, 12))).rstrip()
     sheet.rows.append(landing.heading(lane, name, now_s, clock, scale, width))
     about = 3 if room >= 24 else 2 if room >= 12 else 1
     sheet.rows += landing.belief(lane, width, about)
