@@ -6,6 +6,7 @@ another night's logs, can be played beside them: their lanes are marked and begi
 
 from __future__ import annotations
 
+import re
 import time
 from collections.abc import Mapping, Sequence
 from datetime import datetime
@@ -43,10 +44,16 @@ class _Night(NamedTuple):
         """Time of the last line."""
         return max(last_t(run, self.zero) for run in self.runs)
 
+    def _place(self, probe: str) -> tuple[int, list[str | int]]:
+        """The bench's order, or that of the names with their numbers."""
+        place = list(self.given.probe).index(probe) if self.given is not None else 0
+        parts = re.split(r"([0-9]+)", probe)
+        return place, [int(part) if i % 2 else part for i, part in enumerate(parts)]
+
     def players(self) -> list[Player]:
         """A player a probe, each with a lane of its own."""
         made = []
-        for name in dict.fromkeys(run.probe for run in self.runs):
+        for name in sorted({run.probe for run in self.runs}, key=self._place):
             its = [run for run in self.runs if run.probe == name]
             made.append(Player(Lane(name, self.given, self.mark), its, self.zero, self.given))
         return made

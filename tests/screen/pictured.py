@@ -15,6 +15,7 @@ def normal(svg: str) -> str:
     """The picture without what is drawn by lot, fonts from elsewhere, and a window's buttons."""
     svg = re.sub(r"terminal-\d+", "terminal", svg)
     svg = re.sub(r"@font-face \{.*?\}", "", svg, flags=re.DOTALL)
+    svg = re.sub(r"<!-- Generated .*? -->", "", svg)
     svg = re.sub(r"<circle [^>]*/>", "", svg)
     return "\n".join(line.rstrip() for line in svg.split("\n"))
 
