@@ -17,6 +17,7 @@ from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import ProcessPoolExecutor, as_completed
 from concurrent.futures.process import BrokenProcessPool
 from datetime import datetime
+from importlib import import_module
 from pathlib import Path
 from typing import Any, NamedTuple, Protocol
 from urllib.parse import urlsplit
@@ -190,14 +191,13 @@ def _deaf() -> None:
 def _of_dask(tasks: Sequence[Task], address: str) -> Iterator[tuple[int, Judged]]:
     """By the workers of a Dask scheduler; a run whose worker is lost is judged by another."""
     try:
-        import distributed
+        distributed: Any = import_module("distributed")
     except ImportError:
         raise ManyError(
             "--dask: distributed is not installed; expected stillbrine[fleet]"
         ) from None
     _reach(address)
-    client: Any = distributed.Client(address)
-    with client:
+    with distributed.Client(address) as client:
         waiting = client.map(judge, tasks, retries=RETRIES, pure=False)
         index = {future.key: i for i, future in enumerate(waiting)}
         for future in distributed.as_completed(waiting):
