@@ -32,6 +32,7 @@ from monitor.housekeeping import Housekeeping
 from monitor.logbook.codec import utc_of, utc_text
 from monitor.logbook.reader import LogError
 from monitor.logbook.writer import LogWriteError, LogWriter
+from monitor.mqtt import Publisher
 from monitor.orders import Order, OrderError, parse
 from monitor.places import HeldError, Lock, private_folder, socket_path
 from monitor.recorder import Head, Past, Recorder
@@ -76,6 +77,8 @@ class Service:
         self.telling.hooks.append(tell)
         self.bells = Bells(bench_path, clock, say)
         self.telling.hooks.append(self.bells.take)
+        self.publisher = Publisher(bench_path, folder, say)
+        self.telling.hooks.append(self.publisher.take)
         self.housekeeping = Housekeeping(folder, clock, self.bells.trouble, say)
         self._say = say
         self._ports: dict[str, asyncio.Task[None]] = {}
@@ -100,6 +103,7 @@ class Service:
                 await control.close()
                 await _ended([*around, *self._ports.values(), *self._joining])
                 await self.bells.close()
+                await self.publisher.close()
                 for probe in [*self.recorders]:
                     self._end(probe)
 
@@ -126,6 +130,7 @@ class Service:
             self.bells.hang(self.bench)
         except AlarmError as wrong:
             raise ServiceError(str(wrong)) from None
+        self.publisher.hang(self.bench)
         for recorder in self.recorders.values():
             for what, until_utc in recorder.silences.items():
                 self._silence(what, until_utc)
@@ -161,7 +166,7 @@ class Service:
             probe,
             Decoder(settings),
             writer,
-            Follower(probe),
+            Follower(probe, watch=partial(self.publisher.see, probe, started)),
             self.clock,
             zero_s,
             lambda found: self.telling.tell(probe, found, zero_s - self.zero_s),
@@ -301,8 +306,11 @@ class Service:
 
     # The bench file read again
 
-    def reload(self) -> None:
-        """Read the bench file again; if it does not check, say so and carry on with the old one."""
+    def reload(self) -> str:
+        """Read the bench file again; if it does not check, say so and carry on with the old one.
+
+        Returns why it was not taken, "" if it was.
+        """
         try:
             new = bench_file.parse(self.bench_path.read_text("utf-8"), self.bench_path.name)
             heads = {name: head_of(new, name) for name in new.probe}
@@ -313,7 +321,8 @@ class Service:
             self.bells.hang(new)
         except (OSError, ValueError, AlarmError, ServiceError, CalibrationError) as wrong:
             self._say(f"bench file not taken, the old one stays in force: {wrong}")
-            return
+            return str(wrong)
+        self.publisher.hang(new)
         old, self.bench = self.bench, new
         for probe in [*self.recorders]:
             if probe not in new.probe:
@@ -326,6 +335,7 @@ class Service:
         if fresh:
             self._joining.append(asyncio.create_task(self._join(fresh)))
         self._say("bench file read again")
+        return ""
 
     def _change(self, probe: str, old: Bench, head: Head) -> None:
         recorder, was, now = self.recorders[probe], old.probe[probe], self.bench.probe[probe]
@@ -353,8 +363,8 @@ class Service:
         if message.get("order") == "status":
             return {"ok": True, "probes": {name: self.status(name) for name in self.recorders}}
         if message.get("order") == "reload":
-            self.reload()
-            return {"ok": True}
+            why = self.reload()
+            return {"ok": False, "why": f"bench file not taken: {why}"} if why else {"ok": True}
         try:
             order = parse(message, self.bench)
             if any(self.recorders[probe].paused for probe in order.probes):

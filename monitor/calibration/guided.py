@@ -98,7 +98,8 @@ class GuidedRun:
         """One reading (period 0 = no pulse); times never go back."""
         second = math.floor(time_s)
         if second != self._second:
-            self._close(second - self._second if self._second >= 0 else 1)
+            if self._second >= 0:
+                self._close(second - self._second)
             self._second = second
         self._open.append((period_us, math.nan if temp_c is None else temp_c))
 

@@ -15,6 +15,7 @@ from monitor.commands.bench_file import read_bytes, replace, text_of
 if TYPE_CHECKING:
     from monitor.bench import Bench
     from monitor.bench import Probe as ProbeSettings
+    from monitor.commands.attached import Attached
 
 
 def command(
@@ -30,8 +31,12 @@ def command(
     port: Annotated[str | None, typer.Option(help="Port, for a probe not in the file yet.")] = None,
     medium: Annotated[str, typer.Option(help="Medium, for such a probe.")] = "NaCl",
     tick_us: Annotated[float, typer.Option(help="Resolution in us, for such a probe.")] = 1.0,
+    by: Annotated[str | None, typer.Option(help="Your initials, for the service's log.")] = None,
 ) -> None:
     """Take standards with a live probe, fit them, and write them into the bench file.
+
+    Where a service runs on the bench file, it keeps the port: the probe is marked as out of the
+    tank, its readings are taken from the log, and the new set is in force at once.
 
     Type the salinity of the standard that the probe is in, then Enter. `drop` drops the last one,
     `done` ends; Ctrl-C leaves, and the same command goes on where it was left.
@@ -40,6 +45,7 @@ def command(
     """
     from monitor.bench import BenchError, parse
     from monitor.calibration.records import set_name
+    from monitor.commands.attached import attached, out_while
 
     before = read_bytes(bench)
     text = _with_probe(text_of(before, bench), bench, probe, port, medium, tick_us)
@@ -50,16 +56,24 @@ def command(
     if not 3 <= readings <= 100_000:
         raise Wrong(f"--readings {readings}: expected 3 to 100000")
     now = datetime.now(UTC)
-    taken = _from_table(table) if table else _live(bench, settings, probe, levels, readings, now)
-    for standard in taken:
-        standard.setdefault("taken", now.isoformat(timespec="seconds"))
-        if lot is not None:
-            standard.setdefault("lot", lot)
     new_set = name or set_name(settings, probe, now.date().isoformat())
     if not re.fullmatch(r"[A-Za-z0-9][A-Za-z0-9_.-]{0,63}", new_set):
         raise Wrong(f"--set {new_set[:64]!r}: expected letters, digits, _ . or -, at most 64")
-    _keep(bench, before, text, probe, settings, taken, new_set)
-    resume_path(bench, probe).unlink(missing_ok=True)
+    service = attached(bench, probe, by)
+    with out_while(None if table else service, "standard"):
+        taken = (
+            _from_table(table)
+            if table
+            else _live(bench, settings, probe, levels, readings, service)
+        )
+        for standard in taken:
+            standard.setdefault("taken", now.isoformat(timespec="seconds"))
+            if lot is not None:
+                standard.setdefault("lot", lot)
+        _keep(bench, before, text, probe, settings, taken, new_set)
+        resume_path(bench, probe).unlink(missing_ok=True)
+        if service is not None:
+            service.reload()
 
 
 def _keep(
@@ -145,7 +159,12 @@ def _from_table(table: Path) -> list[dict[str, Any]]:
 
 
 def _live(
-    bench: Path, settings: Bench, probe: str, levels: str, readings: int, now: datetime
+    bench: Path,
+    settings: Bench,
+    probe: str,
+    levels: str,
+    readings: int,
+    service: Attached | None,
 ) -> list[dict[str, Any]]:
     """Standards taken with the live probe. Raises Refusal if the run was left."""
     from monitor.commands.guide import Guide
@@ -154,7 +173,8 @@ def _live(
     if of.port is None:
         raise Wrong(f"{bench.name}: probe.{probe}.port: missing; expected a port, or --csv")
     plan = _plan(levels)
-    guide = Guide(of, plan, readings, resume_path(bench, probe))
+    reader = service if service is not None and service.reads else None
+    guide = Guide(of, plan, readings, resume_path(bench, probe), reader)
     taken = guide.walk()
     if not taken:
         raise Refusal("no standard taken; nothing written")

@@ -8,7 +8,7 @@ import json
 import os
 import signal
 import sys
-from collections.abc import Sequence
+from collections.abc import Coroutine, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -20,6 +20,7 @@ from monitor.commands import Refusal, Wrong
 
 if TYPE_CHECKING:
     from monitor.bench import Probe
+    from monitor.commands.attached import Attached
 
 SHOW_S = 0.25
 SILENT_S = 3.0
@@ -31,10 +32,19 @@ class Guide:
     """One run, from the first word to the last standard."""
 
     def __init__(
-        self, probe: Probe, plan: Sequence[float], readings: int, resume: Path | None
+        self,
+        probe: Probe,
+        plan: Sequence[float],
+        readings: int,
+        resume: Path | None,
+        attached: Attached | None = None,
     ) -> None:
-        """`resume`: where standards taken so far are kept; None where nothing is."""
+        """`resume`: where standards taken so far are kept; None where nothing is.
+
+        `attached`: the service that has the probe's port, so that its log is read instead.
+        """
         self._probe = probe
+        self._attached = attached
         self._resume = resume
         taken = _left_over(resume) if resume else []
         self._until = 0
@@ -66,6 +76,29 @@ class Guide:
     async def _walk(self) -> None:
         loop = asyncio.get_running_loop()
         self._end = asyncio.Event()
+        source = self._source()
+        for number in (signal.SIGINT, signal.SIGTERM, signal.SIGHUP):
+            loop.add_signal_handler(number, self._leave)
+        with contextlib.suppress(PermissionError):  # a file cannot be waited for
+            loop.add_reader(sys.stdin.fileno(), self._typed)
+        reading = asyncio.create_task(source)
+        try:
+            while not self._end.is_set():
+                self._show()
+                with contextlib.suppress(TimeoutError):
+                    await asyncio.wait_for(self._end.wait(), SHOW_S)
+        finally:
+            loop.remove_reader(sys.stdin.fileno())
+            reading.cancel()
+            await asyncio.gather(reading, return_exceptions=True)
+            _say("")
+
+    # what the probe says
+
+    def _source(self) -> Coroutine[Any, Any, None]:
+        """What reads until it is cancelled: the service's log, or the port. Raises Wrong."""
+        if self._attached is not None:
+            return self._attached.follow(self._reading, self._linked, self._down)
         try:
             port = SerialPort(
                 self._probe.port or "",
@@ -78,29 +111,16 @@ class Guide:
             )
         except PortError as wrong:
             raise Wrong(str(wrong)) from None
-        for number in (signal.SIGINT, signal.SIGTERM, signal.SIGHUP):
-            loop.add_signal_handler(number, self._leave)
-        with contextlib.suppress(PermissionError):  # a file cannot be waited for
-            loop.add_reader(sys.stdin.fileno(), self._typed)
-        reading = asyncio.create_task(port.run())
-        try:
-            while not self._end.is_set():
-                self._show()
-                with contextlib.suppress(TimeoutError):
-                    await asyncio.wait_for(self._end.wait(), SHOW_S)
-        finally:
-            loop.remove_reader(sys.stdin.fileno())
-            reading.cancel()
-            await asyncio.gather(reading, return_exceptions=True)
-            _say("")
-
-    # what the port says
+        return port.run()
 
     def _bytes(self, data: bytes, now_s: float) -> None:
         for reading in self._decoder.feed(data, now_s):
-            self._last_s = now_s
             temp = float(reading.temp_c) if reading.temp_c else None
-            self.run.feed(now_s, float(reading.period_us), temp)
+            self._reading(now_s, float(reading.period_us), temp)
+
+    def _reading(self, time_s: float, period_us: float, temp_c: float | None) -> None:
+        self._last_s = self._clock.now_s()
+        self.run.feed(time_s, period_us, temp_c)
         if len(self.run.taken) != self._kept:
             self._save()
         if self._until and len(self.run.taken) >= self._until and self._end:
@@ -110,6 +130,10 @@ class Guide:
         self._link = ""
         self._last_s = self._clock.now_s()
         self._decoder.opened(self._last_s)
+
+    def _linked(self) -> None:
+        if self._link:
+            self._link, self._last_s = "", self._clock.now_s()
 
     def _down(self, why: str) -> None:
         self._link = why

@@ -18,6 +18,7 @@ if TYPE_CHECKING:
     from monitor.bench import Probe
     from monitor.calibration import Calibration
     from monitor.calibration.checks import Check
+    from monitor.commands.attached import Attached
 
 HISTORY_MOST = 1_000_000  # bytes
 DAY_S = 86400.0
@@ -34,33 +35,58 @@ def command(
     temp: Annotated[float | None, typer.Option(help="At which temperature, C.")] = None,
     readings: Annotated[int, typer.Option(help="The period is a mean of so many.")] = 120,
     as_json: Annotated[bool, typer.Option("--json", help="One JSON object.")] = False,
+    by: Annotated[str | None, typer.Option(help="Your initials, for the service's log.")] = None,
 ) -> None:
     """Compare a check standard with the calibration, keep it, and say what the checks say.
+
+    Where a service runs on the bench file, the reading is taken from its log, with the probe
+    marked as out of the tank meanwhile, and the check is written into the log.
 
     Exit 1 when the probe has moved or a new calibration is due. Without --salinity it only tells
     what the checks so far say.
 
     Example: stillbrine verify --bench bench.toml --probe p1 --salinity 0.1 --period 374.9 --temp 24
     """
+    from monitor.commands.attached import attached, out_while
+
     settings = probe_of(load_bench(bench), probe, bench.name)
     calibration = calibration_of(settings, probe, bench.name)
-    history = history_path(bench)
-    now = datetime.now(UTC)
+    service: Attached | None = None
     if salinity is not None:
-        if period is None:
-            period, temp, readings = _read_now(settings, bench, probe, salinity, readings)
-        _check(salinity, salinity_u, period, temp, readings)
-        made = record(calibration, settings, probe, salinity, salinity_u, period, temp, readings)
-        _append(history, {"utc": now.isoformat(timespec="seconds"), **made})
-    checks = _checks(history, probe, calibration)
+        _check(salinity, salinity_u, 1.0 if period is None else period, temp, readings)
+        service = attached(bench, probe, by)
+    with out_while(service if period is None else None, "check"):
+        if salinity is not None:
+            if period is None:
+                period, temp, readings = _read_now(
+                    settings, bench, probe, salinity, readings, service
+                )
+            made = record(
+                calibration, settings, probe, salinity, salinity_u, period, temp, readings
+            )
+            _append(history_path(bench), {"utc": _now(), **made})
+            if service is not None and service.reads:
+                service.order("check", _as_event(made))
+        told = _tell(_checks(history_path(bench), probe, calibration), probe, calibration, as_json)
+    if told["moved"] or told["due"]:
+        why = "it has moved" if told["moved"] else "a new calibration is due"
+        raise Refusal(f"probe {probe}: {why} (stillbrine calibrate)")
+
+
+def _now() -> str:
+    return datetime.now(UTC).isoformat(timespec="seconds")
+
+
+def _tell(
+    checks: list[Check], probe: str, calibration: Calibration, as_json: bool
+) -> dict[str, Any]:
+    """Print what the checks say, and give it."""
     told = verdict(checks)
     if as_json:
         typer.echo(json.dumps({"probe": probe, "calibration": calibration.name, **told}))
     else:
         typer.echo("\n".join(in_words(checks, told)))
-    if told["moved"] or told["due"]:
-        why = "it has moved" if told["moved"] else "a new calibration is due"
-        raise Refusal(f"probe {probe}: {why} (stillbrine calibrate)")
+    return told
 
 
 def record(
@@ -95,6 +121,17 @@ def record(
         "read_pct": read,
         "read_u_pct": parts.u_pct,
         "noise_u_pct": fresh,
+    }
+
+
+def _as_event(made: dict[str, Any]) -> dict[str, Any]:
+    """The check as the log keeps it: what the standard is, and what was read."""
+    kept = ("period_us", "temp_c", "read_pct", "read_u_pct")
+    return {
+        "salinity_pct": made["check_pct"],
+        "u_pct": made["check_u_pct"],
+        "what": "check standard",
+        **{key: made[key] for key in kept},
     }
 
 
@@ -206,14 +243,20 @@ def _utc(text: str | None) -> datetime | None:
 
 
 def _read_now(
-    settings: Probe, bench: Path, probe: str, salinity: float, readings: int
+    settings: Probe,
+    bench: Path,
+    probe: str,
+    salinity: float,
+    readings: int,
+    service: Attached | None,
 ) -> tuple[float, float | None, int]:
     """Period, temperature and readings of the check standard, from the live probe."""
     from monitor.commands.guide import Guide
 
+    reader = service if service is not None and service.reads else None
     if settings.port is None:
         raise Wrong(f"{bench.name}: probe.{probe}.port: missing; expected a port, or --period")
-    guide = Guide(settings, [salinity], readings, None)
+    guide = Guide(settings, [salinity], readings, None, reader)
     guide.run.put_in(salinity)
     taken = guide.walk(until=1)
     if not taken:
