@@ -34,6 +34,12 @@ def command(
         str | None, typer.Option(help="Of a bare capture (numbers only): whose it is.")
     ] = None,
     rate: Annotated[float | None, typer.Option(help="And its readings a second.")] = None,
+    against: Annotated[
+        Path | None, typer.Option(help="On the screen: once more, judged by this bench file.")
+    ] = None,
+    beside: Annotated[
+        list[str] | None, typer.Option(help="On the screen: this log of another night beside it.")
+    ] = None,
     jobs: Annotated[
         int | None, typer.Option(min=1, help="Processes for many logs; else what is worth it.")
     ] = None,
@@ -49,7 +55,7 @@ def command(
     if not findings:
         from monitor.commands.watch import play
 
-        play(paths, bench, speed, probe, rate)
+        play(paths, bench, speed, probe, rate, against, logs_of(beside or []))
         return
     from monitor.calibration import CalibrationError
     from monitor.findings import line

@@ -84,20 +84,27 @@ def play(
     speed: float,
     probe: str | None = None,
     rate_hz: float | None = None,
-    *,
-    plain: bool = False,
+    against: Path | None = None,
+    beside: Sequence[str] = (),
 ) -> None:
-    """Play recorded logs on the screen. Raises Wrong, Refusal."""
+    """Play recorded logs on the screen; lanes marked B are judged by, or read from, the others.
+
+    Raises Wrong, Refusal.
+    """
     from monitor.calibration import CalibrationError
     from monitor.logbook.reader import LogError
     from monitor.screen.replayed import SPEED_MOST, ReplaySource
 
     if not 0 < speed <= SPEED_MOST:
         raise Wrong(f"--speed: {speed:g} is not accepted; expected above 0, at most {SPEED_MOST:g}")
-    given = load_bench(bench) if bench else None
+    if against is not None and beside:
+        raise Wrong("--against and --beside: both given; expected one of them")
+    given, other = (load_bench(path) if path else None for path in (bench, against))
+    note = "a recording is played"
+    if against is not None or beside:
+        note += f"; B: {against.name if against else Path(beside[0]).name}"
     try:
-        source = ReplaySource(log, given, speed, probe, rate_hz)
-        show(source, note="a recording is played", plain=plain)
+        show(ReplaySource(log, given, speed, probe, rate_hz, other, beside), note)
     except LogError as wrong:
         raise Wrong(str(wrong)) from None
     except CalibrationError as wrong:

@@ -8,6 +8,7 @@ from typing import Any
 
 import pytest
 
+from monitor.bench import parse
 from monitor.blocks import Event
 from monitor.findings import Finding, in_order
 from monitor.logbook.reader import LogError
@@ -142,6 +143,33 @@ def test_a_tank_that_nobody_watches_is_told_on_its_lane(tmp_path: Path) -> None:
     source.advance()
     assert not source.lanes[0].lasting
     assert told(source.lanes) == findings_of(paths)
+
+
+def test_another_bench_is_held_against_the_first(log: str) -> None:
+    narrower = invented.bench_text().replace("aim_pct = [0.07, 0.10]", "aim_pct = [0.07, 0.085]")
+    source = ReplaySource([log], against=parse(narrower))
+    source.seek(1e9)
+    source.advance()
+    first, second = source.lanes
+    assert (first.label, second.label) == ("t1", "B: t1")
+    assert told([first]) == findings_of([log])
+    assert not [f for f in first.told if f["finding"] == "limit"]
+    assert [f for f in second.told if f["finding"] == "limit"]
+    assert first.value == second.value
+
+
+def test_another_night_begins_at_the_same_time(log: str, text: str, tmp_path: Path) -> None:
+    folder = tmp_path / "other"
+    folder.mkdir()
+    later = text.replace("# started: 2026-03-14", "# started: 2026-04-01")
+    source = ReplaySource([log], beside=[invented.saved(folder, later)])
+    source.seek(200.0)
+    source.advance()
+    first, second = source.lanes
+    assert second.label == "B: t1"
+    assert first.t == second.t
+    assert [d.time_s for d in second.doses] == [120.0]
+    assert told([first]) == told([second])
 
 
 def test_a_log_without_settings_asks_for_a_bench(tmp_path: Path) -> None:

@@ -210,3 +210,19 @@ def test_a_speed_that_is_none_is_refused(
     assert replay.returncode == 2
     assert error.startswith("stillbrine: --speed:")
     assert error.count("\n") == 1
+
+
+def test_another_bench_is_played_beside_and_named(
+    start: Callable[..., subprocess.Popen[str]], tmp_path: Path
+) -> None:
+    log = invented.saved(tmp_path, invented.log_text(invented.bench(label="north"), length_s=90.0))
+    other = tmp_path / "other.toml"
+    other.write_text(invented.bench_text(label="north"))
+    replay = start("replay", log, "--against", str(other), "--speed", "3600")
+    out, error = replay.communicate(timeout=20)
+    assert (replay.returncode, error) == (0, "")
+    assert out.startswith("a recording is played; B: other.toml\n")
+    assert "B: north: 0.0" in out
+    replay = start("replay", log, "--against", str(other), "--beside", log)
+    assert "expected one of them" in replay.communicate(timeout=20)[1]
+    assert replay.returncode == 2
