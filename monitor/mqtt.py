@@ -228,7 +228,7 @@ async def _until_lost(client: aiomqtt.Client) -> None:
 
 
 def _why(wrong: BaseException) -> str:
-    cause = wrong.__cause__ or wrong
+    cause = wrong.__cause__ or wrong.__context__ or wrong
     if isinstance(cause, ssl.SSLCertVerificationError):
         return "its certificate is not trusted"
     if isinstance(cause, OSError) and cause.errno:

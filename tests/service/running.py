@@ -70,7 +70,8 @@ class OnPtys:
     def do(self, act: Callable[[], Any]) -> None:
         """Carry out an act on the bench."""
         done = threading.Event()
-        self._loop.call_soon_threadsafe(lambda: (act(), done.set()))
+        self._loop.call_soon_threadsafe(act)
+        self._loop.call_soon_threadsafe(done.set)
         assert done.wait(5)
 
     def __enter__(self) -> OnPtys:
