@@ -8,20 +8,18 @@ from __future__ import annotations
 
 import math
 import re
-from collections.abc import Callable, Mapping
+from collections.abc import Callable
 from dataclasses import dataclass, field
 from typing import Any
 
-from monitor import cautions
-from monitor.dosing.balance import Known, landing, volume_for
-from monitor.dosing.valve import FlowError, flow
+from monitor.dosing import advice, plan
+from monitor.dosing.parts import PlanError
 from monitor.printable import printable
 from monitor.screen.figures import Clock, Scale, length, short_text
 from monitor.screen.landing import Plan
 from monitor.view import Lane
 
 TEXT_MOST = 200
-DOSE_U = 0.01  # of a volume whose doubt is not stated; common practice, no source
 _NUMBER = re.compile(r"[0-9]{1,7}([.,][0-9]{1,6})?")
 
 
@@ -119,27 +117,38 @@ def dose(lane: Lane) -> Form | None:
 
 
 def _dose(form: Form, lane: Lane) -> Preview:
-    told = Preview(cautions=list(cautions.DOSE))
+    told = Preview()
     figures = _figures(form, ("volume_ml", "to", "open_s", "ago_s"), told)
     if told.wrong:
         return told
-    liquid = form["liquid"]
     bench = lane.settings
     assert bench is not None
-    sd = bench.liquid[liquid]
-    before = lane.value if lane.calibrated else math.nan
-    volume, mode = figures["volume_ml"], bench.tank[lane.tank].mode
-    if volume is None and figures["to"] is not None:
-        volume = volume_for(mode, before, figures["to"], lane.tank_ml, sd.salinity_pct)
-        if not math.isfinite(volume):
-            told.wrong = f"{liquid} ({sd.salinity_pct:g} %) cannot take it there"
-            return told
-    if not volume:
+    volume, aim, liquid = figures["volume_ml"], figures["to"], form["liquid"]
+    if not volume and aim is None:
         told.lines.append("type a volume, or the salinity that it shall reach")
         return told
-    _foretell(told, lane, mode, before, volume, (sd.salinity_pct, sd.salinity_u_pct))
-    told.lines += _by_valve(bench.valve, liquid, volume)
-    fields = {"tank": lane.tank, "liquid": liquid, "volume_ml": round(volume, 3)}
+    try:
+        planned = plan.plan(
+            bench,
+            lane.tank,
+            lane.tank_ml,
+            lane.value if lane.calibrated else math.nan,
+            lane.u95 if math.isfinite(lane.u95) else 0.0,
+            aim_pct=None if volume else aim,
+            liquid=liquid,
+            volume_ml=volume or None,
+            tank_u_ml=lane.tank_u_ml if math.isfinite(lane.tank_u_ml) else None,
+        )
+    except PlanError as wrong:
+        told.cautions.append(str(wrong))
+        if not volume:
+            told.wrong, told.cautions = str(wrong), []
+            return told
+    else:
+        volume = planned.volume_ml
+        _foretell(told, lane, planned)
+        told.cautions = [*_against(lane), *advice.cautions(bench, planned)]
+    fields = {"tank": lane.tank, "liquid": liquid, "volume_ml": round(float(volume), 3)}
     if figures["open_s"]:
         fields["open_s"] = figures["open_s"]
     told.order = ("dose", fields)
@@ -158,61 +167,31 @@ def _figures(form: Form, names: tuple[str, ...], told: Preview) -> dict[str, flo
     return figures
 
 
-def _foretell(
-    told: Preview,
-    lane: Lane,
-    mode: str,
-    before: float,
-    volume: float,
-    liquid: tuple[float, float],
-) -> None:
-    """Where it lands by the mass balance, and what speaks against it."""
-    if not (math.isfinite(before) and math.isfinite(lane.tank_ml)):
-        told.lines.append(f"{volume:.4g} mL; where it lands cannot be told: no salinity or volume")
-        return
-    u_before = lane.u95 / 2.0 if math.isfinite(lane.u95) else 0.0
-    tank = Known(lane.tank_ml, lane.tank_u_ml if math.isfinite(lane.tank_u_ml) else 0.0)
-    found = landing(
-        mode, Known(before, u_before), tank, Known(*liquid), Known(volume, DOSE_U * volume)
-    )
-    told.plan = Plan(found.value, 2.0 * found.u)
+def _foretell(told: Preview, lane: Lane, planned: plan.Plan) -> None:
+    """Where it lands by the mass balance."""
+    told.plan = Plan(planned.predicted_pct, planned.predicted_u95_pct)
     scale = Scale("%")
-    after = lane.tank_ml + volume if mode == "grows" else lane.tank_ml
-    told.lines.append(
-        f"{volume:.4g} mL takes it from {short_text(before, lane.u95, scale)} to"
-        f" {short_text(found.value, 2 * found.u, scale)} ±{2 * found.u:.1g} %;"
-        f" then {after:.0f} mL in the tank"
+    before = short_text(planned.before_pct, planned.before_u95_pct, scale)
+    after = short_text(planned.predicted_pct, planned.predicted_u95_pct, scale)
+    said = (
+        f"{planned.volume_ml:.4g} mL takes it from {before} to {after}"
+        f" ±{planned.predicted_u95_pct:.1g} %"
     )
-    told.cautions = _against(lane, before, found.value) + told.cautions
+    if lane.settings is not None and lane.settings.tank[lane.tank].mode == "grows":
+        said += f"; then {planned.tank_ml + planned.volume_ml:.0f} mL in the tank"
+    told.lines.append(said)
+    if planned.open_s is not None:
+        told.lines.append(f"valve {planned.valve}: open for {planned.open_s:.1f} s")
 
 
-def _against(lane: Lane, before: float, after: float) -> list[str]:
-    """What in this tank speaks against the dose."""
+def _against(lane: Lane) -> list[str]:
+    """What in this tank speaks against any dose now."""
     said: list[str] = []
-    bench, aim = lane.settings, lane.aim
-    assert bench is not None
-    fastest = bench.tank[lane.tank].fastest_pct_per_h
     if lane.belief != "believed":
         said.append(f"THE PROBE IS {lane.belief.upper()}: where it starts is not sure.")
     if lane.moving:
         said.append("STILL MOVING: the last dose has not come to rest.")
-    if aim is not None and not aim[0] <= after <= aim[1]:
-        said.append(f"LANDS OUTSIDE THE AIM of {aim[0]:g} to {aim[1]:g} %.")
-    if fastest is not None and abs(after - before) > fastest:
-        n = math.ceil(abs(after - before) / fastest)
-        said.append(f"TOO FAST: {fastest:g} % an hour at most; give it in {n} parts, 1 h apart.")
     return said
-
-
-def _by_valve(valves: Mapping[str, Any], liquid: str, volume: float) -> list[str]:
-    for name, valve in valves.items():
-        if valve.liquid == liquid and valve.runs:
-            try:
-                open_s = flow(valve.runs).open_s(volume)
-            except FlowError as wrong:
-                return [f"valve {name}: {wrong}"]
-            return [f"valve {name}: open for {open_s:.1f} s"]
-    return []
 
 
 def strike(lane: Lane, clock: Clock) -> Form | None:

@@ -10,6 +10,7 @@ import math
 from dataclasses import dataclass, field
 from typing import NamedTuple
 
+from monitor import cautions
 from monitor.printable import printable
 from monitor.screen import axis, figures, guide, inks, landing, lanes, text, words
 from monitor.screen.acts import Form
@@ -228,11 +229,9 @@ def _form(form: Form, tank: _Tank, width: int, most: int) -> Foot:
         rows.append(([(f" {told.wrong}", "act")], []))
     rows += [([(f" {line}", "plan")], []) for line in told.lines]
     for caution in told.cautions:
-        loud = caution[:5].isupper()
-        rows += [
-            ([(f" {line}", "act" if loud else "faint")], [])
-            for line in text.wrapped(caution, width - 2, 2)
-        ]
+        general = caution in (cautions.FAST_CHANGE, cautions.SECOND_INSTRUMENT, cautions.VALVE)
+        style = "act" if caution[:5].isupper() else "faint" if general else ""
+        rows += [([(f" {line}", style)], []) for line in text.wrapped(caution, width - 2, 2)]
     rows = rows[: most - 1]
     ready = "Enter records it" if told.order and not told.wrong else "Enter does nothing yet"
     keys = f" {ready}   Esc leaves   Tab next   left/right choose"
