@@ -57,7 +57,7 @@ class Hum:
         self._means = _NONE  # us
         self._every_s = 0.0  # between two means
         self._waiting: list[Second] = []
-        self._last_k = -1
+        self._last_k = self._gathered_k = -1
 
     def take(self, second: Second, rate_hz: float) -> bool:
         """Take a second; True when it is time to listen."""
@@ -68,9 +68,11 @@ class Hum:
             return False
         if self._last_k >= 0 and k - self._last_k > 3:
             self.forget()
+        if self._last_k < 0:
+            self._gathered_k = k - 1
         self._last_k = k
         self._waiting.append(second)
-        if k % EVERY_S != EVERY_S - 1:
+        if k % EVERY_S != EVERY_S - 1 and len(self._waiting) < EVERY_S:
             return False
         self._gather(rate_hz)
         return len(self._means) * self._every_s >= SPAN_S
@@ -89,7 +91,8 @@ class Hum:
             self._group, self._left, self._means = group, _NONE, _NONE
         group = self._group
         period_us = _pulses(self._waiting)
-        every_s = group * len(self._waiting) / len(period_us)
+        every_s = group * (self._last_k - self._gathered_k) / len(period_us)
+        self._gathered_k = self._last_k
         self._waiting = []
         self._every_s += (0.1 if self._every_s else 1.0) * (every_s - self._every_s)
         if len(self._left):

@@ -35,6 +35,7 @@ SETTLE_S = 8.0  # after a dose has run in before the level may lock
 MIX_S, MIX_LATE_S = 7, 3
 MIX_GATE, MIX_SDS, MIX_SCALES = 0.03, 6.0, 9
 AFTER_DOSE_S = 300.0
+RATE_GAP_S = 60
 
 
 class Judged(NamedTuple):
@@ -62,6 +63,7 @@ class Level:
         self.noise = noise or UNKNOWN_NOISE
         self.learned = LEARNED if noise else 0  # readings
         self.rate_hz = carried.get("rate_hz") or settings.rate_hz or 0.0
+        self._rated_k = -1
         self.gate = GATE[1]
         self.medians: deque[tuple[int, float]] = deque(maxlen=64)
         self.locked_k = -1  # the second in which it locked last
@@ -221,7 +223,7 @@ class Level:
         if second.t < self.dosed_until_t + SETTLE_S or len(self.medians) < LINE_N:
             return
         last = list(self.medians)[-LINE_N:]
-        if last[-1][0] - last[0][0] > 2 * LINE_N:
+        if last[-1][0] - last[0][0] > 2 * LINE_N / min(self.rate_hz, 1.0):
             return
         end, moves, spread = line([ln for _, ln in last])
         if spread < 2.2 * self.sb + 0.0005 and abs(moves) < max(0.004, 5.0 * self.sb):
@@ -231,8 +233,12 @@ class Level:
             self._lost = 0
 
     def _rate(self, second: Second) -> None:
-        n = float(second.n_rows)
-        self.rate_hz += (0.05 if self.rate_hz else 1.0) * (n - self.rate_hz)
+        """Rows a second; a gap of a minute tells nothing of it."""
+        apart_s = second.k - self._rated_k
+        self._rated_k = second.k
+        if apart_s < RATE_GAP_S:
+            share = 0.05 if self.rate_hz else 1.0
+            self.rate_hz += share * (second.n_rows / apart_s - self.rate_hz)
 
 
 def line(values: Sequence[float]) -> tuple[float, float, float]:

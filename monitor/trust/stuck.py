@@ -25,7 +25,7 @@ WARM_S = 40.0
 PER_C = 0.0212  # of the period, a Celsius
 CHUNK_S, CHUNKS = 20, 6  # means that tell where the level stood, and how it wanders
 MEANS_KEPT = 300
-DOUBT_TICKS = 0.05
+DOUBT_TICKS, NEAR_TICKS = 0.05, 0.75
 HIDDEN_TICKS = 0.1
 
 
@@ -112,10 +112,13 @@ class Stuck:
         ]
         if len(chunks) < 3 or any(chunk != chunk for chunk in chunks):
             return 0.0
+        off_us = abs(chunks[0] - self._figure)
+        if off_us > NEAR_TICKS * tick_us:  # the level has jumped since
+            return 0.0
         wander = max(abs(a - b) for a, b in itertools.pairwise(chunks))
         trend = abs(chunks[0] - chunks[-1]) / (len(chunks) - 1)
         doubt = 1.5 * wander + trend * run_s / CHUNK_S + DOUBT_TICKS * tick_us
-        return max(abs(chunks[0] - self._figure) - doubt, 0.0)
+        return max(off_us - doubt, 0.0)
 
     def _warmed(self, second: Second, level: Level) -> bool:
         """The water's warmth moved by more than tick and noise can hide."""

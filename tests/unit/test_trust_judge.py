@@ -118,3 +118,15 @@ def test_another_question_makes_it_doubtful_and_its_answer_believed() -> None:
         found += trust.step(second, ())
     assert beliefs(found) == ["believed", "doubtful", "believed"]
     assert [f["t"] for f in found] == [1.0, 101.0, 151.0]
+
+
+def test_a_probe_that_reads_every_third_second_is_heard() -> None:
+    slow = rows(1200.0, rate_hz=1 / 3)
+    found, trust = judged(slow)
+    assert faults(found) == []
+    assert abs(trust.level.rate_hz - 1 / 3) < 0.1
+    assert trust.locked
+    stops = rows(900.0, lambda t, p, _: np.where(t < 600, p, np.nan), rate_hz=1 / 3)
+    begun = said(judged(stops, lasts_s=900.0)[0])[0]
+    assert begun["fault"] == "no-pulses"
+    assert 597.0 + 25.0 < begun["t"] < 597.0 + 40.0  # ten intervals
