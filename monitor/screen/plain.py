@@ -29,7 +29,7 @@ class PlainText:
     def __init__(self, source: Source) -> None:
         self.source = source
         self.clock = Clock(source.started.astimezone())
-        self._kinds: dict[str, object] = {}
+        self._kinds: dict[tuple[str, str], object] = {}
         self._minute: int | None = None
 
     def lines(self) -> list[str]:
@@ -38,9 +38,9 @@ class PlainText:
         said = [(lane, state(lane, now_s, self.clock, scale(lane))) for lane in self.source.lanes]
         due = []
         for lane, what in said:
-            kind = _kind(lane, what)
-            if lane.begun and self._kinds.get(lane.probe) != kind:
-                self._kinds[lane.probe] = kind
+            kind, key = _kind(lane, what), (lane.mark, lane.probe)
+            if lane.begun and self._kinds.get(key) != kind:
+                self._kinds[key] = kind
                 due.append(self._line(now_s, f"{name(lane)}: {_figure(lane)}{what.text}"))
         minute = int(now_s // 60.0) if math.isfinite(now_s) else None
         if minute is not None and minute != self._minute and self._kinds:
