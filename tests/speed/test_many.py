@@ -9,6 +9,7 @@ import subprocess
 import sys
 from collections.abc import Iterator
 from pathlib import Path
+from typing import Any
 
 import pytest
 
@@ -147,8 +148,7 @@ def cluster() -> Iterator[tuple[str, list[subprocess.Popen[bytes]]]]:
 def test_dask_says_the_same_though_a_worker_is_killed(
     nights: Path, cluster: tuple[str, list[subprocess.Popen[bytes]]]
 ) -> None:
-    import distributed
-
+    distributed: Any = pytest.importorskip("distributed")
     address, workers = cluster
     with distributed.Client(address, timeout=60) as client:
         client.wait_for_workers(2, timeout=60)
