@@ -93,14 +93,16 @@ class OnPtys:
 class Run:
     """`stillbrine run` as a child process; its output goes to files."""
 
-    def __init__(self, bench: Path, logs: Path, where: Path) -> None:
+    def __init__(self, bench: Path, logs: Path, where: Path, piped: bool = False) -> None:
+        """`piped`: findings go to the process's pipe, not to a file."""
         self.logs = logs
         self.out, self.err = where / "out.jsonl", where / "err.txt"
         self.environ = {**os.environ, "XDG_RUNTIME_DIR": str(where)}
         self.socket_folder = where / "stillbrine"
         line = [sys.executable, "-c", MAIN, "run", "--bench", str(bench), "--logs", str(logs)]
         with self.out.open("ab") as out, self.err.open("ab") as err:
-            self.process = subprocess.Popen(line, stdout=out, stderr=err, env=self.environ)
+            to = subprocess.PIPE if piped else out
+            self.process = subprocess.Popen(line, stdout=to, stderr=err, env=self.environ)
 
     @property
     def said(self) -> str:

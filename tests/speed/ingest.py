@@ -1,4 +1,4 @@
-"""How many lines a second the service takes: `python -m tests.speed.ingest [PORTS RATE_HZ SECONDS]`.
+"""How many lines a second the service takes: `python -m tests.speed.ingest [PORTS RATE_HZ S]`.
 
 Pseudo-terminals speak at line rate into a service of its own process. Printed: rows sent and rows
 in the logs, the service's share of a core, and how long after the first byte past a second's end
