@@ -30,7 +30,8 @@ def command(
 
     Example: stillbrine demo --speed 4
     """
-    from monitor.commands.watch import child, show
+    from monitor.commands.child import child
+    from monitor.commands.watch import show
     from monitor.places import socket_path
     from monitor.screen.followed import LiveSource
 

@@ -23,11 +23,10 @@ from collections.abc import Iterator, Mapping
 from pathlib import Path
 from typing import Any
 
-from monitor.commands.watch import status
+from monitor.commands.child import MAIN, status
 from monitor.places import socket_path
 from tests.screen import invented
 
-MAIN = "from monitor.cli import main; main()"
 HEADS = (b"g/kg", b"mS/cm", b"% by mass")
 TICKS = os.sysconf("SC_CLK_TCK")
 

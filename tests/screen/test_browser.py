@@ -13,9 +13,9 @@ pytest.importorskip("textual_serve", reason="needs textual-serve, the extra `web
 
 from aiohttp import web
 
+from monitor.commands.child import MAIN
 from monitor.web import Door
 from tests.screen import chromium, invented
-from tests.screen.pace import MAIN
 
 pytestmark = [
     pytest.mark.browser,

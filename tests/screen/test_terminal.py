@@ -11,8 +11,9 @@ from pathlib import Path
 
 import pytest
 
+from monitor.commands.child import MAIN
 from tests.screen import invented
-from tests.screen.pace import MAIN, Terminal
+from tests.screen.pace import Terminal
 
 LEAVES = (b"\x1b[?1049l", b"\x1b[?25h", b"\x1b[?1000l", b"\x1b[?1006l")  # screen, cursor, mouse
 

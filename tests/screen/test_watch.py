@@ -14,11 +14,9 @@ from pathlib import Path
 
 import pytest
 
-from monitor.commands.watch import status
+from monitor.commands.child import MAIN, status
 from monitor.places import socket_path
 from tests.screen import invented
-
-MAIN = "from monitor.cli import main; main()"
 
 
 @pytest.fixture(autouse=True)
