@@ -15,6 +15,7 @@ from monitor.bench import Bench
 from monitor.blocks import NAN, Event, Second
 from monitor.chain import Judges
 from monitor.findings import Finding
+from monitor.signal.trace import TraceFilter
 from monitor.view.marks import Dosed, Note, Span
 from monitor.view.present import Present
 from monitor.view.traces import DOUBTFUL, NOT_TANK, TANK, Raw, Trace
@@ -46,6 +47,8 @@ class Lane(Present):
         self.lasting: dict[tuple[str, str], Finding] = {}  # trends, limits, unwatched, notices
         self.out: Span | None = None
         self.rejected = 0
+        self._trace_filter = TraceFilter(1.0, 1.0)
+        self._filtered_for: Judges | None = None
 
     def begin_run(self, offset_s: float) -> None:
         """Another run of the probe follows; its times count from `offset_s`."""
@@ -69,7 +72,16 @@ class Lane(Present):
         good = NOT_TANK
         if trust.usable:
             good = TANK if trust.belief == "believed" else DOUBTFUL
-        self.trace.add(second, self.offset_s, value, judges.settling.shown_pct, good)
+        filtered = self._filter(judges).step(second.k, value if good else NAN)
+        self.trace.add(second, self.offset_s, value, filtered, good)
+
+    def _filter(self, judges: Judges) -> TraceFilter:
+        """The trace's filter, as the bench in force wants it."""
+        if self._filtered_for is not judges:
+            self._filtered_for = judges
+            settings = judges.bench.probe[self.probe]
+            self._trace_filter = TraceFilter(settings.median_s, settings.ewma_s)
+        return self._trace_filter
 
     def hear(self, finding: Finding) -> None:
         """Take a finding if it is about this probe, or its tank."""
