@@ -24,6 +24,12 @@ DIFFER_MIN = 10  # minutes on end in which two probes differ beyond their doubt,
 DIFFER = 1.3  # times the doubt of the difference
 MOVED = 2.0  # times as far as the other: it is the one that changed
 SAME_LN = 0.02  # a swapped probe reads so near to what the other read before
+LOST = {  # why a link was lost, in words
+    "asleep": "the machine slept",
+    "stalled": "the program stood still",
+    "disk": "nothing could be written",
+    "moved": "its port was changed",
+}
 _NEAR_S = 10.0  # spans that lie nearer together are one: only long gaps are asked for
 
 
@@ -34,6 +40,7 @@ class Watched:
         self.spans: list[list[float]] = []
         self.why: dict[float, str] = {}  # end of a span -> what kept the probe from being usable
         self.minutes: deque[tuple[float, float, float]] = deque(maxlen=MINUTES)  # t, %, u95
+        self._lost = ""  # why the link is lost, while it is
 
     @property
     def last_t(self) -> float | None:
@@ -48,6 +55,10 @@ class Watched:
     def step(self, second: Second, trust: Trust, settling: Settling) -> None:
         """Take one judged second."""
         t = second.t
+        for event in second.events:
+            if event.kind == "gap":
+                lost = event.fields["link"] == "lost"
+                self._lost = str(event.fields.get("why") or "no link")[:40] if lost else ""
         if second.k % 60 == 59 and trust.usable and not settling.moving:
             self.minutes.append((t, settling.shown_pct, settling.u95_pct))
         spans = self.spans
@@ -59,8 +70,14 @@ class Watched:
             else:
                 spans.append([t, t])
         elif t - spans[-1][1] == UNWATCHED_S:
-            why = trust.why if trust.belief != "believed" else "no readings"
-            self.why[spans[-1][1]] = "out of the tank" if trust.out else why
+            self.why[spans[-1][1]] = self._reason(trust)
+
+    def _reason(self, trust: Trust) -> str:
+        if trust.out:
+            return "out of the tank"
+        if self._lost:
+            return LOST.get(self._lost, self._lost)
+        return "no readings" if trust.belief == "believed" else trust.why
 
     def why_after(self, t: float) -> str | None:
         """What kept the probe from being usable at the end of its last span up to `t`."""
@@ -107,7 +124,7 @@ class Unwatched:
         if self.said is not None or self.last_t is None or t - self.last_t < UNWATCHED_S:
             return []
         said = ((name, watched.why_after(self.last_t - by)) for name, watched, by in probes)
-        whys = [f"{name} {why}" for name, why in said if why]
+        whys = [f"{name} ({why})" for name, why in said if why]
         self.said = {
             "finding": "unwatched",
             "tank": self.tank,

@@ -6,12 +6,15 @@ import shutil
 import sys
 from datetime import datetime, timedelta
 from pathlib import Path
-from typing import Annotated
+from typing import TYPE_CHECKING, Annotated
 
 import typer
 
-from monitor.commands import Refusal, Wrong
+from monitor.commands import Refusal, Wrong, load_bench
 from monitor.commands.report import logs_of_bench
+
+if TYPE_CHECKING:
+    from monitor.report.digest import Section
 
 
 def command(
@@ -36,5 +39,30 @@ def command(
         raise Wrong(str(wrong)) from None
     except CalibrationError as wrong:
         raise Refusal(str(wrong)) from None
+    told, due = handover(night), _due(bench)
     columns = min(shutil.get_terminal_size().columns, 100)
-    sys.stdout.write(text(night, columns, handover(night)))
+    sys.stdout.write(text(night, columns, [*told, *due], "Hand-over"))
+
+
+def _due(bench: Path) -> list[Section]:
+    """When each probe's calibration is due, by its check standards."""
+    from monitor.calibration.checks import drift
+    from monitor.commands.calibrations import calibration_of
+    from monitor.commands.verify import checks_of, history_path
+    from monitor.report.digest import Section
+
+    lines = []
+    for name, probe in load_bench(bench).probe.items():
+        if not probe.standard:
+            lines.append(f"{name}: not calibrated yet (stillbrine calibrate)")
+            continue
+        calibration = calibration_of(probe, name, bench.name)
+        checks = checks_of(history_path(bench), name, calibration)
+        found = drift(checks)
+        if found is None:
+            lines.append(f"{name}: no check standard read since its calibration; read one")
+        elif found.due:
+            lines.append(f"{name}: a new calibration is due now (stillbrine calibrate)")
+        else:
+            lines.append(f"{name}: calibration due in {found.due_days:.0f} days")
+    return [Section("Checks due", lines)] if lines else []

@@ -67,7 +67,9 @@ def command(
             _append(history_path(bench), {"utc": _now(), **made})
             if service is not None and service.reads:
                 service.order("check", _as_event(made))
-        told = _tell(_checks(history_path(bench), probe, calibration), probe, calibration, as_json)
+        told = _tell(
+            checks_of(history_path(bench), probe, calibration), probe, calibration, as_json
+        )
     if told["moved"] or told["due"]:
         why = "it has moved" if told["moved"] else "a new calibration is due"
         raise Refusal(f"probe {probe}: {why} (stillbrine calibrate)")
@@ -204,7 +206,7 @@ def _append(path: Path, made: dict[str, Any]) -> None:
         raise Refusal(f"{path}: cannot be written ({wrong.strerror}); the check is lost") from None
 
 
-def _checks(path: Path, probe: str, calibration: Calibration) -> list[Check]:
+def checks_of(path: Path, probe: str, calibration: Calibration) -> list[Check]:
     """This probe's checks under this calibration, oldest first."""
     from monitor.calibration.checks import Check
 

@@ -11,6 +11,11 @@ from monitor.dosing.history import Answer, in_words, lesson
 from monitor.findings import Finding
 from monitor.logbook.codec import utc_of
 from monitor.report.night import Lane, Night
+from monitor.report.told import told_orders
+from monitor.report.words import clock, length, pct, span
+from monitor.tanks import LOST
+
+NEXT_S = 1800.0  # a change so soon after a dose may have come before its rest
 
 
 class Section(NamedTuple):
@@ -31,45 +36,13 @@ def sections(night: Night) -> list[Section]:
         Section("Trends", list(_trends(night))),
         Section("Questions", list(_questions(night))),
         Section("Gaps and losses", list(_gaps(night))),
-        Section("Checks, notes, orders", list(_notes(night))),
+        Section("Checks, notes, orders", list(told_orders(night))),
         Section("How sure", [_how_sure(lane) for lane in night.lanes]),
     ]
     kept = [section for section in told if section.lines]
     if kept[0].title != "Needs you now":
         kept.insert(0, Section("Needs you now", ["Nothing: all that began is over."]))
     return kept
-
-
-def clock(night: Night, t: float) -> str:
-    """Local time of day, with the date where it is not the night's first."""
-    when, first = night.when(t), night.when(night.from_t)
-    return when.strftime("%H:%M:%S" if when.date() == first.date() else "%d %b %H:%M:%S")
-
-
-def span(night: Night, from_t: float, to_t: float | None) -> str:
-    """From when to when, and how long."""
-    end = night.to_t if to_t is None else to_t
-    until = f"until {clock(night, end)}" if to_t is not None else "and it lasts"
-    return f"from {clock(night, from_t)} {until} ({length(end - from_t)})"
-
-
-def length(seconds: float) -> str:
-    """A length of time in words."""
-    if seconds < 120:
-        return f"{seconds:.0f} s"
-    if seconds < 7200:
-        return f"{seconds / 60:.0f} min"
-    return f"{seconds / 3600:.1f} h"
-
-
-def pct(value: float | None, u95: float | None = None) -> str:
-    """A salinity with as many digits as its doubt allows."""
-    if value is None or not math.isfinite(value):
-        return "no salinity"
-    if u95 is None or not math.isfinite(u95) or u95 <= 0:
-        return f"{value:.4f} %"
-    digits = max(2, min(6, 1 - math.floor(math.log10(u95))))
-    return f"{value:.{digits}f} +- {u95:.{digits}f} %"
 
 
 def lasting(night: Night, kind: str) -> list[Finding]:
@@ -104,7 +77,9 @@ def _words(night: Night, f: Finding) -> str:
     if f["finding"] == "unwatched":
         return f"{whose}: unwatched {when}: {f['why']}"
     if f["finding"] == "notice":
-        return f"{whose}: {f['text']} ({clock(night, f['from_t'])})"
+        since = clock(night, f["from_t"])
+        over = "" if f["to_t"] is None else f", over at {clock(night, f['to_t'])}"
+        return f"{whose}: {since} {f['text']}{over}"
     gone = f"; withdrawn: {f['withdrawn']}" if f.get("withdrawn") else ""
     return f"{f['probe']}: {f['fault']} {when}: {f['evidence']}{gone}"
 
@@ -152,10 +127,19 @@ def _doses(night: Night) -> Iterable[str]:
                 and r["dose_t"] is not None
                 and abs(r["dose_t"] - event.time_s) < 0.05
             ]
-            yield f"{what}: {_verdict(mine[0], event.time_s) if mine else 'no rest was called'}"
+            yield f"{what}: {_verdict(mine[0], event.time_s) if mine else _no_rest(lane, event)}"
         found = lesson(list(_answers(lane, rests)))
         if found is not None:
             yield f"{lane.tank}: {in_words(found)}"
+
+
+def _no_rest(lane: Lane, dose: Event) -> str:
+    """Why no rest was called for a dose: the next change came first, or none of us knows."""
+    later = [e for e in lane.events if e.kind in ("dose", "water") and e.time_s > dose.time_s]
+    after_s = min((e.time_s for e in later), default=math.inf) - dose.time_s
+    if after_s < NEXT_S:
+        return f"no rest of its own: the next change was recorded {length(after_s)} later"
+    return "no rest was called"
 
 
 def _answers(lane: Lane, rests: Iterable[Finding]) -> Iterable[Answer]:
@@ -196,24 +180,37 @@ def _trends(night: Night) -> Iterable[str]:
 
 
 def _questions(night: Night) -> Iterable[str]:
-    return (_words(night, f) for f in lasting(night, "notice"))
+    return (_words(night, f) for f in lasting(night, "notice") if f["to_t"] is not None)
 
 
 def _gaps(night: Night) -> Iterable[str]:
+    same: dict[str, list[str]] = {}  # what several probes have to say alike
     for lane in night.lanes:
-        lost: float | None = None
-        for event in (e for e in lane.events if e.kind == "gap"):
-            if event.fields.get("link") == "lost":
-                lost = event.time_s
-                why = str(event.fields.get("why", "lost"))
-            elif lost is not None:
-                yield f"{lane.probe}: no readings ({why}) {span(night, lost, event.time_s)}"
-                lost = None
-        if lost is not None:
-            yield f"{lane.probe}: no readings ({why}) {span(night, lost, None)}"
+        for said in _lost(night, lane):
+            same.setdefault(said, []).append(lane.probe)
+    yield from (f"{', '.join(probes)}: {said}" for said, probes in same.items())
+    for lane in night.lanes:
         for what, n in sorted(lane.dropped.items()):
             yield f"{lane.probe}: {n} lines of the log dropped: {what}"
         yield from lane.messages
+
+
+def _lost(night: Night, lane: Lane) -> Iterable[str]:
+    """Times without a link."""
+    lost: Event | None = None
+    for event in (e for e in lane.events if e.kind == "gap"):
+        if event.fields["link"] == "lost":
+            lost = event
+        elif lost is not None:
+            yield f"no readings ({_why(lost)}) {span(night, lost.time_s, event.time_s)}"
+            lost = None
+    if lost is not None:
+        yield f"no readings ({_why(lost)}) {span(night, lost.time_s, None)}"
+
+
+def _why(lost: Event) -> str:
+    why = str(lost.fields.get("why") or "link lost")
+    return LOST.get(why, why)
 
 
 def handover(night: Night) -> list[Section]:
@@ -228,42 +225,10 @@ def handover(night: Night) -> list[Section]:
         Section("Open now", list(_open(night)) or ["nothing: all that began is over"], urgent=True),
         Section("Silenced", sorted(set(silences))),
         Section("Doses", list(_doses(night))),
-        Section("Checks, notes, orders", list(_notes(night))),
+        Section("Checks, notes, orders", list(told_orders(night))),
         Section("How sure", [_how_sure(lane) for lane in night.lanes]),
     ]
     return [section for section in told if section.lines]
-
-
-def _compared(lane: Lane, event: Event) -> str:
-    """Another reading of the same water against ours: both, and E_n."""
-    at = [m for m in lane.minutes if event.time_s - 120 < m.t <= event.time_s + 60]
-    ours = next((m for m in reversed(at) if math.isfinite(m.mean_pct)), None)
-    theirs = event.fields["salinity_pct"]
-    u95 = 2.0 * (event.fields.get("u_pct") or 0.0)
-    what = event.fields.get("what") or "another instrument"
-    if ours is None:
-        return f"{what} reads {pct(theirs, u95)}; ours gave none then"
-    score = (ours.mean_pct - theirs) / max(math.hypot(ours.u95_pct, u95), 1e-9)
-    our_pct = pct(ours.mean_pct, ours.u95_pct)
-    return f"{what} reads {pct(theirs, u95)}, ours {our_pct}: E_n {score:+.1f}"
-
-
-def _notes(night: Night) -> Iterable[str]:
-    for lane in night.lanes:
-        for event in lane.events:
-            if event.kind in ("dose", "gap"):
-                continue
-            if event.kind == "compare":
-                yield f"{lane.tank}: {clock(night, event.time_s)} {_compared(lane, event)}"
-                continue
-            by = f", by {event.fields['by']}" if event.fields.get("by") else ""
-            shown = {
-                key: value
-                for key, value in event.fields.items()
-                if key not in ("id", "by", "tank") and value not in (None, "")
-            }
-            said = ", ".join(f"{key} {value}" for key, value in shown.items())
-            yield f"{lane.probe}: {clock(night, event.time_s)} {event.kind} {said}{by}".rstrip()
 
 
 def _how_sure(lane: Lane) -> str:
@@ -274,7 +239,14 @@ def _how_sure(lane: Lane) -> str:
         word: sum(m.belief == word for m in lane.minutes) / n
         for word in ("believed", "doubtful", "not-believed", "out")
     }
-    said = ", ".join(f"{word} {share:.0%}" for word, share in shares.items() if share)
+    said = ", ".join(f"{word} {_share(share)}" for word, share in shares.items() if share)
     doubts = sorted(m.u95_pct for m in lane.minutes if math.isfinite(m.u95_pct))
     doubt = f"; typical doubt +- {doubts[len(doubts) // 2]:.2g} %" if doubts else ""
     return f"{lane.probe} in {lane.tank}: {said}{doubt}"
+
+
+def _share(share: float) -> str:
+    """Never 0 % of what was, nor 100 % of what was not all."""
+    if 0 < share < 0.01:
+        return "below 1 %"
+    return "over 99 %" if 0.99 < share < 1 else f"{100 * share:.0f} %"

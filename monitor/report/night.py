@@ -3,10 +3,10 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 from datetime import datetime, timedelta
-from typing import NamedTuple, Protocol
+from typing import Any, NamedTuple, Protocol
 
 from monitor.bench import Bench
 from monitor.blocks import NAN, Event, Second
@@ -16,7 +16,11 @@ from monitor.findings import Finding
 from monitor.many import JudgedProbe, Keeper, judge_logs
 from monitor.replay import replay
 
-TOLD = ("dose", "strike", "water", "out", "back", "note", "check", "compare", "silence", "gap")
+TOLD = (
+    *("dose", "strike", "water", "out", "back", "note", "check", "compare", "silence", "gap"),
+    "answer",
+)
+SETTINGS = ("bench", "calibration")  # stand at the head of each part: told where they differ
 
 
 class Minute(NamedTuple):
@@ -43,6 +47,7 @@ class Lane:
     minutes: list[Minute] = field(default_factory=list)
     events: list[Event] = field(default_factory=list)
     doses: dict[float, Dose] = field(default_factory=dict)  # by the night's time
+    settings: dict[str, Mapping[str, Any]] = field(default_factory=dict)  # the newest, by kind
     dropped: dict[str, int] = field(default_factory=dict)
     messages: list[str] = field(default_factory=list)
 
@@ -93,8 +98,17 @@ class _Minutes:
         for event in second.events:
             if event.kind == "dose":
                 self._book(event.time_s, judges)
-            if event.kind in TOLD:
+            if event.kind in SETTINGS:
+                event = self._changed(event)
+            if event.kind in TOLD or (event.kind in SETTINGS and event.fields["changed"]):
                 self.lane.events.append(event._replace(time_s=event.time_s + self.offset))
+
+    def _changed(self, event: Event) -> Event:
+        """The settings' event with what differs from those before."""
+        before = self.lane.settings.get(event.kind)
+        self.lane.settings[event.kind] = event.fields
+        differs = list(_differing(before, event.fields)) if before is not None else []
+        return event._replace(fields={"name": event.fields.get("name"), "changed": differs})
 
     def _book(self, time_s: float, judges: Judges) -> None:
         """Keep the dose as it was reckoned with."""
@@ -124,6 +138,18 @@ class Judge(Protocol):
         self, paths: Sequence[str], given: Bench | None, *, keeper: Callable[[str], Keeper]
     ) -> list[JudgedProbe]:
         """The probes of these logs, judged."""
+
+
+def _differing(before: Any, after: Any, at: str = "", depth: int = 3) -> Iterator[str]:
+    """Names of the keys whose values differ, down to `depth` tables."""
+    if before == after:
+        return
+    if depth and isinstance(before, Mapping) and isinstance(after, Mapping):
+        for key in {**before, **after}:
+            name = f"{at}.{key}" if at else str(key)
+            yield from _differing(before.get(key), after.get(key), name, depth - 1)
+    else:
+        yield at
 
 
 def gather(

@@ -13,17 +13,23 @@ from collections.abc import Iterable, Sequence
 
 from monitor import cautions
 from monitor.printable import printable
-from monitor.report.digest import Section, length, sections
+from monitor.report.digest import Section, sections
 from monitor.report.night import Lane, Minute, Night
+from monitor.report.words import length
 
 BARS = "▁▂▃▄▅▆▇█"
 WIDE, HIGH = 720, 120  # px of a tank's picture
 TEXT_MOST = 400
 
 
-def text(night: Night, columns: int = 80, told: Sequence[Section] | None = None) -> str:
+def text(
+    night: Night,
+    columns: int = 80,
+    told: Sequence[Section] | None = None,
+    title: str = "Report",
+) -> str:
     """The page for a terminal; `told` instead of the whole report's sections."""
-    lines = [*_head(night), ""]
+    lines = [*_head(night, title), ""]
     for section in told or sections(night):
         lines.append(section.title)
         for said in section.lines:
@@ -41,11 +47,11 @@ def text(night: Night, columns: int = 80, told: Sequence[Section] | None = None)
     return "\n".join(lines) + "\n"
 
 
-def _head(night: Night) -> list[str]:
+def _head(night: Night, title: str = "Report") -> list[str]:
     first, last = night.when(night.from_t), night.when(night.to_t)
     lasted = length(night.to_t - night.from_t)
     stamps = [when.strftime("%Y-%m-%d %H:%M %z") for when in (first, last)]
-    return [f"Report from {stamps[0]} to {stamps[1]} ({lasted}, local time)"]
+    return [f"{title} from {stamps[0]} to {stamps[1]} ({lasted}, local time)"]
 
 
 def _columns(lane: Lane, n: int) -> list[list[Minute]]:
@@ -79,7 +85,8 @@ def _bars(lane: Lane, columns: int) -> Iterable[str]:
         marks += _mark(dealt)
     yield f"  {bars}"
     if marks.strip():
-        yield f"  {marks}   ? doubtful  x not believed  o out"
+        yield f"  {marks}".rstrip()
+        yield "  (? doubtful, x not believed, o out of the tank)"
 
 
 def _mark(dealt: Sequence[Minute]) -> str:

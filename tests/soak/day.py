@@ -200,7 +200,7 @@ def main(folder: Path) -> None:
     (folder / "day.truth.json").write_text(json.dumps({"happened": day.truth}, indent=1))
     (folder / "day.findings.jsonl").write_text("".join(line(f) + "\n" for f in bench.said))
     night = gather([str(path) for path in sorted(folder.glob("*.log"))])
-    print(text(night), text(night, told=handover(night)), sep="\n")
+    print(text(night), text(night, told=handover(night), title="Hand-over"), sep="\n")
 
 
 if __name__ == "__main__":
