@@ -9,22 +9,20 @@ import asyncio
 import os
 import signal
 import time
-from collections.abc import Callable
 from datetime import UTC, timedelta, timezone
 from typing import ClassVar
 
-from rich.segment import Segment
 from textual import events
 from textual.app import App, ComposeResult
-from textual.geometry import Region, Size
-from textual.strip import Strip
-from textual.widget import Widget
+from textual.geometry import Size
 
 from monitor.printable import printable
-from monitor.screen import acts, axis, figures, palette, sheet
-from monitor.screen.draw import Run
+from monitor.screen import desk, figures, keys, palette, sheet
 from monitor.screen.figures import Clock
-from monitor.screen.sheet import Look, Sheet
+from monitor.screen.forms import Form
+from monitor.screen.look import Look, tanks
+from monitor.screen.paper import Paper
+from monitor.screen.sheet import Sheet
 from monitor.screen.source import ActError, Source
 from monitor.screen.words import ACT, CALM, DOUBT, Said
 
@@ -33,41 +31,6 @@ MESSAGE_S = 12.0
 HURRIED_S = 1.0  # how often it is drawn while the source is catching up
 ZOOM = 2.0
 SIGNALS = (signal.SIGINT, signal.SIGTERM, signal.SIGHUP)
-
-
-class Paper(Widget):
-    """The rows of a sheet; only those that changed are drawn again."""
-
-    DEFAULT_CSS = "Paper { width: 100%; height: 100%; }"
-    can_focus = True
-
-    def __init__(self) -> None:
-        super().__init__()
-        self._rows: list[list[Run]] = []
-        self.strips: list[Strip] = []
-        self.colours = palette.Palette(palette.DARK)
-
-    def show(self, rows: list[list[Run]], width: int) -> None:
-        """Take these rows."""
-        same = len(rows) == len(self._rows)
-        changed = [i for i, row in enumerate(rows) if not same or row != self._rows[i]]
-        if not changed:
-            return
-        style = self.colours.style
-        if not same:
-            self.strips = [Strip([])] * len(rows)
-        for i in changed:
-            self.strips[i] = Strip([Segment(text, style(ink)) for text, ink in rows[i]], width)
-        self._rows = rows
-        self.refresh(*(Region(0, i, width, 1) for i in changed))
-
-    def forget(self) -> None:
-        """Draw all again next time."""
-        self._rows, self.strips = [], []
-
-    def render_line(self, y: int) -> Strip:
-        """One row."""
-        return self.strips[y] if y < len(self.strips) else Strip.blank(self.size.width)
 
 
 class Screen(App[None]):
@@ -195,7 +158,7 @@ class Screen(App[None]):
         elif self.look.form is not None:
             self._form_key(event)
         else:
-            self.act(_KEYS.get(event.key) or _KEYS.get(event.character or "", ""))
+            self.act(keys.ACTS.get(event.key) or keys.ACTS.get(event.character or "", ""))
         self.redraw()
 
     def act(self, name: str) -> None:
@@ -203,12 +166,13 @@ class Screen(App[None]):
         look = self.look
         if name.startswith("tank "):
             look.chosen = int(name[5:])
-        elif name in ("dose", "strike", "note", "lift", "water", "silence"):
+        elif name in desk.NAMES:
             self._begin(name)
         elif name in ("closer", "wider"):
-            self._zoom(1.0 / ZOOM if name == "closer" else ZOOM)
+            look.zoom(1.0 / ZOOM if name == "closer" else ZOOM)
         elif name in ("left", "right", "far-left", "far-right"):
-            self._pan(-1 if "left" in name else 1, 10 if "far" in name else 1)
+            cells = (10 if "far" in name else 1) * (-1 if "left" in name else 1)
+            look.pan(cells, self.sheet.on, self.source.now_s)
         elif name in ("up", "down"):
             self._choose(-1 if name == "up" else 1)
         elif name == "now":
@@ -234,27 +198,11 @@ class Screen(App[None]):
             self._drive(name)
 
     def _choose(self, by: int) -> None:
-        known = sheet.tanks(self.source, self.look, self.clock)
+        known = tanks(self.source, self.look, self.clock)
         if not known:
             return
         at = next((i for i, tank in enumerate(known) if tank.place == self.look.chosen), 0)
         self.look.chosen = known[min(max(at + by, 0), len(known) - 1)].place
-
-    def _zoom(self, by: float) -> None:
-        span = self.look.span_s * by
-        self.look.span_s = min(max(span, axis.SPAN_LEAST_S), axis.SPAN_MOST_S)
-
-    def _pan(self, way: int, cells: int) -> None:
-        look, now = self.look, self.source.now_s
-        on = self.sheet.on
-        cell_s = on.cell_s if on is not None else look.span_s / 60.0
-        if look.cursor_t is not None:
-            look.cursor_t = min(look.cursor_t + way * cells * cell_s, now)
-            if on is not None and look.cursor_t < on.from_t:
-                look.end_t = look.cursor_t + 0.5 * look.span_s
-            return
-        end = (look.end_t if look.end_t is not None else now) + way * look.span_s / (8 / cells)
-        look.end_t = None if end >= now else max(end, 0.0)
 
     def _drive(self, name: str) -> None:
         source = self.source
@@ -277,19 +225,10 @@ class Screen(App[None]):
             return
         lane = self.source.lanes[self.look.chosen]
         self.look.end_t = self.look.cursor_t = self.look.message = None
-        forms: dict[str, Callable[[], acts.Form | None]] = {
-            "dose": lambda: acts.dose(lane),
-            "strike": lambda: acts.strike(lane, self.clock),
-            "note": lambda: acts.note(lane),
-            "lift": lambda: acts.lift(lane),
-            "water": lambda: acts.water(lane),
-            "silence": lambda: acts.silence(lane, self._utc_in),
-        }
-        form = forms[name]()
-        if form is None:
-            nothing = {"dose": "the bench has no liquids", "strike": "there is no dose to strike"}
-            self.say(nothing.get(name, "nothing to do"), DOUBT)
-        self.look.form = form
+        made = desk.form(name, lane, self.clock, self._utc_in)
+        if made is None:
+            self.say(desk.NOTHING[name], DOUBT)
+        self.look.form = made
 
     def _utc_in(self, seconds: float) -> str:
         ahead = self.source.started + timedelta(seconds=self.source.now_s + seconds)
@@ -330,7 +269,7 @@ class Screen(App[None]):
         )
 
     async def _order(
-        self, form: acts.Form, kind: str, fields: dict[str, object], probe: str, ago_s: float
+        self, form: Form, kind: str, fields: dict[str, object], probe: str, ago_s: float
     ) -> None:
         try:
             await self.source.order(kind, fields, probe, ago_s)
@@ -376,49 +315,6 @@ class Screen(App[None]):
         """And back."""
         self.act("wider")
         self.redraw()
-
-
-_KEYS = {
-    "d": "dose",
-    "s": "strike",
-    "n": "note",
-    "o": "lift",
-    "w": "water",
-    "z": "silence",
-    "plus": "closer",
-    "+": "closer",
-    "equals_sign": "closer",
-    "minus": "wider",
-    "-": "wider",
-    "left": "left",
-    "right": "right",
-    "shift+left": "far-left",
-    "shift+right": "far-right",
-    "pageup": "far-left",
-    "pagedown": "far-right",
-    "up": "up",
-    "down": "down",
-    "k": "up",
-    "j": "down",
-    "0": "now",
-    "end": "now",
-    "c": "cursor",
-    "u": "unit",
-    "r": "order",
-    "b": "light",
-    "?": "help",
-    "f1": "help",
-    "h": "help",
-    "escape": "escape",
-    "q": "quit",
-    "space": "pause",
-    ">": "faster",
-    ".": "faster",
-    "<": "slower",
-    ",": "slower",
-    "f": "next",
-    "g": "start",
-}
 
 
 def _light_terminal() -> bool:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import re
+import tempfile
 from pathlib import Path
 
 from textual.app import App
@@ -21,7 +22,7 @@ def normal(svg: str) -> str:
 
 
 def holds(app: App[None], name: str) -> bool:
-    """Whether the screen looks as it was kept; a differing picture is left beside it."""
+    """Whether the screen looks as it was kept; a differing picture is left for a look."""
     svg = normal(app.export_screenshot(title="stillbrine"))
     kept = KEPT / f"{name}.svg"
     if os.environ.get("KEEP_PICTURES"):
@@ -29,5 +30,7 @@ def holds(app: App[None], name: str) -> bool:
         kept.write_text(svg)
     if kept.exists() and kept.read_text() == svg:
         return True
-    kept.with_suffix(".differs.svg").write_text(svg)
+    differs = Path(tempfile.gettempdir()) / f"{name}.differs.svg"
+    differs.write_text(svg)
+    print(f"differs from {kept}: {differs}")
     return False

@@ -8,8 +8,9 @@ from pathlib import Path
 import pytest
 
 from monitor.blocks import Event
-from monitor.screen import acts
+from monitor.screen import acts, questions
 from monitor.screen.figures import Clock
+from monitor.screen.forms import Form
 from monitor.screen.replayed import ReplaySource
 from monitor.view import Lane
 from tests.screen import invented
@@ -27,7 +28,7 @@ def lane(tmp_path: Path) -> Lane:
     return source.lanes[0]
 
 
-def typed(form: acts.Form, **values: str) -> acts.Form:
+def typed(form: Form, **values: str) -> Form:
     for each in form.fields:
         if each.name in values:
             each.value = ""
@@ -145,3 +146,42 @@ def test_note_and_silence(lane: Lane) -> None:
     form = acts.silence(lane, lambda seconds: f"in {seconds:g} s")
     assert form.preview(lane).order == ("silence", {"what": "t1", "until_utc": "in 1800 s"})
     assert typed(form, minutes="9999").preview(lane).order is None
+
+
+def test_another_instrument_is_compared(lane: Lane) -> None:
+    told = typed(questions.measured(lane), salinity="0.081", u="0.0005").preview(lane)
+    assert told.lines[0].startswith("the probe reads 0.001")
+    assert told.lines[0].endswith("less")
+    assert told.order == ("compare", {"salinity_pct": 0.081, "u_pct": 0.0005})
+    assert questions.measured(lane).preview(lane).order is None
+    assert typed(questions.measured(lane), salinity="99").preview(lane).order is None
+
+
+def test_what_is_asked_is_answered_by_its_own_time(lane: Lane) -> None:
+    assert questions.answer(lane) is None
+    notice = {"finding": "notice", "probe": "p1", "tank": "t1", "t": 90.0, "from_t": 80.0}
+    lane.finding({**notice, "to_t": None, "what": "unrecorded-dose", "text": "who\x1b[2J dosed?"})
+    form = questions.answer(lane)
+    assert form is not None
+    assert form.preview(lane).order is None
+    assert form.preview(lane).lines == ["who\\x1b[2J dosed?"]
+    told = typed(form, answer="me").preview(lane)
+    assert told.order == ("answer", {"of": "unrecorded-dose", "from_t": 80.0, "answer": "me"})
+
+
+def test_a_calibration_is_chosen_among_the_named_sets(lane: Lane) -> None:
+    assert questions.calibration(lane) is None
+    bench = lane.settings
+    assert bench is not None
+    probe = bench.probe["p1"]
+    named = tuple(
+        each.model_copy(update={"set": "may" if i < 3 else "june"})
+        for i, each in enumerate(probe.standard)
+    )
+    probe = probe.model_copy(update={"standard": named})
+    other = Lane("p1", bench.model_copy(update={"probe": {"p1": probe}}))
+    form = questions.calibration(other)
+    assert form is not None
+    assert form.preview(other).order == ("calibration", {"set": "june"})
+    form.turn(1)
+    assert form.preview(other).order == ("calibration", {"set": "may"})

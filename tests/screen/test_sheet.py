@@ -9,10 +9,10 @@ import pytest
 from rich.cells import cell_len
 
 from monitor.blocks import Event
-from monitor.screen import sheet, text
+from monitor.screen import foot, sheet, text
 from monitor.screen.figures import Clock, Scale
+from monitor.screen.look import Look
 from monitor.screen.replayed import ReplaySource
-from monitor.screen.sheet import Look
 from tests.screen import invented
 
 DOSE = Event(120.0, "dose", {"tank": "t1", "liquid": "saline", "volume_ml": 120.0, "id": "d1"})
@@ -125,10 +125,10 @@ def test_before_the_first_reading(tmp_path: Path) -> None:
 
 def test_what_was_read_at_the_cursor(tmp_path: Path) -> None:
     source = at(three_tanks(tmp_path), 290.0)
-    told = sheet.reading(source.lanes[0], 60.5, CLOCK, Scale("%"))
+    told = foot.reading(source.lanes[0], 60.5, CLOCK, Scale("%"))
     assert told.startswith("19:01:00  0.0800 % · 89")
     assert told.endswith("25.00 C")
-    assert sheet.reading(source.lanes[0], 9e9, CLOCK, Scale("%")).endswith("no reading")
+    assert foot.reading(source.lanes[0], 9e9, CLOCK, Scale("%")).endswith("no reading")
 
 
 def test_units_change_all_figures_at_once(tmp_path: Path) -> None:

@@ -8,8 +8,8 @@ import pytest
 
 from monitor.screen import sheet
 from monitor.screen.figures import Clock
+from monitor.screen.look import Look
 from monitor.screen.plain import PlainText
-from monitor.screen.sheet import Look
 from tests.screen import fixed
 
 TROUBLE = "NOTHING IS RECORDED for 40 s: does `stillbrine run` still run?"
