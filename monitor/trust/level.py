@@ -255,8 +255,8 @@ def line(values: Sequence[float]) -> tuple[float, float, float]:
 def noise_of(standards: Sequence[bench.Standard]) -> float | None:
     """Noise of one reading, relative, pooled over the standards' own scatter.
 
-    The tick's part is left in: taking it out makes noise below a third of a tick too small to be
-    sure of, and costs one stuck figure in ten.
+    The tick's part is left in, so noise below a third of a tick comes out too great. Taking it out
+    missed 14 of 180 drawn stuck figures where 4 are missed now.
     """
     total = weight = 0.0
     for each in standards:
