@@ -116,10 +116,8 @@ def bench(folder: Path, probes: int, rate_hz: float) -> Iterator[Path]:
             process.wait()
 
 
-def measure(path: Path, logs: Path, seconds: float, keys: int) -> None:
-    """Print the figures of one watching process."""
-    line = [sys.executable, "-c", MAIN, "watch", "--bench", str(path), "--logs", str(logs)]
-    terminal = Terminal(line, 120, 40)
+def measure(terminal: Terminal, seconds: float, keys: int) -> None:
+    """Print the figures of the watching process in this terminal."""
     _, shown = terminal.read(terminal.began + 20, (b" quit",))
     if shown is None:
         raise SystemExit("no picture within 20 s")
@@ -159,7 +157,12 @@ def main() -> None:
     with tempfile.TemporaryDirectory(prefix="stillbrine-pace-") as folder:
         os.environ["XDG_RUNTIME_DIR"] = folder
         with bench(Path(folder), given.probes, given.rate) as path:
-            measure(path, Path(folder) / "logs", given.seconds, given.keys)
+            line = [sys.executable, "-c", MAIN, "watch", "--bench", str(path)]
+            terminal = Terminal([*line, "--logs", str(Path(folder) / "logs")], 120, 40)
+            try:
+                measure(terminal, given.seconds, given.keys)
+            finally:
+                terminal.process.kill()
 
 
 if __name__ == "__main__":
