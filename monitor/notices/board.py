@@ -29,6 +29,7 @@ class Notices:
         self._doses = DoseNotices(self.open, bench, tank)
         self._lift = Lift(self.open)
         self._other = OtherProbe(self.open, carried.get("other"))
+        self._was_calm = False
 
     def step(
         self,
@@ -47,7 +48,10 @@ class Notices:
             and self._was_calm
             and not settling.moving
         ):
-            return self._other.step(second, trust, False, False)
+            found = self._other.step(second, trust, False, False)
+            if found:
+                trust.doubts = DOUBT
+            return found
         self._was_calm = trust.locked and not second.events and not settling.moving
         found = self._answers(second) if second.events else []
         marked = any(event.kind in MARKS for event in second.events)
@@ -58,8 +62,6 @@ class Notices:
         found += self._other.step(second, trust, _gap(second.events), moved and not marked)
         trust.doubts = DOUBT if self.open.find("other-probe") else ""
         return found
-
-    _was_calm = False
 
     def carry(self) -> dict[str, Any]:
         """Open questions, and the last good minute."""

@@ -33,7 +33,7 @@ def test_a_tank_is_unwatched_after_ten_minutes_and_watched_again_at_once() -> No
         (700.0, 100.0, None),
         (901.0, 100.0, 901.0),
     ]
-    assert "p1 no-pulses" in found[0]["why"]
+    assert "p1 (no-pulses)" in found[0]["why"]
 
 
 @pytest.mark.parametrize("steps", [[1000], [50, 699, 700, 701, 1000], list(range(1, 1001))])
