@@ -54,7 +54,7 @@ class Screen(App[None]):
         self.source = source
         self.look = Look(note=printable(note), mono=mono)
         self.paper = Paper()
-        self.light = light if light is not None else _light_terminal()
+        self.light = light if light is not None else palette.light_terminal()
         self.sheet = Sheet([])
         self._message_until = 0.0
         self._drawn = 0.0
@@ -241,16 +241,8 @@ class Screen(App[None]):
             self.look.form = None
         elif event.key == "enter":
             self._record()
-        elif event.key in ("tab", "down"):
-            form.move(1)
-        elif event.key in ("shift+tab", "up"):
-            form.move(-1)
-        elif event.key in ("left", "right"):
-            form.turn(-1 if event.key == "left" else 1)
-        elif event.key == "backspace":
-            form.rub()
-        elif event.character is not None:
-            form.type(event.character)
+        else:
+            form.press(event.key, event.character)
 
     def _record(self) -> None:
         """Order what the form says, once."""
@@ -315,11 +307,6 @@ class Screen(App[None]):
         """And back."""
         self.act("wider")
         self.redraw()
-
-
-def _light_terminal() -> bool:
-    """Whether the terminal says that its paper is white."""
-    return os.environ.get("COLORFGBG", "").rpartition(";")[2] in ("7", "15")
 
 
 def run_app(source: Source, *, note: str = "", light: bool | None = None) -> None:

@@ -59,6 +59,19 @@ class Form:
     def __getitem__(self, name: str) -> str:
         return next((each.value for each in self.fields if each.name == name), "").strip()
 
+    def press(self, key: str, char: str | None) -> None:
+        """A key, or the character that it types."""
+        if key in ("tab", "down"):
+            self.move(1)
+        elif key in ("shift+tab", "up"):
+            self.move(-1)
+        elif key in ("left", "right"):
+            self.turn(-1 if key == "left" else 1)
+        elif key == "backspace":
+            self.rub()
+        elif char is not None:
+            self.type(char)
+
     def move(self, by: int) -> None:
         """To the next or previous field."""
         if self.fields:

@@ -6,6 +6,8 @@ told by colour alone: what needs a person has capitals, a mark or a weight as we
 
 from __future__ import annotations
 
+import os
+
 from rich.style import Style
 
 DARK = {
@@ -66,3 +68,8 @@ class Palette:
         colour = self._colours.get(ink, self._colours["ink"])
         behind = self._colours.get(paper or "paper", self._colours["paper"])
         return Style(color=colour, bgcolor=behind, bold=bold)
+
+
+def light_terminal() -> bool:
+    """Whether the terminal says that its paper is white."""
+    return os.environ.get("COLORFGBG", "").rpartition(";")[2] in ("7", "15")
