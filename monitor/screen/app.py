@@ -14,6 +14,7 @@ from typing import ClassVar
 
 from textual import events
 from textual.app import App, ComposeResult
+from textual.drivers.linux_driver import LinuxDriver
 from textual.geometry import Size
 
 from monitor.printable import printable
@@ -24,6 +25,7 @@ from monitor.screen.look import Look, tanks
 from monitor.screen.paper import Paper
 from monitor.screen.sheet import Sheet
 from monitor.screen.source import ActError, Source
+from monitor.screen.terminal import Terminal
 from monitor.screen.words import ACT, CALM, DOUBT, Said
 
 POLL_S = 0.25
@@ -315,4 +317,7 @@ def run_app(source: Source, *, note: str = "", light: bool | None = None) -> Non
     `note` : one line kept in sight, as that all data is invented
     `light` : on white; None: as the terminal says
     """
-    Screen(source, note, light).run()
+    app = Screen(source, note, light)
+    if app.driver_class is LinuxDriver:
+        app.driver_class = Terminal
+    app.run()

@@ -68,34 +68,46 @@ def axis(width: int, span_s: float, now_t: float, end_t: float | None) -> Axis:
 def columns(lane: Lane, on: Axis) -> tuple[Columns, Columns | None]:
     """A lane's trace on the axis: its seconds, or minutes where those are too many or too old.
 
-    Returns the tank's readings, filtered; and those that are not the tank's, None without any.
+    Returns the tank's readings, filtered; and for the faint trace those that are not the tank's,
+    and the span of each minute; None without any.
     """
-    n = 2 * on.width
-    times, values = [np.empty(0)], [np.empty(0)]
-    gap_s = 2.6
+    trace = lane.trace
+    split_t = trace.seconds.first_t
+    if on.dot_s >= COARSE_S:
+        split_t = trace.minutes.last_t + 30.0
+    if split_t != split_t:
+        split_t = on.from_t
+    fine, faint = _seconds(lane, on, max(split_t, on.from_t))
+    if on.from_t < split_t:
+        mean, span = _minutes(lane, on, split_t)
+        fine.fill_from(mean)
+        if faint is not None:
+            span.fill_from(faint)
+        faint = span
+    return fine, faint
+
+
+def _minutes(lane: Lane, on: Axis, to_t: float) -> tuple[Columns, Columns]:
+    """Mean of each minute up to `to_t`; and the span from its lowest to its highest."""
+    t, low, mean, high, _, _ = lane.trace.minutes.between(on.from_t, min(to_t - 29.0, on.to_t))
+    y = np.stack((low, high), axis=1).ravel()
+    of = (on.from_t, on.dot_s, 2 * on.width, 121.0)
+    return Columns(t, mean, *of), Columns(np.repeat(t, 2), y, *of)
+
+
+def _seconds(lane: Lane, on: Axis, from_t: float) -> tuple[Columns, Columns | None]:
+    """Seconds from `from_t` on: the tank's, filtered; and those that are not the tank's."""
+    n, gap_s = 2 * on.width, 2.6
+    t, value, smooth, good, _, _, _ = lane.trace.seconds.between(from_t, on.to_t)
+    if len(t) > 2:
+        gap_s = max(gap_s, 2.6 * float(np.diff(t[-64:]).min()))
+    shown = np.where(np.isfinite(smooth), smooth, value)
+    not_tank = good == 0
     faint: Columns | None = None
-    seconds_t = lane.trace.seconds.first_t
-    coarse = on.dot_s >= COARSE_S
-    if coarse or (seconds_t == seconds_t and on.from_t < seconds_t):
-        t, low, _, high, _, _ = lane.trace.minutes.between(on.from_t, on.to_t)
-        if len(t):
-            old = np.ones(len(t), bool) if coarse else t + 30.0 <= seconds_t
-            times.append(np.repeat(t[old], 2))
-            values.append(np.stack((low[old], high[old]), axis=1).ravel())
-            gap_s = 121.0
-    if not coarse:
-        t, value, smooth, good, _, _, _ = lane.trace.seconds.between(on.from_t, on.to_t)
-        if len(t) > 2:
-            gap_s = max(2.6, 2.6 * float(np.diff(t[-64:]).min()))
-        shown = np.where(np.isfinite(smooth), smooth, value)
-        not_tank = good == 0
-        if not_tank.any():
-            faint = Columns(t, np.where(not_tank, value, np.nan), on.from_t, on.dot_s, n, gap_s)
-            shown[not_tank] = np.nan
-        times.append(t)
-        values.append(shown)
-    y = np.concatenate(values)
-    return Columns(np.concatenate(times), y, on.from_t, on.dot_s, n, gap_s), faint
+    if not_tank.any():
+        faint = Columns(t, np.where(not_tank, value, np.nan), on.from_t, on.dot_s, n, gap_s)
+        shown[not_tank] = np.nan
+    return Columns(t, shown, on.from_t, on.dot_s, n, gap_s), faint
 
 
 def labels(on: Axis, clock: Clock, margin: int, future: bool = True) -> list[Run]:

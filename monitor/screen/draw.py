@@ -51,6 +51,15 @@ class Columns:
         self.joined[at[1:]] = near
         self._bridge(at, near, y[last[:-1]], y[starts[1:]])
 
+    def fill_from(self, other: Columns) -> None:
+        """Take the other's columns where there are none; they join where both sides are filled."""
+        empty = np.isnan(self.low)
+        taken = empty & np.isfinite(other.low)
+        self.low[taken], self.high[taken] = other.low[taken], other.high[taken]
+        self.joined[taken] = other.joined[taken]
+        border = np.flatnonzero(~taken[1:] & taken[:-1] & np.isfinite(self.low[1:])) + 1
+        self.joined[border] = True
+
     def _bridge(self, at: NDArray[np.int64], near: Bools, left: Floats, right: Floats) -> None:
         """Fill the columns between two that belong together, on a straight line."""
         between = np.arange(len(self.low))
@@ -213,8 +222,9 @@ def nice_bounds(low: float, high: float, least: float) -> tuple[float, float]:
     """Bounds that hold [low, high], at least `least` apart, on round figures so that they keep."""
     middle, span = 0.5 * (low + high), max(high - low, least, 1e-12)
     step = nice_step(span, 6)
-    low, high = middle - 0.52 * span, middle + 0.52 * span
-    return float(np.floor(low / step) * step), float(np.ceil(high / step) * step)
+    bottom = np.floor((middle - 0.52 * span) / step) * step
+    top = np.ceil((middle + 0.52 * span) / step) * step
+    return min(float(bottom), low), max(float(top), high)
 
 
 def strip(

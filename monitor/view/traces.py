@@ -46,6 +46,11 @@ class Columns:
         """Time of the oldest row; NaN without one."""
         return self.columns[0][0] if self.columns[0] else NAN
 
+    @property
+    def last_t(self) -> float:
+        """Time of the newest row; NaN without one."""
+        return self.columns[0][-1] if self.columns[0] else NAN
+
 
 class Trace:
     """Seconds and minutes of one lane.

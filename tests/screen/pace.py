@@ -40,6 +40,7 @@ class Terminal:
         self.ours, self._theirs = os.openpty()
         fcntl.ioctl(self._theirs, termios.TIOCSWINSZ, struct.pack("4H", rows, columns, 0, 0))
         whole = {**os.environ, "TERM": "xterm-256color", "COLORTERM": "truecolor", **(env or {})}
+        self._ends = [self.ours, self._theirs]
         self.drawn = b""
         self.began = time.monotonic()
         self.process = subprocess.Popen(
@@ -58,8 +59,9 @@ class Terminal:
 
     def close(self) -> None:
         """Give the pseudo-terminal back."""
-        os.close(self.ours)
-        os.close(self._theirs)
+        for each in self._ends:
+            os.close(each)
+        self._ends = []
 
     def read(self, until: float, words: tuple[bytes, ...] = ()) -> tuple[int, float | None]:
         """Take what it draws until then, or one of these words: bytes, and when that was."""

@@ -144,3 +144,12 @@ def test_runs_join_to_the_row() -> None:
     rows = ["".join(text for text, _ in canvas.runs(i, names, papers)) for i in range(5)]
     assert "\n".join(rows) == canvas.text()
     assert rows[2].endswith("cut o")
+
+
+def test_minutes_and_seconds_meet_without_a_hole() -> None:
+    minutes = Columns(np.array([0.0, 1, 2, 3]), np.full(4, 0.5), 0.0, 1.0, 8, 2.0)
+    seconds = Columns(np.array([4.0, 5, 6, 7]), np.full(4, 3.5), 0.0, 1.0, 8, 2.0)
+    seconds.fill_from(minutes)
+    canvas = Canvas(4, 1, 0.0, 4.0)
+    canvas.curve(seconds, 1)
+    assert canvas.text() == "⣀⣀⠏⠉"

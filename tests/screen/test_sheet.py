@@ -5,11 +5,12 @@ from __future__ import annotations
 from datetime import timedelta, timezone
 from pathlib import Path
 
+import numpy as np
 import pytest
 from rich.cells import cell_len
 
 from monitor.blocks import Event
-from monitor.screen import foot, sheet, text
+from monitor.screen import axis, foot, sheet, text
 from monitor.screen.figures import Clock, Scale
 from monitor.screen.look import Look
 from monitor.screen.replayed import ReplaySource
@@ -150,3 +151,15 @@ def test_many_lanes_scroll_to_the_chosen(tmp_path: Path) -> None:
     rows = drawn(source, 80, 24, look)
     assert any(row.startswith(f"▶{source.lanes[15].tank}") for row in rows)
     assert any("above" in row and "below" in row for row in rows)
+
+
+def test_a_long_run_is_drawn_from_minutes_up_to_the_present(tmp_path: Path) -> None:
+    text_of = invented.log_text(invented.bench(), length_s=3000.0)
+    source = at(ReplaySource([invented.saved(tmp_path, text_of)]), 2970.0)
+    on = axis.axis(70, 7200.0, source.now_s, None)
+    drawn_there = axis.columns(source.lanes[0], on)[0]
+    filled = np.flatnonzero(np.isfinite(drawn_there.low))
+    first, last = 2 * on.cell(30.0), 2 * on.now_cell
+    assert filled[0] <= first + 2
+    assert filled[-1] >= last - 1
+    assert len(filled) == filled[-1] - filled[0] + 1
