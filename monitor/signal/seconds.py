@@ -79,24 +79,28 @@ class Gatherer:
         """The seconds from the open one to before `upto`; `rows` are theirs, all of them."""
         assert self.open is not None
         full = self._seconds(rows) if len(rows.time_s) else []
-        seconds: list[Second] = []
-        k = self.open
-        for second in full:
-            if second.k > k:
-                self._empties(k, second.k, seconds)
-            self._begin(second, seconds)
-            k = second.k + 1
-        self._empties(k, upto, seconds)
-        self.open = upto
+        k, self.open = self.open, upto
+        if len(full) == upto - k:  # no empty one among them, as nearly always
+            seconds = full
+            self._begin(full[0])
+        else:
+            seconds = []
+            for second in full:
+                if second.k > k:
+                    self._empties(k, second.k, seconds)
+                self._begin(second)
+                seconds.append(second)
+                k = second.k + 1
+            self._empties(k, upto, seconds)
         self._warmth(seconds)
         return seconds
 
-    def _begin(self, second: Second, seconds: list[Second]) -> None:
+    def _begin(self, second: Second) -> None:
+        """A second with rows: the events met so far are its."""
         if self._events:
             second.events = tuple(self._events)
             self._events.clear()
         self._empty = 0
-        seconds.append(second)
 
     def _empties(self, k: int, upto: int, seconds: list[Second]) -> None:
         while k < upto:
@@ -146,7 +150,7 @@ class Gatherer:
 
     def _batch(self, rows: Block) -> list[Second]:
         number = rows.time_s.astype(np.int64)
-        starts = np.concatenate(([0], np.flatnonzero(np.diff(number)) + 1))
+        starts = _edges(number)
         stops = np.append(starts[1:], len(number))
         seconds = []
         for k, start, stop in zip(number[starts].tolist(), starts.tolist(), stops.tolist()):
@@ -164,18 +168,16 @@ class Gatherer:
                 second.zeros = count
             kept = [second for second in seconds if second.zeros < second.n_rows]
             if kept:
-                numbered = number[pulse]
-                edges = np.concatenate(([0], np.flatnonzero(np.diff(numbered)) + 1))
-                self._pulses(rows.period_us[pulse], edges, kept)
+                self._pulses(rows.period_us[pulse], _edges(number[pulse]), kept)
         return seconds
 
     @staticmethod
     def _temperatures(temp_c: Floats, starts: np.ndarray, seconds: list[Second]) -> None:
-        there = ~np.isnan(temp_c)
-        if not there.any():
-            return
+        there = temp_c == temp_c
         if there.all():
             counts = np.diff(np.append(starts, len(temp_c))).astype(np.float64)
+        elif not there.any():
+            return
         else:
             counts = np.add.reduceat(there.astype(np.float64), starts)
             temp_c = np.where(there, temp_c, 0.0)
@@ -188,15 +190,18 @@ class Gatherer:
         ln_us = np.log(period_us)
         passed = self._gate.passes(ln_us)
         self._gate.learn(ln_us)
-        before = np.concatenate(([self._last_ln], ln_us[:-1]))
-        steps = np.abs(ln_us - before)
-        if steps[0] != steps[0]:
-            steps[0] = 0.0
+        steps = np.empty_like(ln_us)
+        steps[0] = ln_us[0] - self._last_ln if self._last_ln == self._last_ln else 0.0
+        np.subtract(ln_us[1:], ln_us[:-1], out=steps[1:])
+        np.abs(steps, out=steps)
         self._last_ln = float(ln_us[-1])
         sizes = np.diff(np.append(starts, len(period_us)))
-        kept = np.add.reduceat(passed.astype(np.float64), starts)
-        sums = np.add.reduceat(np.where(passed, period_us, 0.0), starts)
-        with np.errstate(invalid="ignore"):
+        if passed.all():
+            kept = sizes
+            means = np.add.reduceat(period_us, starts) / sizes
+        else:
+            kept = np.add.reduceat(passed.astype(np.int64), starts)
+            sums = np.add.reduceat(np.where(passed, period_us, 0.0), starts)
             means = np.where(kept > 0, sums / np.maximum(kept, 1), NAN)
         columns = zip(
             seconds,
@@ -208,7 +213,7 @@ class Gatherer:
             (np.add.reduceat(steps, starts) / sizes).tolist(),
         )
         for second, n, mean, low, high, median, jitter in columns:
-            second.n = int(n)
+            second.n = n
             second.mean_us = mean
             second.low_us = low
             second.high_us = high
@@ -216,16 +221,19 @@ class Gatherer:
             second.jitter = jitter
 
 
+def _edges(number: np.ndarray) -> np.ndarray:
+    """Where a new second begins, the first included."""
+    return np.concatenate(([0], np.flatnonzero(number[1:] != number[:-1]) + 1))
+
+
 def _medians(values: Floats, starts: np.ndarray, sizes: np.ndarray) -> Floats:
     """Median of each segment, (m,), by sorting segments padded to one width."""
     width = int(sizes.max())
-    places = np.arange(width)
-    inside = places < sizes[:, None]
-    if inside.all():
+    if sizes.min() == width:
         table = values.reshape(-1, width).copy()
     else:
         table = np.full((len(sizes), width), np.inf)
-        table[inside] = values
+        table[np.arange(width) < sizes[:, None]] = values
     table.sort(axis=1)
     row = np.arange(len(sizes))
     return np.asarray(0.5 * (table[row, (sizes - 1) // 2] + table[row, sizes // 2]))
