@@ -2,7 +2,8 @@
 
 Rules:
 - The log is appended before anything else sees a row.
-- Readings wait at most until the next `flush`; an event first flushes what waits.
+- Readings wait at most until the next `flush`; an event first flushes what waits, and so does the
+  first reading past a second's end: what that second tells is due.
 - A write that fails pauses the recording. What comes in then is lost to the log and counted; once
   there is room again the gap is written, from the last line before it.
 - A judgement that fails is a bug of ours: it is said, and the recording goes on without it.
@@ -40,6 +41,7 @@ class Past(NamedTuple):
 
     carried: Mapping[str, Any]
     again: Sequence[Event] = ()  # recorded, but never judged: its end came first
+    silences: Mapping[str, str] = {}  # what is silenced, until when in UTC
 
 
 def _nothing(what: str, text: str | None) -> None:
@@ -103,7 +105,7 @@ class Recorder:
     def begin(self, settings: Head, past: Past) -> None:
         """Write the head of the first part. Raises LogWriteError, but not for a full disk."""
         self.settings = settings
-        self._silenced(past.carried.get("silences") or {})
+        self._silenced(past.silences)
         again = (codec.event_line(*event) for event in past.again)
         try:
             self._put(self._head_lines(past.carried) + "".join(again), owed=True)
@@ -124,10 +126,12 @@ class Recorder:
             self.unwritten += len(readings)
             return
         t = max(now_s - self.zero_s, self._last_t)
-        stamp = f"{t:.3f}"
+        stamp, before = f"{t:.3f}", self._last_t
         self._last_t = self._last_row_t = float(stamp)
         self._waiting += [codec.row_line(stamp, *reading) for reading in readings]
         self.rows += len(readings)
+        if int(self._last_t) > int(before):
+            self.flush()
 
     def flush(self) -> None:
         """Write and judge the readings that wait."""

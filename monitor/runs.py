@@ -16,6 +16,7 @@ from monitor.bench import Bench
 from monitor.blocks import Event
 from monitor.chain import Chain, calibration_of
 from monitor.logbook import reader
+from monitor.logbook.codec import EventError, check_fields
 from monitor.logbook.parser import Parser
 from monitor.logbook.reader import Part
 from monitor.orders import ORDERED
@@ -46,7 +47,7 @@ def carried_by_last_run(folder: Path, probe: str, started: datetime, bench: Benc
         return Past({})
     text = end_of_part(last)
     parser, chain = Parser(), Chain(probe, bench, first_second=None)
-    silences: dict[str, Any] = {}
+    silences: dict[str, str] = {}
     unjudged: list[Event] = []
     end_t = 0.0
     for data in last.chunks() if text is None else [last.header.text().encode(), text]:
@@ -60,15 +61,27 @@ def carried_by_last_run(folder: Path, probe: str, started: datetime, bench: Benc
                 continue
             end_t = max(end_t, item.time_s)
             if item.kind == "carried":
-                silences = dict(item.fields.get("silences") or {})
+                silences = _silences(item.fields.get("silences"))
             elif item.kind == "silence":
                 silences[item.fields["what"]] = item.fields["until_utc"]
             if item.kind in ORDERED:
                 unjudged.append(item)
     # where the wall clock went back: as if that run ended just now
     shift_s = min((last.header.started - started).total_seconds(), -end_t)
-    carried = {**shifted_times(chain.carry(), shift_s), "silences": silences}
-    return Past(carried, [event._replace(time_s=event.time_s + shift_s) for event in unjudged])
+    again = [event._replace(time_s=event.time_s + shift_s) for event in unjudged]
+    return Past(dict(shifted_times(chain.carry(), shift_s)), again, silences)
+
+
+def _silences(told: Any) -> dict[str, str]:
+    """What a log says was silenced; another's log may say anything."""
+    good: dict[str, str] = {}
+    for what, until_utc in told.items() if isinstance(told, dict) else ():
+        try:
+            check_fields("silence", {"what": what, "until_utc": until_utc})
+        except EventError:
+            continue
+        good[what] = until_utc
+    return good
 
 
 def end_of_part(part: Part) -> bytes | None:

@@ -30,7 +30,6 @@ from monitor.findings import Finding
 from monitor.follow import Follower
 from monitor.housekeeping import Housekeeping
 from monitor.logbook.codec import utc_of, utc_text
-from monitor.logbook.reader import LogError
 from monitor.logbook.writer import LogWriteError, LogWriter
 from monitor.mqtt import Publisher
 from monitor.orders import Order, OrderError, parse
@@ -181,7 +180,7 @@ class Service:
     def _past(self, probe: str, started: datetime) -> Past:
         try:
             return carried_by_last_run(self.folder, probe, started, self.bench)
-        except (LogError, OSError, ArithmeticError, LookupError, TypeError, ValueError) as wrong:
+        except Exception as wrong:  # anybody may have written into that log
             self._say(f"{probe}: the run before tells nothing, begun clean: {wrong}")
             return Past({})
 

@@ -123,7 +123,7 @@ class Run:
         """Rows in the newest log."""
         found = sorted(self.logs.glob(f"{probe}-*.log"))
         return (
-            sum(line[:1].isdigit() for line in found[-1].read_text().splitlines()) if found else 0
+            sum(line[:1].isdigit() for line in found[-1].read_bytes().splitlines()) if found else 0
         )
 
     def order(self, kind: str, fields: dict[str, Any], **more: Any) -> dict[str, Any]:

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import configparser
 import signal
+import socket
 import stat
 import subprocess
 import sys
@@ -12,6 +14,7 @@ from pathlib import Path
 
 import pytest
 
+import monitor
 from monitor.control import ControlError
 from tests.service.running import MAIN, OnPtys, Run, events, running, times, until
 
@@ -43,11 +46,38 @@ def test_orders_are_answered_once_they_are_in_the_log(bench: OnPtys, tmp_path: P
         with pytest.raises(ControlError, match="tank 't9' has no probe; expected one of t1"):
             run.order("dose", {"tank": "t9", "liquid": "saline", "volume_ml": 20.0})
         assert len(events(run.log(), "dose")) == 1
-        (socket,) = run.socket_folder.glob("*.sock")
-        assert stat.S_IMODE(socket.stat().st_mode) == 0o600
+        (path,) = run.socket_folder.glob("*.sock")
+        assert stat.S_IMODE(path.stat().st_mode) == 0o600
         assert stat.S_IMODE(run.socket_folder.stat().st_mode) == 0o700
         assert stat.S_IMODE(run.log().stat().st_mode) == 0o600
         assert stat.S_IMODE(run.logs.stat().st_mode) == 0o700
+
+
+def test_the_supervisor_is_told(
+    bench: OnPtys, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    with socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM) as heard:
+        heard.bind(str(tmp_path / "notify"))
+        heard.settimeout(15)
+        monkeypatch.setenv("NOTIFY_SOCKET", str(tmp_path / "notify"))
+        monkeypatch.setenv("WATCHDOG_USEC", "400000")
+        monkeypatch.delenv("WATCHDOG_PID", raising=False)
+        with running(bench, tmp_path) as run:
+            told = {heard.recv(100) for _ in range(4)}
+            assert told == {b"READY=1", b"WATCHDOG=1"}
+            assert run.end() == 0
+        while (last := heard.recv(100)) == b"WATCHDOG=1":
+            pass
+        assert last == b"STOPPING=1"
+
+
+def test_the_unit_file_is_one() -> None:
+    unit = configparser.ConfigParser(strict=False, interpolation=None)
+    unit.optionxform = str  # type: ignore[assignment,method-assign]
+    unit.read_string((Path(monitor.__file__).parent / "stillbrine.service").read_text())
+    assert unit.sections() == ["Unit", "Service", "Install"]
+    assert unit["Service"]["Type"] == "notify"
+    assert "%t" in unit["Service"]["ReadWritePaths"]  # of the control socket
 
 
 @pytest.mark.parametrize("number", [signal.SIGTERM, signal.SIGINT])

@@ -80,8 +80,9 @@ def speak(these: list[Wire], rate_hz: float, seconds: float) -> None:
 def heard_of(process: subprocess.Popen[bytes], told: list[tuple[float, dict[str, Any]]]) -> None:
     """Keep each finding with the moment it arrived, until the service ends."""
     assert process.stdout is not None
-    for line in process.stdout:
-        told.append((time.clock_gettime(time.CLOCK_BOOTTIME), json.loads(line)))
+    with process.stdout as lines:
+        for line in lines:
+            told.append((time.clock_gettime(time.CLOCK_BOOTTIME), json.loads(line)))
 
 
 def cpu_s(pid: int) -> float:
