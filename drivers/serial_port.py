@@ -211,12 +211,26 @@ def _keep(fd: int, path: str) -> None:
 
 def _why(path: str, number: int | None) -> str:
     if number in (errno.EAGAIN, errno.EBUSY):
-        return f"{path}: busy, another program reads it; close that one"
+        return f"{path}: busy, {_holder(path)} reads it; close that one"
     if number in (errno.EACCES, errno.EPERM):
         return f"{path}: permission refused; {_group_hint(path)}"
     if number in (errno.ENOENT, errno.ENODEV, errno.ENXIO):
         return f"{path}: not there; plug it in"
     return f"{path}: cannot be read as a serial port ({os.strerror(number or errno.EIO)})"
+
+
+def _holder(path: str) -> str:
+    """The program that has this device open, as far as this user may see."""
+    device = os.path.realpath(path)
+    for process in Path("/proc").glob("[0-9]*"):
+        try:
+            if process.name != str(os.getpid()) and any(
+                os.readlink(fd) == device for fd in (process / "fd").iterdir()
+            ):
+                return f"{(process / 'comm').read_text().strip()!a} (process {process.name})"
+        except OSError:
+            continue  # another user's, or just gone
+    return "another program"
 
 
 def _group_hint(path: str) -> str:

@@ -24,12 +24,24 @@ ASK_S = 2.0  # how often the service is asked which file it writes
 class Attached:
     """One probe of a running service."""
 
-    def __init__(self, bench: Path, probe: str, socket: Path, by: str | None, reads: bool) -> None:
+    def __init__(
+        self,
+        bench: Path,
+        probe: str,
+        socket: Path,
+        by: str | None,
+        state: Mapping[str, Any] | None,
+    ) -> None:
         self.probe = probe
-        self.reads = reads  # whether the service has this probe's port
+        self.state = state  # what the service said of this probe at first; None: not recorded
         self._bench = bench
         self._socket = socket
         self._by = by
+
+    @property
+    def reads(self) -> bool:
+        """Whether the service has this probe's port."""
+        return self.state is not None
 
     def order(self, kind: str, fields: Mapping[str, Any]) -> None:
         """Give an order about this probe. Raises Refusal."""
@@ -152,7 +164,7 @@ def attached(bench: Path, probe: str, by: str | None = None) -> Attached | None:
         return None
     if "probes" not in said:
         return None
-    return Attached(bench, probe, socket, by, probe in said["probes"])
+    return Attached(bench, probe, socket, by, said["probes"].get(probe))
 
 
 def _say(text: str, nl: bool = True) -> None:

@@ -4,16 +4,16 @@ from __future__ import annotations
 
 import os
 import shutil
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated
+from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
 from monitor.commands import Refusal, load_bench
 
 if TYPE_CHECKING:
-    from monitor.bench import Bench
+    from monitor.bench import Bench, Probe
 
 ROW_BYTES = 24
 NIGHT_S = 12 * 3600
@@ -51,7 +51,7 @@ def command(
 def _probes(bench: Bench, path: Path, listen: float) -> Iterator[tuple[bool, str]]:
     from monitor.calibration import CalibrationError
     from monitor.chain import calibration_of
-    from monitor.commands.listening import BAUD_HINT, heard
+    from monitor.commands.attached import attached
 
     if not bench.probe:
         yield False, "no probe is defined: add a [probe.NAME] table"
@@ -71,9 +71,27 @@ def _probes(bench: Bench, path: Path, listen: float) -> Iterator[tuple[bool, str
         if probe.port is None:
             yield False, f"probe {name}: no port; needed to run, not to replay"
         elif listen > 0:
-            said = heard(probe.port, probe.baud, listen)
-            good = "readings/s" in said and not said.startswith(BAUD_HINT)
+            service = attached(path, name)
+            told = service.state if service is not None and service.reads else None
+            good, said = _recorded(told) if told is not None else _heard(probe, listen)
             yield good, f"probe {name}: {probe.port}: {said}"
+
+
+def _heard(probe: Probe, listen: float) -> tuple[bool, str]:
+    from monitor.commands.listening import heard
+
+    assert probe.port is not None
+    said = heard(probe.port, probe.baud, listen, probe)
+    return "readings/s" in said, said
+
+
+def _recorded(told: Mapping[str, Any]) -> tuple[bool, str]:
+    """What the service that has the port says of it."""
+    if told.get("paused"):
+        return False, f"the running service has it, but cannot write: {told['paused']}"
+    if not told.get("linked"):
+        return False, "the running service waits for it: is it plugged in?"
+    return True, f"read by the service that runs, {told.get('rows')} readings so far"
 
 
 def _alarms(bench: Bench, path: Path) -> Iterator[tuple[bool, str]]:
