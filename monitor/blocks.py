@@ -58,6 +58,7 @@ class Second:
         "salinity_pct",
         "start",
         "stop",
+        "t",
         "temp_c",
         "temp_used_c",
         "zeros",
@@ -65,6 +66,7 @@ class Second:
 
     def __init__(self, k: int) -> None:
         self.k = k  # the second's number
+        self.t = k + 1.0  # when what it tells is known: its end
         self.block: Block | None = None  # rows start:stop of it are this second's
         self.start = self.stop = 0
         self.n_rows = 0  # rows, zeros and stray readings included
@@ -79,11 +81,6 @@ class Second:
         self.temp_used_c = NAN  # smoothed and held; NaN = none for ten minutes
         self.salinity_pct = NAN  # of mean_us at temp_used_c, where there is a calibration
         self.events: tuple[Event, ...] = ()
-
-    @property
-    def t(self) -> float:
-        """When what this second tells is known: its end."""
-        return float(self.k + 1)
 
     @property
     def time_s(self) -> Floats:
