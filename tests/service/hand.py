@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from datetime import datetime, timedelta
+from itertools import pairwise
 from pathlib import Path
 
 import numpy as np
@@ -18,6 +19,8 @@ from monitor.logbook.writer import LogWriter
 from monitor.recorder import Recorder
 from monitor.runs import carried_by_last_run, head_of
 from monitor.tanks import Seen, Together
+
+STRIDE = 8  # seconds that pass at once where nothing happens: nothing may depend on it
 
 
 class HandClock:
@@ -76,28 +79,39 @@ class HandBench:
 
     def on(self, seconds: float) -> None:
         """Time passes."""
-        for _ in range(int(seconds)):
-            self.second()
+        left = int(seconds)
+        while left > 0:
+            step = 1 if self.shut else min(left, STRIDE)
+            self._pass(step)
+            left -= step
 
-    def second(self) -> None:
-        """One second of everything."""
+    def _pass(self, seconds: int) -> None:
+        """So many seconds of everything; what came in is written and judged at their end."""
         day = self.clock.utc().date()
         first_s = self.clock.s
-        self.clock.s += 1.0
-        for name, probe in self.probes.items():
-            first, stop = int(first_s * probe.rate_hz), int(self.clock.s * probe.rate_hz)
-            readings = probe.read(first, stop)
-            period = readings.period_us
-            if name in self.rinsed:
-                water = np.full(len(period), self.rinsed[name])
-                period = np.round(probe.circuit.period_us(water, readings.temp_c), 1)
+        self.clock.s += seconds
+        for name in self.probes:
             if name not in self.shut:
-                lines = (f"{p:.10g},{c:.2f}\n" for p, c in zip(period, readings.temp_c))
-                self.recorders[name].on_bytes("".join(lines).encode(), self.clock.s - 0.25)
+                for i, lines in enumerate(self._lines(name, first_s, seconds)):
+                    self.recorders[name].on_bytes(lines.encode(), first_s + i + 0.75)
         if self.clock.utc().date() > day:
             self.each(lambda recorder: recorder.next_part())
         self.each(lambda recorder: recorder.tick())
         self.listen()
+
+    def _lines(self, name: str, first_s: float, seconds: int) -> list[str]:
+        """What a port sends, second by second."""
+        probe = self.probes[name]
+        edges = [int((first_s + i) * probe.rate_hz) for i in range(seconds + 1)]
+        readings = probe.read(edges[0], edges[-1])
+        period = readings.period_us
+        if name in self.rinsed:
+            water = np.full(len(period), self.rinsed[name])
+            period = np.round(probe.circuit.period_us(water, readings.temp_c), 1)
+        lines = [f"{p:.10g},{c:.2f}\n" for p, c in zip(period, readings.temp_c)]
+        return [
+            "".join(lines[start - edges[0] : stop - edges[0]]) for start, stop in pairwise(edges)
+        ]
 
     def listen(self) -> None:
         """Take what is sure now."""
