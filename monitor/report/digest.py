@@ -12,7 +12,7 @@ from monitor.findings import Finding
 from monitor.logbook.codec import utc_of
 from monitor.report.night import Lane, Night
 from monitor.report.told import told_orders
-from monitor.report.words import clock, length, pct, span
+from monitor.report.words import clock, length, pct, size, span
 from monitor.tanks import LOST
 
 NEXT_S = 1800.0  # a change so soon after a dose may have come before its rest
@@ -241,7 +241,7 @@ def _how_sure(lane: Lane) -> str:
     }
     said = ", ".join(f"{word} {_share(share)}" for word, share in shares.items() if share)
     doubts = sorted(m.u95_pct for m in lane.minutes if math.isfinite(m.u95_pct))
-    doubt = f"; typical doubt +- {doubts[len(doubts) // 2]:.2g} %" if doubts else ""
+    doubt = f"; typical doubt +- {size(doubts[len(doubts) // 2])} %" if doubts else ""
     return f"{lane.probe} in {lane.tank}: {said}{doubt}"
 
 

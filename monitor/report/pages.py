@@ -20,6 +20,7 @@ from monitor.report.words import length
 BARS = "▁▂▃▄▅▆▇█"
 WIDE, HIGH = 720, 120  # px of a tank's picture
 TEXT_MOST = 400
+JOINED = "\u00a0"  # a blank where no line ends
 
 
 def text(
@@ -33,18 +34,22 @@ def text(
     for section in told or sections(night):
         lines.append(section.title)
         for said in section.lines:
-            lines += textwrap.wrap(
-                printable(said, TEXT_MOST),
-                columns - 2,
-                initial_indent="  ",
-                subsequent_indent="    ",
-            )
+            lines += _wrapped(printable(said, TEXT_MOST), columns - 2)
         lines.append("")
     for lane in night.lanes:
         lines += [*_bars(lane, columns), ""]
     for caution in cautions.REPORT:
         lines += textwrap.wrap(caution, columns)
     return "\n".join(lines) + "\n"
+
+
+def _wrapped(said: str, columns: int) -> list[str]:
+    """Lines of this width; a figure stays with its doubt and its unit."""
+    kept = said.replace(" %", f"{JOINED}%").replace("+- ", f"+-{JOINED}")
+    lines = textwrap.wrap(
+        kept, columns, initial_indent="  ", subsequent_indent="    ", break_on_hyphens=False
+    )
+    return [line.replace(JOINED, " ") for line in lines]
 
 
 def _head(night: Night, title: str = "Report") -> list[str]:

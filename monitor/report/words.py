@@ -40,3 +40,8 @@ def pct(value: float | None, u95: float | None = None) -> str:
         return f"{value:.4f} %"
     digits = max(2, min(6, 1 - math.floor(math.log10(u95))))
     return f"{value:.{digits}f} +- {u95:.{digits}f} %"
+
+
+def size(value: float) -> str:
+    """A doubt with two digits that count, never as a power of ten."""
+    return f"{value:.{max(2, min(7, 1 - math.floor(math.log10(value))))}f}" if value > 0 else "0"
