@@ -45,7 +45,7 @@ def judged(
     """These logs, judged on many cores. Raises Refusal, LogError, CalibrationError."""
     from monitor.many import ManyError, judge_logs
 
-    bar = _Bar(f"judging {len(paths)} logs")
+    bar = Bar(f"judging {len(paths)} logs")
     try:
         return judge_logs(paths, given, jobs=jobs, dask=dask, keeper=keeper, progress=bar)
     except ManyError as wrong:
@@ -54,8 +54,11 @@ def judged(
         bar.clear()
 
 
-class _Bar:
-    """Drawn where standard error is a terminal, and not in the first second."""
+class Bar:
+    """Drawn where standard error is a terminal, and not in the first second.
+
+    Call it with how much is done, of how much; `clear` leaves the line as it was.
+    """
 
     def __init__(self, what: str) -> None:
         self._what = what

@@ -7,24 +7,28 @@ can be compared. Processor time is what counts where other work shares the machi
 from __future__ import annotations
 
 import argparse
-import importlib.util
 import json
 import os
 import platform
 import shutil
+import subprocess
+import sys
 import tempfile
-from collections.abc import Callable
 from dataclasses import asdict
-from importlib import import_module
 from pathlib import Path
 from typing import Any
 
 from tests.speed.logs import night
-from tests.speed.measure import Cost, alternated, line, run, shown, stillbrine
+from tests.speed.measure import ROOT, Cost, alternated, line, run, shown, stillbrine
 from tests.speed.stages import costs_us
 
 ROWS = (10_000, 100_000, 1_000_000, 4_320_000)
 LOGS = (1, 2, 4, 8, 16)
+LIVE = [
+    *(["-m", "tests.speed.ingest", ports, "2304", "20"] for ports in ("1", "4", "16")),
+    ["-m", "tests.screen.pace", "--probes", "16", "--rate", "100"],
+    ["-m", "tests.screen.pace", "--probes", "64", "--rate", "10"],
+]
 Figure = dict[str, Any]
 
 
@@ -32,7 +36,7 @@ class Bench:
     """Measures in one folder; `rounds` of each comparison."""
 
     def __init__(self, folder: Path, rounds: int, quick: bool) -> None:
-        self.folder, self.rounds = folder, rounds
+        self.folder, self.rounds, self.quick = folder, rounds, quick
         self.rows = ROWS[:3] if quick else ROWS
         self.logs = LOGS[:3] if quick else LOGS
         self.figures: list[Figure] = []
@@ -148,15 +152,17 @@ class Bench:
         for (what, args), cost in zip(commands.items(), costs):
             self.told(f"start: {what}", args, cost)
 
-    def by_others(self) -> None:
-        """What other modules of this package measure: `figures() -> list[dict]`."""
-        for name in ("ingest", "screen"):
-            if importlib.util.find_spec(f"tests.speed.{name}") is None:
-                continue
-            measured: Callable[[], list[Figure]] = import_module(f"tests.speed.{name}").figures
-            for figure in measured():
-                self.figures.append(figure)
-                print(", ".join(f"{key} {_short(value)}" for key, value in figure.items()))
+    def live(self) -> None:
+        """The service and the screen, by the commands that measure them."""
+        for args in LIVE[:1] if self.quick else LIVE:
+            ran = subprocess.run(
+                [sys.executable, *args], cwd=ROOT, capture_output=True, text=True, timeout=600
+            )
+            said = (ran.stdout if ran.returncode == 0 else ran.stderr).strip()
+            if ran.returncode:
+                said = f"failed: {said.splitlines()[-1] if said else ran.returncode}"
+            self.figures.append({"what": "live", "command": shown(args), "said": said})
+            print(f"{shown(args)}\n    {said}", flush=True)
 
 
 def _short(value: Any) -> str:
@@ -166,7 +172,7 @@ def _short(value: Any) -> str:
 def main() -> None:
     """Measure all, or what is named."""
     parts = ("against_the_script", "a_night", "stages", "growth_with_rows", "growth_with_logs",
-             "starts", "by_others")  # fmt: skip
+             "starts", "live")  # fmt: skip
     ask = argparse.ArgumentParser(description=__doc__, prog="python -m tests.speed")
     ask.add_argument("part", nargs="*", choices=[*parts, []], help="else all of them")
     ask.add_argument("--rounds", type=int, default=5)

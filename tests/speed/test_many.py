@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import io
 import re
 import signal
 import socket
@@ -14,6 +15,7 @@ from typing import Any
 import pytest
 
 from monitor.commands import load_bench
+from monitor.commands.many import Bar
 from monitor.findings import line
 from monitor.many import judge_logs
 from monitor.replay import replay
@@ -171,3 +173,27 @@ def test_dask_says_the_same_though_a_worker_is_killed(
     assert said[0] == said[1]
     assert len(said[0]) > 20
     assert [p.told for p in by_dask] == [p.told for p in alone]
+
+
+class Terminal(io.StringIO):
+    """Standard error, where somebody looks."""
+
+    def isatty(self) -> bool:
+        return True
+
+
+@pytest.mark.parametrize("terminal", [True, False])
+@pytest.mark.parametrize("waited_s", [0.5, 2.0])
+def test_a_bar_for_what_takes_long_on_a_terminal(
+    monkeypatch: pytest.MonkeyPatch, terminal: bool, waited_s: float
+) -> None:
+    now_s = [100.0]
+    stream = Terminal() if terminal else io.StringIO()
+    monkeypatch.setattr("sys.stderr", stream)
+    monkeypatch.setattr("time.monotonic", lambda: now_s[0])
+    bar = Bar("judging 4 logs")
+    now_s[0] += waited_s
+    bar(250, 1000)
+    bar.clear()
+    shown = "\rjudging 4 logs [########----------------------]  25%\r\x1b[K"
+    assert stream.getvalue() == (shown if terminal and waited_s > 1.0 else "")
