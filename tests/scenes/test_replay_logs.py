@@ -85,3 +85,37 @@ def test_a_dose_told_late_closes_the_question_about_its_step() -> None:
     asked = [f for f in found if f["finding"] == "notice"]
     assert [f["what"] for f in asked] == ["unrecorded-dose", "unrecorded-dose"]
     assert [f["to_t"] is None for f in asked] == [True, False]
+
+
+def test_a_working_day_is_told_as_it_was() -> None:
+    """Judged by its own settings, as it was live; the bench file was edited meanwhile."""
+    logs = [str(path) for path in sorted(LOGS.glob("working-day-01.*.log.gz"))]
+    found = [f for batch in replay(open_logs(logs, None)) for f in batch]
+    truth = json.loads((LOGS / "working-day-01.happened.json").read_text())["happened"]
+
+    def at(what: str, **more: Any) -> list[float]:
+        return [e["t"] for e in truth if e["what"] == what and more.items() <= e.items()]
+
+    def told(kind: str, what: str | None = None) -> list[dict[str, Any]]:
+        return [f for f in found if f["finding"] == kind and f.get("what") == what]
+
+    assert told("limit") == []
+    standing = {(f["probe"], f["from_t"]): f for f in told("fault")}
+    assert all(f.get("withdrawn") for f in standing.values())
+    (asleep,) = at("asleep")
+    assert {f["from_t"] for f in told("unwatched")} == {asleep}
+    verdicts = {f["dose_t"]: f["verdict"] for f in told("rest") if f["dose_t"]}
+    well_recorded = at("dose", recorded=1)
+    assert [verdicts[t] for t in well_recorded] == ["agrees", "agrees"]
+    (unrecorded,) = told("notice", "unrecorded-dose")
+    assert unrecorded["value"] == pytest.approx(150.0, rel=0.2)
+    assert at("dose", recorded=0) == [pytest.approx(unrecorded["from_t"], abs=30)]
+    twice = told("notice", "entered-twice")
+    assert at("dose", recorded=2) == [pytest.approx(twice[0]["from_t"], abs=30)]
+    assert [f["to_t"] is None for f in twice] == [True, False]
+    (lift,) = told("notice", "lift")
+    assert at("wipe", marked=False) == [pytest.approx(lift["from_t"], abs=15)]
+    swaps = [f["t"] for f in told("notice", "probes-swapped") if f["to_t"] is None]
+    exchanged = at("plugs exchanged")
+    assert all(0 < t - began < 180 for t, began in zip(swaps, exchanged, strict=True))
+    assert len(swaps) == 2

@@ -139,6 +139,12 @@ def test_belief_is_lost_only_where_there_was_cause(day: Day) -> None:
             assert any(t <= f["t"] < t + 180 for t in causes), f
 
 
+def test_another_probe_is_doubted_as_soon_as_it_is_asked_about(day: Day) -> None:
+    doubted = [(f["probe"], f["t"]) for f in said(day, "belief", belief="doubtful")]
+    for f in said(day, "notice", what="other-probe", to_t=None):
+        assert any(p == f["probe"] and 0 <= t - f["t"] <= 2 for p, t in doubted)
+
+
 def test_a_replay_of_the_four_logs_says_the_same_record_for_record(day: Day) -> None:
     assert replayed(logs(day)) == [line(f) for f in day.bench.said]
 
