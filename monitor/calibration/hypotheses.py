@@ -32,9 +32,7 @@ class Hypotheses(NamedTuple):
 
 def hypotheses_of(rows: Rows, older_scatter: Sequence[float] | None) -> Hypotheses:
     """Every size of scatter with none, and with each solution and repeated row, left out."""
-    # np.unique would load numpy.ma, 10 ms of each start
-    salinities = sorted(set(rows.salinity_pct.tolist()))
-    solutions = [np.flatnonzero(rows.salinity_pct == salinity) for salinity in salinities]
+    solutions = [np.flatnonzero(rows.salinity_pct == s) for s in np.unique(rows.salinity_pct)]
     groups: list[tuple[int, ...]] = []
     if len(solutions) >= FEWEST_TO_DOUBT:
         groups = [tuple(same.tolist()) for same in solutions]

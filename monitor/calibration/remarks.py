@@ -94,7 +94,7 @@ def of_fit(
         lines.append(
             f"lack of fit: the levels miss the model by more than repeats differ (F, p {p:.2g})"
         )
-    solutions = len(set(rows.salinity_pct.tolist()))
+    solutions = len(np.unique(rows.salinity_pct))
     if solutions < 4:
         lines.append(f"only {solutions} solutions: the doubt is wide and none of them is checked")
     missing = sum(1 for s in standards if s.temp_c is None)
