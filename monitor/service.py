@@ -10,7 +10,7 @@ from __future__ import annotations
 import asyncio
 import secrets
 import traceback
-from collections.abc import Callable, Coroutine, Iterator, Mapping, Sequence
+from collections.abc import Callable, Coroutine, Iterator, Sequence
 from contextlib import contextmanager
 from datetime import date, datetime
 from functools import partial
@@ -18,12 +18,13 @@ from pathlib import Path
 from typing import Any
 
 from drivers.line import Decoder
-from drivers.serial_port import PortError, SerialPort
+from drivers.serial_port import PortError
 from monitor import bench as bench_file
+from monitor import desk
 from monitor.alarms import AlarmError
 from monitor.bells import Bells
 from monitor.bench import Bench
-from monitor.calibration import CalibrationError, fit
+from monitor.calibration import CalibrationError
 from monitor.clock import Clock
 from monitor.control import Answer, ControlServer
 from monitor.findings import Finding
@@ -32,8 +33,8 @@ from monitor.housekeeping import Housekeeping
 from monitor.logbook.codec import utc_of, utc_text
 from monitor.logbook.writer import LogWriteError, LogWriter
 from monitor.mqtt import Publisher
-from monitor.orders import Order, OrderError, parse
 from monitor.places import HeldError, Lock, private_folder, socket_path
+from monitor.ports import Ports
 from monitor.recorder import Head, Past, Recorder
 from monitor.runs import carried_by_last_run, head_of
 from monitor.supervisor import notify, watchdog_s
@@ -44,7 +45,6 @@ SYNC_S = 1.5
 ASLEEP_S = 2.0
 STALLED_S = 5.0  # of the host: as long without a turn, rows may have been missed
 CLOCK_STEP_S = 1.0
-SILENCE_MOST_S = 86_400.0
 
 
 class ServiceError(RuntimeError):
@@ -80,7 +80,7 @@ class Service:
         self.telling.hooks.append(self.publisher.take)
         self.housekeeping = Housekeeping(folder, clock, self.bells.trouble, say)
         self._say = say
-        self._ports: dict[str, asyncio.Task[None]] = {}
+        self._ports = Ports(clock, say, self._fault)
         self._joining: list[asyncio.Task[None]] = []
         self._days: dict[str, date] = {}
         self._seen = (clock.now_s(), clock.awake_s(), self.started)
@@ -100,7 +100,7 @@ class Service:
                 notify("STOPPING=1")
             finally:
                 await control.close()
-                await _ended([*around, *self._ports.values(), *self._joining])
+                await _ended([*around, *self._ports.close_all(), *self._joining])
                 await self.bells.close()
                 await self.publisher.close()
                 for probe in [*self.recorders]:
@@ -132,7 +132,7 @@ class Service:
         self.publisher.hang(self.bench)
         for recorder in self.recorders.values():
             for what, until_utc in recorder.silences.items():
-                self._silence(what, until_utc)
+                self.silence(what, until_utc)
         for probe in self.bench.probe:
             self._open_port(probe)
 
@@ -246,42 +246,8 @@ class Service:
                 fields = {"before": utc_text(before[2]), "after": utc_text(now[2])}
                 recorder.event("clock", {**fields, "slept_s": round(max(slept, 0.0), 3)})
 
-    # Ports
-
-    def _open_port(self, probe: str, after: asyncio.Task[None] | None = None) -> None:
-        settings, recorder = self.bench.probe[probe], self.recorders[probe]
-        assert settings.port is not None
-        port = SerialPort(
-            settings.port,
-            settings.baud,
-            on_bytes=recorder.on_bytes,
-            on_up=lambda: recorder.link(True),
-            on_down=lambda why: self._down(probe, why),
-            clock=self.clock,
-            reset_on_open=settings.reset_on_open,
-        )
-        self._ports[probe] = asyncio.create_task(self._read(port, after))
-
-    async def _read(self, port: SerialPort, after: asyncio.Task[None] | None) -> None:
-        """Keep a port open once the one before has been given back."""
-        if after is not None:
-            await asyncio.wait([after])
-        while True:
-            try:
-                await port.run()
-            except Exception as wrong:
-                self._fault(wrong)
-                await asyncio.sleep(1.0)
-
-    def _down(self, probe: str, why: str) -> None:
-        self._say(f"{probe}: {why}")
-        if (recorder := self.recorders.get(probe)) is not None:
-            recorder.link(False)
-
-    def _close_port(self, probe: str) -> asyncio.Task[None]:
-        task = self._ports.pop(probe)
-        task.cancel()
-        return task
+    def _open_port(self, probe: str) -> None:
+        self._ports.open(probe, self.bench.probe[probe], self.recorders[probe])
 
     def _end(self, probe: str) -> None:
         try:
@@ -325,7 +291,7 @@ class Service:
         old, self.bench = self.bench, new
         for probe in [*self.recorders]:
             if probe not in new.probe:
-                self._close_port(probe)
+                self._ports.close(probe)
                 self._end(probe)
         for probe in [*self.recorders]:
             if heads[probe] != self.recorders[probe].settings:
@@ -343,7 +309,7 @@ class Service:
             recorder.decoder = Decoder(now)
         if (was.port, was.baud, was.reset_on_open) != (now.port, now.baud, now.reset_on_open):
             recorder.link(False, "moved")
-            self._open_port(probe, after=self._close_port(probe))
+            self._open_port(probe)
 
     async def _join(self, probes: list[str]) -> None:
         """Begin a run of probes that were not there before."""
@@ -355,72 +321,13 @@ class Service:
             if probe in self.recorders:
                 self._open_port(probe)
 
-    # Orders
-
-    async def _ordered(self, message: dict[str, Any]) -> Answer:
-        """Carry out an order; the answer is given once it is in the log."""
-        if message.get("order") == "status":
-            return {"ok": True, "probes": {name: self.status(name) for name in self.recorders}}
-        if message.get("order") == "reload":
-            why = self.reload()
-            return {"ok": False, "why": f"bench file not taken: {why}"} if why else {"ok": True}
-        try:
-            order = parse(message, self.bench)
-            if any(self.recorders[probe].paused for probe in order.probes):
-                raise OrderError("nothing can be written to the log now; order not taken")
-            if order.kind == "silence":
-                self._check_silence(str(order.fields["until_utc"]))
-            written = [self._write(probe, order) for probe in order.probes]
-        except (OrderError, CalibrationError) as wrong:
-            return {"ok": False, "why": str(wrong)}
-        except KeyError as wrong:
-            return {"ok": False, "why": f"probe {wrong} is not recorded now"}
-        if not all(written):
-            return {"ok": False, "why": "nothing can be written to the log now; order not taken"}
-        if order.kind == "silence":
-            self._silence(str(order.fields["what"]), str(order.fields["until_utc"]))
-        return {"ok": True, "time_s": self.recorders[order.probes[0]].run_s - order.ago_s}
-
-    def _write(self, probe: str, order: Order) -> bool:
-        recorder = self.recorders[probe]
-        fields = order.fields
-        if order.kind == "calibration":
-            fields = self._chosen(probe, str(fields.get("set", "")))
-        when = None if order.ago_s == 0 else recorder.run_s - order.ago_s
-        return recorder.event(order.kind, fields, when)
-
-    def _check_silence(self, until_utc: str) -> None:
-        """Nothing is silenced without a limit in time. Raises OrderError."""
-        left_s = (utc_of(until_utc) - self.clock.utc()).total_seconds()
-        if not 0.0 < left_s <= SILENCE_MOST_S:
-            raise OrderError(f"until_utc: {until_utc}; expected a time within the next 24 h")
-
-    def _silence(self, what: str, until_utc: str) -> None:
+    def silence(self, what: str, until_utc: str) -> None:
+        """No alarm about this until then."""
         left_s = (utc_of(until_utc) - self.clock.utc()).total_seconds()
         self.bells.silence(what, self.clock.now_s() + left_s)
 
-    def _chosen(self, probe: str, named: str) -> Mapping[str, Any]:
-        """The calibration that a set of standards gives. Raises OrderError, CalibrationError."""
-        settings = self.bench.probe[probe]
-        standards = [each for each in settings.standard if each.set == named]
-        if not standards:
-            sets = ", ".join(sorted({each.set or "unnamed" for each in settings.standard}))
-            raise OrderError(f"set {named[:64]!r} is not in the bench file; expected one of {sets}")
-        return fit(standards, settings.medium, settings.tick_us).as_event()
-
-    def status(self, probe: str) -> dict[str, Any]:
-        """What a watcher may ask about one probe besides its log."""
-        recorder = self.recorders[probe]
-        return {
-            "path": str(recorder.writer.path),
-            "rows": recorder.rows,
-            "linked": recorder.linked,
-            "paused": recorder.paused,
-            "broken": recorder.broken,
-            "unwritten": recorder.unwritten,
-            "rejected": recorder.decoder.counts.total(),
-            "cannot_warn": self.bells.failures,
-        }
+    async def _ordered(self, message: dict[str, Any]) -> Answer:
+        return desk.carry_out(self, message)
 
 
 async def _ended(tasks: Sequence[asyncio.Task[Any]]) -> None:
