@@ -13,6 +13,7 @@ from monitor.blocks import NAN, Event, Second
 from monitor.chain import Judges
 from monitor.dosing.ledger import Dose
 from monitor.findings import Finding
+from monitor.logbook.codec import utc_of
 from monitor.many import JudgedProbe, Keeper, judge_logs
 from monitor.replay import replay
 
@@ -20,6 +21,7 @@ TOLD = (
     *("dose", "strike", "water", "out", "back", "note", "check", "compare", "silence", "gap"),
     "answer",
 )
+LASTING = ("fault", "trend", "limit", "unwatched", "notice")  # said again when they end
 SETTINGS = ("bench", "calibration")  # stand at the head of each part: told where they differ
 
 
@@ -171,10 +173,10 @@ def gather(
     ends = [probe.closed_t for probe in probes]
     last = max(ends) if until is None else (until - zero).total_seconds()
     night = Night(zero, max(first, 0.0), min(last, max(ends)), lanes, [])
-    night.findings = [f for f in findings if _touches(f, night)]
+    night.findings = list(_of(night, findings))
     for lane in night.lanes:
         lane.minutes = [m for m in lane.minutes if night.from_t < m.t <= night.to_t + 60]
-        lane.events = [e for e in lane.events if night.from_t <= e.time_s <= night.to_t]
+        lane.events = [e for e in lane.events if _counts(e, night)]
     return night
 
 
@@ -194,5 +196,24 @@ def _lane(probe: JudgedProbe) -> Lane:
     return joined
 
 
-def _touches(finding: Finding, night: Night) -> bool:
-    return night.from_t <= float(finding["t"]) <= night.to_t
+def _of(night: Night, findings: Sequence[Finding]) -> Iterator[Finding]:
+    """What was said in the night, and before it what lasted into it."""
+    before: dict[tuple[Any, ...], Finding] = {}
+    for f in findings:
+        if f["t"] >= night.from_t:
+            break
+        if f["finding"] in LASTING:
+            name = f.get("fault") or f.get("which") or f.get("what")
+            key = f["finding"], f.get("probe"), f.get("tank"), name, f["from_t"]
+            before.pop(key, None)
+            if f["to_t"] is None:
+                before[key] = f
+    yield from before.values()
+    yield from (f for f in findings if night.from_t <= f["t"] <= night.to_t)
+
+
+def _counts(event: Event, night: Night) -> bool:
+    """Whether an event belongs to the night: met in it, or a silence that is still in force."""
+    if event.kind == "silence" and event.time_s < night.from_t:
+        return utc_of(event.fields["until_utc"]) > night.when(night.from_t)
+    return night.from_t <= event.time_s <= night.to_t
