@@ -37,7 +37,9 @@ class Trust(Protocol):
 
     usable: bool
     out: bool
-    belief: str
+
+    @property
+    def belief(self) -> str: ...
 
 
 class Settling(Protocol):
