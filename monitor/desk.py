@@ -7,17 +7,31 @@ be written to some of them only is refused and may be given again: its id acts o
 from __future__ import annotations
 
 from collections.abc import Mapping
-from typing import TYPE_CHECKING, Any
+from typing import Any, Protocol
 
+from monitor.bells import Bells
+from monitor.bench import Bench
 from monitor.calibration import CalibrationError, fit
+from monitor.clock import Clock
 from monitor.control import Answer
 from monitor.logbook.codec import utc_of
 from monitor.orders import Order, OrderError, parse
-
-if TYPE_CHECKING:
-    from monitor.service import Service
+from monitor.recorder import Recorder
 
 SILENCE_MOST_S = 86_400.0
+
+
+class Service(Protocol):
+    """What orders act on."""
+
+    bench: Bench
+    clock: Clock
+    bells: Bells
+    recorders: dict[str, Recorder]
+
+    def reload(self) -> str: ...
+
+    def silence(self, what: str, until_utc: str) -> None: ...
 
 
 def carry_out(service: Service, message: dict[str, Any]) -> Answer:
@@ -25,8 +39,8 @@ def carry_out(service: Service, message: dict[str, Any]) -> Answer:
     if message.get("order") == "status":
         return {"ok": True, "probes": {name: _status(service, name) for name in service.recorders}}
     if message.get("order") == "reload":
-        service.reload()
-        return {"ok": True}
+        why = service.reload()
+        return {"ok": False, "why": why} if why else {"ok": True}
     try:
         order = parse(message, service.bench)
         _check(service, order)

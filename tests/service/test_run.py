@@ -112,6 +112,8 @@ def test_sighup_takes_a_good_bench_file_and_refuses_a_bad_one(
         bench.write('[nonsense]\nx = "\x1b[31m"\n'.replace("\x1b", "\\u001b"))
         run.process.send_signal(signal.SIGHUP)
         until(lambda: "not taken, the old one stays in force: bench.toml: nonsense" in run.said)
+        with pytest.raises(ControlError, match="nonsense"):
+            run.order("reload", {})
         assert len(events(run.log(), "bench")) == 1
         bench.text = bench.text.replace("rest_band_pct = 0.001", "rest_band_pct = 0.002")
         bench.write("")
