@@ -40,7 +40,7 @@ def carry_out(service: Service, message: dict[str, Any]) -> Answer:
         return {"ok": True, "probes": {name: _status(service, name) for name in service.recorders}}
     if message.get("order") == "reload":
         why = service.reload()
-        return {"ok": False, "why": why} if why else {"ok": True}
+        return {"ok": False, "why": f"bench file not taken: {why}"} if why else {"ok": True}
     try:
         order = parse(message, service.bench)
         _check(service, order)
