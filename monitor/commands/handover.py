@@ -41,7 +41,7 @@ def command(
         raise Refusal(str(wrong)) from None
     told, due = handover(night), _due(bench)
     columns = min(shutil.get_terminal_size().columns, 100)
-    sys.stdout.write(text(night, columns, [*told, *due], "Hand-over"))
+    sys.stdout.write(text(night, columns, [*told[:-1], *due, told[-1]], "Hand-over"))
 
 
 def _due(bench: Path) -> list[Section]:

@@ -80,7 +80,8 @@ def _bars(lane: Lane, columns: int) -> Iterable[str]:
     low, high = min(known), max(known)
     yield f"{name}: {low:.4f} to {high:.4f} %"
     bars = marks = ""
-    for dealt in _columns(lane, columns - 2):
+    whole_min = round((lane.minutes[-1].t - lane.minutes[0].t) / 60.0) + 1
+    for dealt in _columns(lane, min(columns - 2, whole_min)):
         values = [m.mean_pct for m in dealt if math.isfinite(m.mean_pct)]
         if values:
             share = (sum(values) / len(values) - low) / (high - low) if high > low else 0.5

@@ -10,7 +10,7 @@ import pytest
 
 from monitor.report.digest import handover, sections
 from monitor.report.night import Night, gather
-from monitor.report.pages import page, table, text
+from monitor.report.pages import BARS, page, table, text
 from monitor.report.words import length, pct, size
 
 LOGS = Path(__file__).parents[2] / "replay_logs"
@@ -85,6 +85,13 @@ def test_no_line_is_wider_than_the_terminal_and_no_figure_loses_its_unit(
         assert len(line) <= columns
         assert not re.match(r"\s*%", line)
         assert not re.search(r"\+-\s*$", line)
+
+
+def test_a_short_stretch_has_no_holes_in_its_bars() -> None:
+    short = gather(DAY, since=BEGAN, until=BEGAN + timedelta(minutes=17))
+    bars = [line.strip() for line in text(short, 80).splitlines() if set(line) & set(BARS)]
+    assert len(bars) == 2
+    assert all(" " not in each and 15 < len(each) < 20 for each in bars)
 
 
 def test_the_page_and_the_table_tell_the_same(night: Night) -> None:

@@ -8,7 +8,7 @@ from typing import Any
 
 import pytest
 
-from monitor.blocks import Second
+from monitor.blocks import Event, Second
 from monitor.findings import Finding
 from monitor.tanks import Differ, Seen, Swaps, Together, Unwatched, Watched
 
@@ -34,6 +34,19 @@ def test_a_tank_is_unwatched_after_ten_minutes_and_watched_again_at_once() -> No
         (901.0, 100.0, 901.0),
     ]
     assert "p1 (no-pulses)" in found[0]["why"]
+
+
+def test_a_link_that_is_lost_is_why_nobody_watched() -> None:
+    for why, said in (("asleep", "the machine slept"), ("unplugged", "unplugged")):
+        one = watched([(0, 100)], 100)
+        for k in range(100, 800):
+            second = Second(k)
+            if k == 100:
+                second.events = (Event(99.9, "gap", {"link": "lost", "why": why}),)
+            trust: Any = SimpleNamespace(usable=False, out=False, why="fine", belief="believed")
+            one.step(second, trust, SimpleNamespace(moving=False))  # type: ignore[arg-type]
+        (found,) = Unwatched("t1").advance(800.0, [("p1", one, 0.0)])
+        assert found["why"] == f"no usable reading for 10 min: p1 ({said})"
 
 
 @pytest.mark.parametrize("steps", [[1000], [50, 699, 700, 701, 1000], list(range(1, 1001))])
