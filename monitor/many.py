@@ -167,7 +167,7 @@ def _here(tasks: Sequence[Task], sizes: Sequence[int], jobs: int) -> Iterator[tu
         yield from ((i, judge(task)) for i, task in enumerate(tasks))
         return
     spawn = multiprocessing.get_context("spawn")
-    with ProcessPoolExecutor(jobs, spawn, _deaf) as pool:
+    with ProcessPoolExecutor(jobs, spawn, _mortal) as pool:
         order = sorted(range(len(tasks)), key=lambda i: -sizes[i])
         waiting = {pool.submit(judge, tasks[i]): i for i in order}
         try:
@@ -183,9 +183,9 @@ def _here(tasks: Sequence[Task], sizes: Sequence[int], jobs: int) -> Iterator[tu
             raise
 
 
-def _deaf() -> None:
-    """An interrupt at the keyboard is for the one who asked."""
-    signal.signal(signal.SIGINT, signal.SIG_IGN)
+def _mortal() -> None:
+    """An interrupt at the keyboard ends a worker at once and without a word."""
+    signal.signal(signal.SIGINT, signal.SIG_DFL)
 
 
 def _of_dask(tasks: Sequence[Task], address: str) -> Iterator[tuple[int, Judged]]:

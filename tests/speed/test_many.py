@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import io
+import multiprocessing
 import re
 import signal
 import socket
@@ -17,7 +18,7 @@ import pytest
 from monitor.commands import load_bench
 from monitor.commands.many import Bar
 from monitor.findings import line
-from monitor.many import judge_logs
+from monitor.many import ManyError, judge_logs
 from monitor.replay import replay
 from tests.scenes.scene import STARTED
 from tests.speed.logs import night
@@ -173,6 +174,18 @@ def test_dask_says_the_same_though_a_worker_is_killed(
     assert said[0] == said[1]
     assert len(said[0]) > 20
     assert [p.told for p in by_dask] == [p.told for p in alone]
+
+
+def test_a_worker_that_is_killed_is_one_line(nights: Path) -> None:
+    def kill_all(done: int, total: int) -> None:
+        assert done < total
+        for child in multiprocessing.active_children():
+            child.kill()
+
+    paths = [str(path) for path in sorted(nights.glob("*.log"))]
+    bench = load_bench(nights / "bench.toml")
+    with pytest.raises(ManyError, match="a worker process was killed.*--jobs 1"):
+        judge_logs(paths, bench, jobs=2, progress=kill_all)
 
 
 class Terminal(io.StringIO):
