@@ -184,7 +184,7 @@ def test_a_worker_that_is_killed_is_one_line(nights: Path) -> None:
 
     paths = [str(path) for path in sorted(nights.glob("*.log"))]
     bench = load_bench(nights / "bench.toml")
-    with pytest.raises(ManyError, match="a worker process was killed.*--jobs 1"):
+    with pytest.raises(ManyError, match=r"a worker process was killed.*--jobs 1"):
         judge_logs(paths, bench, jobs=2, progress=kill_all)
 
 
