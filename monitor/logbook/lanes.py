@@ -23,7 +23,8 @@ from monitor.blocks import NAN, Floats
 ROW = re.compile(
     rb"(\d{1,9}(?:\.\d{1,6})?),(\d{1,12}(?:\.\d{1,9})?)(?:,(-?\d{1,3}(?:\.\d{1,6})?)?)?"
 )
-FEW = 12  # lines below which the slow lane is the faster one
+FEW = 16  # lines of one shape below which the slow lane is the faster one
+_FEW_MIXED = 64  # and of several
 _DIGITS_MOST = 15  # of one figure: below 2^53
 _TILE = 1 << 17  # bytes that a template covers
 _TRIAL = 1024  # lines tried first: where shapes change often, more would be in vain
@@ -149,7 +150,7 @@ def _mixed(text: bytes, commas: int) -> tuple[np.ndarray, Floats]:
     left = np.ones(len(ends), bool)
     slowly: list[int] = []
     for _ in range(_ROUNDS):
-        if left.sum() < FEW:
+        if left.sum() < _FEW_MIXED:
             break
         same = np.flatnonzero(left & (sizes == np.bincount(sizes[left]).argmax()))
         lead = int(same[0])
