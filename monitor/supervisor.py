@@ -1,4 +1,4 @@
-"""What the service tells the program that started it: sd_notify, ten lines over a datagram socket.
+"""What the service tells the system it runs on: sd_notify, and that it shall not sleep.
 
 Source: sd_notify(3) of systemd: NOTIFY_SOCKET names an AF_UNIX datagram socket, "@" first for the
 abstract namespace; WATCHDOG_USEC is the watchdog's period.
@@ -7,7 +7,14 @@ abstract namespace; WATCHDOG_USEC is the watchdog's period.
 from __future__ import annotations
 
 import os
+import shutil
 import socket
+import subprocess
+from collections.abc import Iterator
+from contextlib import contextmanager
+
+OURS = ("NOTIFY_SOCKET", "WATCHDOG_USEC", "WATCHDOG_PID")
+GO_S = 2.0  # for the inhibitor to end
 
 
 def notify(state: str) -> bool:
@@ -30,3 +37,37 @@ def watchdog_s() -> float | None:
     period = os.environ.get("WATCHDOG_USEC", "")
     mine = os.environ.get("WATCHDOG_PID", str(os.getpid())) == str(os.getpid())
     return int(period) / 2e6 if period.isdigit() and int(period) > 0 and mine else None
+
+
+@contextmanager
+def kept_awake() -> Iterator[bool]:
+    """Ask that the machine does not go to sleep while the block lasts; whether that was possible.
+
+    However this process ends, its end of the pipe closes and the machine may sleep again.
+    Source: systemd-inhibit(1).
+    """
+    program = shutil.which("systemd-inhibit")
+    if program is None:
+        yield False
+        return
+    asked = ["--what=sleep:idle", "--who=stillbrine", "--why=readings are recorded"]
+    # it must not speak to our supervisor in our name
+    around = {key: value for key, value in os.environ.items() if key not in OURS}
+    holder = subprocess.Popen(
+        [program, *asked, "--mode=block", "cat"],
+        stdin=subprocess.PIPE,
+        stdout=subprocess.DEVNULL,
+        stderr=subprocess.DEVNULL,
+        env=around,
+        start_new_session=True,  # the terminal's Ctrl-C is for the service
+    )
+    try:
+        yield True
+    finally:
+        assert holder.stdin is not None
+        holder.stdin.close()
+        try:
+            holder.wait(GO_S)
+        except subprocess.TimeoutExpired:
+            holder.kill()
+            holder.wait()

@@ -48,8 +48,9 @@ def serve(bench: Path, folder: Path, clock: Clock) -> None:
     from monitor import cautions
     from monitor.outlet import Outlet
     from monitor.service import Service
+    from monitor.supervisor import kept_awake
 
-    with Outlet() as outlet:
+    with Outlet() as outlet, kept_awake():
         service = Service(bench, load_bench(bench), folder, clock, outlet.finding, outlet.message)
         for caution in cautions.RUN:
             outlet.message(caution)
