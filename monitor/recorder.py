@@ -27,7 +27,7 @@ from monitor.logbook.writer import LogWriteError, LogWriter
 
 ALIVE_S = 600.0
 CARRY_S = 600.0
-CARRY_ROWS = 300_000  # or after so many rows: a restart judges again what came since
+CARRY_ROWS = 100_000  # or after so many rows: a restart judges again what came since
 SILENT_EACH_S = 60.0
 SILENT_THEN_S = 10.0
 REJECTED_S = 60.0
