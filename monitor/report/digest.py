@@ -52,7 +52,12 @@ def lasting(night: Night, kind: str) -> list[Finding]:
         if f["finding"] == kind:
             name = f.get("fault") or f.get("which") or f.get("what") or ""
             last[f.get("probe") or f.get("tank"), name, f.get("from_t")] = f
-    return list(last.values())
+    swapped = {f["from_t"] for f in last.values() if f.get("what") == "probes-swapped"}
+    return [
+        f
+        for f in last.values()
+        if not (f.get("what") == "other-probe" and f["from_t"] in swapped)  # one question is enough
+    ]
 
 
 def _open(night: Night) -> Iterable[str]:

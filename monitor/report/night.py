@@ -175,6 +175,7 @@ def gather(
     night = Night(zero, max(first, 0.0), min(last, max(ends)), lanes, [])
     night.findings = list(_of(night, findings))
     for lane in night.lanes:
+        lane.minutes = list(_without_lifts(lane, findings))
         lane.minutes = [m for m in lane.minutes if night.from_t < m.t <= night.to_t + 60]
         lane.events = [e for e in lane.events if _counts(e, night)]
     return night
@@ -194,6 +195,22 @@ def _lane(probe: JudgedProbe) -> Lane:
     joined.dropped = dict(probe.told.dropped)
     joined.messages = probe.told.messages
     return joined
+
+
+def _without_lifts(lane: Lane, findings: Sequence[Finding]) -> Iterator[Minute]:
+    """The minutes, with those in which the probe turned out to have been lifted as out."""
+    lifts = [
+        (f["from_t"], f["to_t"])
+        for f in findings
+        if f.get("what") == "lift" and f["probe"] == lane.probe
+    ]
+    for minute in lane.minutes:
+        lifted = any(minute.t > from_t and minute.t - 60.0 < to_t for from_t, to_t in lifts)
+        yield _out(minute) if lifted else minute
+
+
+def _out(minute: Minute) -> Minute:
+    return minute._replace(mean_pct=NAN, low_pct=NAN, high_pct=NAN, u95_pct=NAN, belief="out")
 
 
 def _of(night: Night, findings: Sequence[Finding]) -> Iterator[Finding]:

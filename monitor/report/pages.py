@@ -166,7 +166,8 @@ def _figure(night: Night, lane: Lane) -> str:
             )
     return (
         f'<figure><svg viewBox="0 0 {WIDE} {HIGH}" role="img" aria-label="{name}">'
-        f"{''.join(shapes)}</svg><figcaption>{name}: {low:.4f} to {high:.4f} %;"
+        f"{''.join(shapes)}</svg><figcaption>{name}: {low:.4f} to {high:.4f} %, from"
+        f" {night.when(night.from_t):%H:%M} to {night.when(night.to_t):%H:%M};"
         " dashed: doses</figcaption></figure>"
     )
 

@@ -70,6 +70,18 @@ def test_what_both_probes_share_is_said_once(night: Night) -> None:
     assert "(40 min)" in asleep
 
 
+def test_exchanged_plugs_are_one_question_each_time(night: Night) -> None:
+    said = lines(night, "Questions")
+    assert sum("plugs exchanged?" in each for each in said) == 2
+    assert not any("another probe?" in each for each in said)
+
+
+def test_rinse_water_of_a_lift_is_not_shown_as_the_tanks(night: Night) -> None:
+    (p1,) = [lane for lane in night.lanes if lane.probe == "p1"]
+    assert min(m.low_pct for m in p1.minutes if m.low_pct == m.low_pct) > 0.07
+    assert [m.belief for m in p1.minutes if 25_200 < m.t <= 25_260] == ["out"]
+
+
 def test_an_open_question_from_before_is_still_open_in_the_morning(morning: Night) -> None:
     assert morning.from_t == 8 * 3600
     assert any("148 mL of saline" in said for said in lines(morning, "Needs you now"))
