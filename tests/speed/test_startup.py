@@ -37,7 +37,8 @@ def loaded(*args: str) -> set[str]:
 
 @pytest.mark.parametrize("name", COMMANDS)
 def test_the_list_of_commands_says_what_each_says_itself(name: str) -> None:
-    text = import_module(f"monitor.commands.{name}").command.__doc__
+    module = import_module(f"monitor.commands.{name}")
+    text = module.command.__doc__ if hasattr(module, "command") else module.app.info.help
     assert text.splitlines()[0] == COMMANDS[name]
 
 
