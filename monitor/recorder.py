@@ -63,11 +63,13 @@ class Recorder:
         say: Callable[[str], None],
         trouble: Callable[[str, str | None], None] = _nothing,
         stalled: Callable[[], None] = lambda: None,
+        waiting: Callable[[], None] = lambda: None,
     ) -> None:
         """`zero_s`: the clock's reading at the run's `started`.
 
         `tell` gets findings, `say` messages, `trouble` what keeps this from its work and why
-        (None: over). `stalled` is called before bytes are taken that came after a long pause.
+        (None: over). `stalled` is called before bytes are taken that came after a long pause,
+        `waiting` when readings begin to wait for a flush.
         """
         self.probe = probe
         self.decoder = decoder
@@ -86,6 +88,7 @@ class Recorder:
         self._say = say
         self._trouble = trouble
         self._stalled = stalled
+        self._call_flush = waiting
         self._waiting: list[str] = []
         self._owed = ""  # of a part's head: to be written before anything else
         self._last_t = 0.0  # of the newest line
@@ -127,6 +130,8 @@ class Recorder:
             return
         t = max(now_s - self.zero_s, self._last_t)
         stamp, before = f"{t:.3f}", self._last_t
+        if not self._waiting:
+            self._call_flush()
         self._last_t = self._last_row_t = float(stamp)
         self._waiting += [codec.row_line(stamp, *reading) for reading in readings]
         self.rows += len(readings)

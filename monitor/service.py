@@ -81,6 +81,7 @@ class Service:
         self.housekeeping = Housekeeping(folder, clock, self.bells.trouble, say)
         self._say = say
         self._ports = Ports(clock, say, self._fault)
+        self._flushing: asyncio.TimerHandle | None = None
         self._joining: list[asyncio.Task[None]] = []
         self._days: dict[str, date] = {}
         self._seen = (clock.now_s(), clock.awake_s(), self.started)
@@ -172,6 +173,7 @@ class Service:
             self._say,
             partial(self.bells.trouble, probe),
             self._watch_clocks,
+            self._flush_soon,
         )
         recorder.begin(head, past)
         self.recorders[probe] = recorder
@@ -189,7 +191,6 @@ class Service:
         fast = self.clock.speed
         tick_s = 1.0 / fast if fast < 20 else 0.05
         return [
-            self._every(FLUSH_S, self._flush),
             self._every(tick_s, self._tick),
             self._every(1.0, self.bells.tick),
             self._syncs(),
@@ -200,10 +201,14 @@ class Service:
     async def _every(self, every_s: float, act: Callable[[], None]) -> None:
         while True:
             await asyncio.sleep(every_s)
-            try:
-                act()
-            except Exception as wrong:
-                self._fault(wrong)
+            self._guarded(act)
+
+    def _guarded(self, act: Callable[[], None]) -> None:
+        """What fails for one may not keep it from the others."""
+        try:
+            act()
+        except Exception as wrong:
+            self._fault(wrong)
 
     async def _syncs(self) -> None:
         while True:
@@ -217,18 +222,24 @@ class Service:
             notify("WATCHDOG=1")
             await asyncio.sleep(every_s)
 
+    def _flush_soon(self) -> None:
+        if self._flushing is None:
+            self._flushing = asyncio.get_running_loop().call_later(FLUSH_S, self._flush)
+
     def _flush(self) -> None:
+        self._flushing = None
         self._watch_clocks()
         for recorder in self.recorders.values():
-            recorder.flush()
+            self._guarded(recorder.flush)
 
     def _tick(self) -> None:
         """Once a second of the host: time passes, days end."""
+        self._watch_clocks()
         today = self.clock.utc().date()
         for probe, recorder in self.recorders.items():
             if today > self._days[probe] and recorder.next_part():
                 self._days[probe] = today
-            recorder.tick()
+            self._guarded(recorder.tick)
         self.telling.tell_of_all(self.bench, self.recorders, self.zero_s)
 
     def _watch_clocks(self) -> None:
