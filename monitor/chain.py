@@ -118,6 +118,7 @@ class Chain:
         self.watch = watch
         self.judges: Judges | None = None
         self.refused: list[str] = []  # settings in the log that do not check, a line each
+        self.has_settings = given is not None
         self.unjudged = 0  # seconds with rows before there were settings
         self.closed_t = float("-inf")  # all before this has been judged
         self.watched = Watched()
@@ -131,6 +132,8 @@ class Chain:
         """Findings that this item of the log leads to."""
         if isinstance(item, Block):
             self._head = False
+        elif item.kind == "bench":
+            self.has_settings = True
         elif item.kind == "carried" and self._head:
             self._take(item.fields)
         seconds = self._gatherer.feed(item)

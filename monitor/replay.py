@@ -103,7 +103,7 @@ class ProbeReplay:
         chain = self.follower.chain
         self.told.dropped += self.follower.dropped
         self.told.messages += chain.refused
-        if chain.judges is None:
+        if not chain.has_settings:
             raise LogError(
                 f"log of {self.probe}: no bench event in it; expected --bench BENCH beside it"
             )
