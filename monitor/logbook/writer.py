@@ -17,7 +17,6 @@ from pathlib import Path
 
 from monitor.logbook.codec import Header, file_name
 
-
 ROOM = 262_144  # bytes that must be free again before a recording goes on: the gap, a head, rows
 
 
