@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import time
 from datetime import UTC, datetime, timedelta
+from typing import Protocol
 
 
 class HostClock:
@@ -50,4 +51,14 @@ class FastClock:
         return self._start + timedelta(seconds=self.now_s())
 
 
-Clock = HostClock | FastClock
+class Clock(Protocol):
+    """What the service asks of a clock."""
+
+    @property
+    def speed(self) -> float: ...
+
+    def now_s(self) -> float: ...
+
+    def awake_s(self) -> float: ...
+
+    def utc(self) -> datetime: ...

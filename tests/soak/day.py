@@ -22,6 +22,7 @@ from drivers.virtual_tank.probe import Circuit, Climate, Probe
 from drivers.virtual_tank.tank import Tank
 from monitor.bench import BenchError, parse
 from monitor.findings import line
+from monitor.runs import head_of
 from tests.service.hand import HandBench, HandClock
 
 START = datetime(2026, 3, 14, 14, 0, tzinfo=UTC)
@@ -73,7 +74,12 @@ class Day:
         self.tanks[tank].pour(self.bench.clock.s, 0.15, ml, open_s)
         self.note("dose", tank=tank, ml=ml, recorded=len(ids))
         for id_ in ids:
-            fields = {"tank": tank, "liquid": "saline", "volume_ml": ml, "open_s": open_s}
+            fields: dict[str, Any] = {
+                "tank": tank,
+                "liquid": "saline",
+                "volume_ml": ml,
+                "open_s": open_s,
+            }
             self.tell(f"p{tank[1]}", "dose", **fields, id=id_)
             self.bench.on(20)
 
@@ -113,8 +119,6 @@ class Day:
         except BenchError:
             self.note("bench edited wrongly")
             return
-        from monitor.service import head_of
-
         self.note("bench edited")
         for name, recorder in self.bench.recorders.items():
             settings = head_of(new, name)

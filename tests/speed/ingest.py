@@ -168,7 +168,7 @@ def _dose(run: Run, ports: int) -> None:
 def main() -> None:
     """Measure and print."""
     given = [float(word) for word in sys.argv[1:4]]
-    ports, rate_hz, seconds = [*given, *(16, 2304.0, 40.0)[len(given) :]]
+    ports, rate_hz, seconds = [*given, *[16.0, 2304.0, 40.0][len(given) :]]
     print(json.dumps(measure(int(ports), rate_hz, seconds)))
 
 

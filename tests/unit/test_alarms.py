@@ -138,7 +138,7 @@ async def test_a_flood_is_told_in_few_messages(monkeypatch: pytest.MonkeyPatch) 
     real = asyncio.sleep
     told = Told()
     async with alarm(told) as line:
-        monkeypatch.setattr(alarms.asyncio, "sleep", sleep)
+        monkeypatch.setattr("asyncio.sleep", sleep)
         for n in range(1000):
             line.take({**HUM, "fault": f"f{n}"})
             if n % 10 == 0:
@@ -146,7 +146,7 @@ async def test_a_flood_is_told_in_few_messages(monkeypatch: pytest.MonkeyPatch) 
                     await real(0)
         for _ in range(100):
             await real(0)
-        monkeypatch.setattr(alarms.asyncio, "sleep", real)
+        monkeypatch.setattr("asyncio.sleep", real)
     assert told.now_s >= alarms.BURST_S
     assert len(told.batches) <= alarms.BURST * (2 + told.now_s / alarms.BURST_S)
     assert len(told.findings) >= 500

@@ -90,4 +90,4 @@ def test_the_latest_set_of_standards_is_in_force() -> None:
 
 def test_a_bench_is_frozen() -> None:
     with pytest.raises(ValueError, match="frozen"):
-        Bench().probe = {}  # type: ignore[misc]
+        Bench().probe = {}

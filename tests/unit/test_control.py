@@ -146,9 +146,9 @@ async def test_another_user_is_not_answered(
 ) -> None:
     async with served(tmp_path) as (path, handler):
         mine = os.getuid()
-        monkeypatch.setattr(control.os, "getuid", lambda: 4711)
+        monkeypatch.setattr("os.getuid", lambda: 4711)
         if mine == 0:  # root may always
-            monkeypatch.setattr(control.struct, "unpack", lambda *_: (1, 4712, 1))
+            monkeypatch.setattr("struct.unpack", lambda *_: (1, 4712, 1))
         async with connected(path) as line:
             try:
                 assert await say(line, b'{"id": "a", "order": "dose"}') is None

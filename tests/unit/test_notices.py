@@ -61,8 +61,9 @@ class Play:
             if shown is not None:
                 self.settling.shown_pct = shown(self.k)
             changes = self.ledger.step(second)
-            judges: Any = (self.trust, self.settling)
-            found += self.notices.step(second, changes, *judges, self.ledger)
+            trust: Any = self.trust
+            settling: Any = self.settling
+            found += self.notices.step(second, changes, trust, settling, self.ledger)
             self.k += 1
         self.said += found
         return found
@@ -258,7 +259,11 @@ def test_a_step_of_a_probe_in_doubt_is_not_offered(belief: str) -> None:
 def test_a_step_that_a_person_explained_is_not_offered(kind: str) -> None:
     play = Play()
     play.on(390)
-    fields = {"gap": {"link": "back"}, "water": {"tank": "t1", "in_ml": 50.0}}.get(kind, {})
+    told: dict[str, dict[str, Any]] = {
+        "gap": {"link": "back"},
+        "water": {"tank": "t1", "in_ml": 50.0},
+    }
+    fields = told.get(kind, {})
     play.on(10, Event(390.0, kind, fields))
     play.on(40, shown=lambda k: 0.105)
     play.rest(None, 0.1, 400.0)
