@@ -36,7 +36,12 @@ class BenchError(ValueError):
 
 class _Table(BaseModel):
     model_config = ConfigDict(
-        extra="forbid", frozen=True, strict=True, allow_inf_nan=False, populate_by_name=True
+        extra="forbid",
+        frozen=True,
+        strict=True,
+        allow_inf_nan=False,
+        populate_by_name=True,
+        defer_build=True,
     )
 
 

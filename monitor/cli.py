@@ -82,6 +82,8 @@ def main() -> None:
     """Run the command line; the entry point of `stillbrine`."""
     # Nothing here has matrices worth a thread; to start a pool of them takes half of NumPy's start
     os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+    # No plugin of pydantic is wanted; to look for one reads every installed package's metadata
+    os.environ.setdefault("PYDANTIC_DISABLE_PLUGINS", "1")
     if len(sys.argv) == 1:
         sys.argv.append("--help")
     try:
