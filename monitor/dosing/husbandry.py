@@ -39,7 +39,7 @@ SUGGESTIONS = (
         "fresh water",
         "high",
         0.05,
-        "0.5 ppt bounds fresh water: same course (2011)",
+        "0.5 ppt bounds fresh water: same source (2011)",
         "medium",
     ),
     Suggestion(

@@ -9,7 +9,7 @@ from __future__ import annotations
 import random
 from collections.abc import Iterator
 from dataclasses import dataclass, field
-from datetime import UTC, datetime, timedelta
+from datetime import UTC, datetime
 from pathlib import Path
 
 import numpy as np
@@ -27,26 +27,9 @@ from monitor.logbook.writer import LogWriter
 from monitor.recorder import Recorder
 from monitor.replay import open_logs, replay
 from monitor.runs import carried_by_last_run, head_of
+from tests.service.hand import HandClock
 
 RATE_HZ = 4.0
-
-
-class HandClock:
-    """A clock that the test moves."""
-
-    speed = 1.0
-
-    def __init__(self, start: datetime) -> None:
-        self.start = start
-        self.s = 0.0
-
-    def now_s(self) -> float:
-        return self.s
-
-    awake_s = now_s
-
-    def utc(self) -> datetime:
-        return self.start + timedelta(seconds=self.s)
 
 
 @dataclass
