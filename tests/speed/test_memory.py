@@ -7,7 +7,7 @@ from pathlib import Path
 from tests.speed.logs import night
 from tests.speed.measure import run, stillbrine
 
-ALLOWED_MIB = 3.0  # the allocator's own wobble; rows alone would be 10 MiB, seconds 60
+ALLOWED_MIB = 6.0  # the allocator takes about 3 until it levels off; rows kept would be 15
 
 
 def peak_mib(log: Path, hours: float, doses: int) -> float:
